@@ -1,0 +1,150 @@
+"""How often does a process at a given sigma level miss its limits, and back: normal tails, deep and exact.
+
+Notation: z = T/σ is the sigma level as if centred, T the half-width of the limits, k = |mean − mid-spec|/T the
+fixed offset, s the drift allowance in σ, p the defect probability per opportunity. All functions take scalars or
+arrays that broadcast together.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+from scipy.special import log_ndtr, ndtri_exp
+
+Array = NDArray[np.float64]
+
+LOG_ROOT_TWO_PI = 0.5 * np.log(2.0 * np.pi)
+NEWTON_STEPS = 40
+
+
+def _arguments(z: ArrayLike, k: ArrayLike, shift: ArrayLike, sides: ArrayLike) -> tuple[Array, Array, Array, Any]:
+    """Return the near and far tail arguments, the two slopes' factor k, and where the far tail counts."""
+    z, k, shift = (np.asarray(x, dtype=float) for x in (z, k, shift))
+    near = shift - z * (1.0 - k)
+    far = -(z * (1.0 + k) + shift)
+    return near, far, k, np.asarray(sides) == 2
+
+
+def log_defects(z: ArrayLike, k: ArrayLike = 0.0, shift: ArrayLike = 0.0, sides: ArrayLike = 2) -> Any:
+    """Return ln p, the logarithm of the defect probability per opportunity.
+
+    Model: p = Φ(−(z(1−k) − s)) + Φ(−(z(1+k) + s)) with two limits, the first term with one.
+
+    Parameters
+    ----------
+    z : array_like [σ]
+        Sigma level T/σ, as if centred.
+    k : array_like [1]
+        Offset of the mean from mid-spec as a share of T, 0 ≤ k < 1.
+    shift : array_like [σ]
+        Drift allowance.
+    sides : array_like of 1 or 2
+        Number of limits.
+
+    Returns
+    -------
+    array or float
+        ln p; its absolute error is below 1e-12 for z up to 37 and it does not underflow beyond.
+
+    >>> round(float(np.exp(log_defects(3.0))) * 1e6, 3)
+    2699.796
+    """
+    near, far, _, two = _arguments(z, k, shift, sides)
+    one_tail = log_ndtr(near)
+    return np.where(two, np.logaddexp(one_tail, log_ndtr(far)), one_tail)[()]
+
+
+def defects(z: ArrayLike, k: ArrayLike = 0.0, shift: ArrayLike = 0.0, sides: ArrayLike = 2) -> Any:
+    """Return p, the defect probability per opportunity (see `log_defects`).
+
+    Relative error below 1e-12 while p is a normal number (z up to about 37); 0 beyond, where `log_defects` goes on.
+
+    >>> round(float(defects(6.0, shift=1.5)) * 1e6, 1)
+    3.4
+    """
+    return np.exp(log_defects(z, k, shift, sides))[()]
+
+
+def log_slopes(z: ArrayLike, k: ArrayLike, shift: ArrayLike, sides: ArrayLike) -> tuple[Any, Any, Any]:
+    """Return ln p with p'/p and p''/p, the relative first and second derivatives in z.
+
+    Parameters as in `log_defects`; all three stay finite where p itself underflows.
+    """
+    near, far, k, two = _arguments(z, k, shift, sides)
+    log_p = log_defects(z, k, shift, sides)
+    near_density = np.exp(-0.5 * near**2 - LOG_ROOT_TWO_PI - log_p)
+    far_density = np.where(two, np.exp(-0.5 * far**2 - LOG_ROOT_TWO_PI - log_p), 0.0)
+    first = -(1.0 - k) * near_density - (1.0 + k) * far_density
+    second = -((1.0 - k) ** 2) * near * near_density - (1.0 + k) ** 2 * far * far_density
+    return log_p, first[()], second[()]
+
+
+def sigma_from_log_defects(log_p: ArrayLike, k: ArrayLike = 0.0, shift: ArrayLike = 0.0, sides: ArrayLike = 2) -> Any:
+    """Return the sigma level z whose defect probability is exp(log_p), the inverse of `log_defects`.
+
+    Parameters
+    ----------
+    log_p : array_like
+        ln p, below 0 (with two limits p cannot exceed 1, reached at z = 0).
+    k, shift, sides
+        As in `log_defects`.
+
+    Returns
+    -------
+    array or float [σ]
+        z; p → z → p comes back within 1e-10 relative. Negative where one tail alone exceeds Φ(s).
+
+    Notes
+    -----
+    One limit: closed form. Two limits: p/2 ≤ near tail ≤ p brackets z; Newton on ln p from the upper end, where
+    ln p is concave, falls monotonically to the root.
+
+    >>> round(float(sigma_from_log_defects(np.log(3.4e-6), shift=1.5, sides=1)), 3)
+    6.0
+    """
+    log_p, k, shift, sides = np.broadcast_arrays(*(np.asarray(x, dtype=float) for x in (log_p, k, shift, sides)))
+    low = (shift - ndtri_exp(log_p)) / (1.0 - k)
+    two = sides == 2
+    if not np.any(two):
+        return low[()]
+    low = np.where(two, np.maximum(low, 0.0), low)
+    high = np.maximum((shift - ndtri_exp(log_p - np.log(2.0))) / (1.0 - k), low)
+    z = np.where(two, high, low)
+    for _ in range(NEWTON_STEPS):
+        value, slope, _ = log_slopes(z, k, shift, sides)
+        moved = np.where(two, np.clip(z - (value - log_p) / slope, low, high), low)
+        if np.all(np.abs(moved - z) <= 2e-16 * np.maximum(np.abs(z), 1.0)):
+            break
+        z = moved
+    return z[()]
+
+
+def log_good(log_p: ArrayLike) -> Any:
+    """Return ln(1 − p) from ln p without cancellation.
+
+    >>> float(log_good(np.log(1e-18)))
+    -1e-18
+    """
+    log_p = np.minimum(np.asarray(log_p, dtype=float), 0.0)
+    with np.errstate(divide="ignore"):
+        return np.where(log_p < -0.6931, np.log1p(-np.exp(log_p)), np.log(-np.expm1(log_p)))[()]
+
+
+def study_index(z: ArrayLike, k: ArrayLike) -> Any:
+    """Return Cpk = z(1 − k)/3, as measured on parts, without the drift allowance.
+
+    >>> float(study_index(4.0, 0.25))
+    1.0
+    """
+    return (np.asarray(z, dtype=float) * (1.0 - np.asarray(k, dtype=float)) / 3.0)[()]
+
+
+def index_after_shift(z: ArrayLike, k: ArrayLike, shift: ArrayLike) -> Any:
+    """Return (z(1 − k) − s)/3, what is left of the study index after the drift allowance.
+
+    >>> float(index_after_shift(6.0, 0.0, 1.5))
+    1.5
+    """
+    return study_index(z, k) - np.asarray(shift, dtype=float) / 3.0
