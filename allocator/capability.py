@@ -19,7 +19,7 @@ LOG_ROOT_TWO_PI = 0.5 * np.log(2.0 * np.pi)
 NEWTON_STEPS = 40
 
 
-def _arguments(z: ArrayLike, k: ArrayLike, shift: ArrayLike, sides: ArrayLike) -> tuple[Array, Array, Array, Any]:
+def _arguments(z: ArrayLike, k: ArrayLike, shift: ArrayLike, sides: ArrayLike) -> tuple[Array, Array, Array, Array]:
     """Return the near and far tail arguments, the two slopes' factor k, and where the far tail counts."""
     z, k, shift = (np.asarray(x, dtype=float) for x in (z, k, shift))
     near = shift - z * (1.0 - k)
@@ -104,32 +104,33 @@ def sigma_from_log_defects(log_p: ArrayLike, k: ArrayLike = 0.0, shift: ArrayLik
     >>> round(float(sigma_from_log_defects(np.log(3.4e-6), shift=1.5, sides=1)), 3)
     6.0
     """
-    log_p, k, shift, sides = np.broadcast_arrays(*(np.asarray(x, dtype=float) for x in (log_p, k, shift, sides)))
-    low = (shift - ndtri_exp(log_p)) / (1.0 - k)
-    two = sides == 2
+    target, offset, drift, limits = np.broadcast_arrays(*(np.asarray(x, dtype=float) for x in (log_p, k, shift, sides)))
+    low = (drift - ndtri_exp(target)) / (1.0 - offset)
+    two = limits == 2
     if not np.any(two):
         return low[()]
     low = np.where(two, np.maximum(low, 0.0), low)
-    high = np.maximum((shift - ndtri_exp(log_p - np.log(2.0))) / (1.0 - k), low)
+    high = np.maximum((drift - ndtri_exp(target - np.log(2.0))) / (1.0 - offset), low)
     z = np.where(two, high, low)
     for _ in range(NEWTON_STEPS):
-        value, slope, _ = log_slopes(z, k, shift, sides)
-        moved = np.where(two, np.clip(z - (value - log_p) / slope, low, high), low)
-        if np.all(np.abs(moved - z) <= 2e-16 * np.maximum(np.abs(z), 1.0)):
-            break
+        value, slope, _ = log_slopes(z, offset, drift, limits)
+        moved = np.where(two, np.clip(z - (value - target) / slope, low, high), low)
+        settled = np.all(np.abs(moved - z) <= 1e-13 * np.maximum(np.abs(z), 1.0))
         z = moved
+        if settled:
+            break
     return z[()]
 
 
 def log_good(log_p: ArrayLike) -> Any:
     """Return ln(1 − p) from ln p without cancellation.
 
-    >>> float(log_good(np.log(1e-18)))
-    -1e-18
+    >>> float(log_good(np.log(0.25))) == float(np.log(0.75))
+    True
     """
     log_p = np.minimum(np.asarray(log_p, dtype=float), 0.0)
     with np.errstate(divide="ignore"):
-        return np.where(log_p < -0.6931, np.log1p(-np.exp(log_p)), np.log(-np.expm1(log_p)))[()]
+        return np.where(log_p < -np.log(2.0), np.log1p(-np.exp(log_p)), np.log(-np.expm1(log_p)))[()]
 
 
 def study_index(z: ArrayLike, k: ArrayLike) -> Any:

@@ -1,0 +1,173 @@
+"""Results as JSON: full precision, null for what is not known, the keys that the README lists."""
+
+from __future__ import annotations
+
+import json
+import math
+from collections.abc import Sequence
+from typing import Any
+
+from allocator.report.blocks import MONEY_KINDS
+from allocator.report.words import YIELDS, nines_of
+from allocator.results import (
+    BestReachable,
+    Caution,
+    Check,
+    Money,
+    Nines,
+    NinesPoint,
+    Plan,
+    StepTarget,
+    StepToday,
+    Today,
+    TodayLine,
+    Understood,
+    Yields,
+)
+
+LEVEL_KEYS = ("sigma_level", "shift", "k", "cp", "cpk", "cpk_after_shift", "dpmo", "ppm")
+FULL_LEVEL_KEYS = (*LEVEL_KEYS[:3], "sides", *LEVEL_KEYS[3:], "dpu")
+
+
+def to_json(content: dict[str, Any]) -> str:
+    return json.dumps(_finite(content), indent=2, allow_nan=False) + "\n"
+
+
+def _finite(value: Any) -> Any:
+    """The same content with None for NaN and the infinities, which JSON does not know."""
+    if isinstance(value, dict):
+        return {key: _finite(item) for key, item in value.items()}
+    if isinstance(value, list | tuple):
+        return [_finite(item) for item in value]
+    return None if isinstance(value, float) and not math.isfinite(value) else value
+
+
+def _pick(record: object, keys: Sequence[str]) -> dict[str, Any]:
+    return {key: getattr(record, key) for key in keys}
+
+
+def _yields(yields: Yields | None) -> dict[str, Any]:
+    """The three yields and, apart, their losses (1 - yield loses its digits where the yield is very good)."""
+    if yields is None:
+        return {**dict.fromkeys(YIELDS), "loss": dict.fromkeys(YIELDS)}
+    losses = (yields.rolled_loss, yields.final_loss, yields.shipped_loss)
+    return {**_pick(yields, YIELDS), "loss": dict(zip(YIELDS, losses, strict=True))}
+
+
+def _cost(money: Money | None) -> dict[str, Any] | None:
+    return None if money is None else _pick(money, ("total", *MONEY_KINDS))
+
+
+def _today_line(line: TodayLine) -> dict[str, Any]:
+    cost = {"annual_cost": _cost(line.money), "annual_cost_reason": line.money_reason}
+    lots = [{"lot": size, "bad": bad} for size, bad in line.bad_per_lot]
+    return {**_yields(line.yields), **cost, "dpu": line.dpu, "bad_per_lot": lots}
+
+
+def _best(best: BestReachable | None) -> dict[str, Any] | None:
+    return None if best is None else {"yield": best.yield_, "loss": best.loss, "total": best.total}
+
+
+def _cautions(cautions: Sequence[Caution]) -> list[dict[str, Any]]:
+    return [_pick(caution, ("code", "steps", "reason", "fix")) for caution in cautions]
+
+
+def plan_json(plan: Plan) -> dict[str, Any]:
+    """The plan; at an unreachable target the same keys, with `reached` false and the best reachable plan."""
+    rules = ("rule", "source", "total", "yield_reached", "loss_reached", "meets_target", "saving", "broken")
+    return {
+        **_pick(plan, ("title", "currency", "question", "reached")),
+        "split_yield": plan.split,
+        "targets": plan.targets,
+        **_yields(plan.yields),
+        "annual_cost": _cost(plan.money),
+        **_pick(plan, ("cost_per_unit", "dpu")),
+        "today": _today_line(plan.today),
+        "capital": plan.capital,
+        "purchases": [_pick(bought, ("name", "price", "per_year_cost")) for bought in plan.purchases],
+        **_proof(plan),
+        **_pick(plan, ("price_of_defect_budget", "cost_of_next_nine", "assumed")),
+        "best_reachable": _best(plan.best_reachable),
+        "binding": [held.step for held in plan.binding],
+        "binding_reasons": [_pick(held, ("step", "reason")) for held in plan.binding],
+        "steps": [_step_target(step) for step in plan.steps],
+        "rules": [_pick(rule, rules) for rule in plan.rules],
+        "rules_note": plan.rules_note,
+        "cautions": _cautions(plan.cautions),
+    }
+
+
+def _proof(plan: Plan) -> dict[str, Any]:
+    keys = ("lower_bound", "gap", "method", "seconds")
+    return dict.fromkeys(keys) if plan.proof is None else _pick(plan.proof, keys)
+
+
+def _step_target(step: StepTarget) -> dict[str, Any]:
+    money = ("budget_share", "starts_per_year", "scrap", "improvement", "capital", "at_cap")
+    return {
+        **_pick(step, ("step", "supplier", "alternatives")),
+        **_pick(step.target, LEVEL_KEYS),
+        **_pick(step, money),
+    }
+
+
+def nines_json(nines: Nines) -> dict[str, Any]:
+    highest, optimum = nines.highest, None
+    if nines.optimum_total is not None:
+        optimum = {"yield": nines.optimum_yield, "loss": nines.optimum_loss, "total": nines.optimum_total}
+    return {
+        **_pick(nines, ("title", "currency")),
+        "split_yield": nines.split,
+        "today_nines": nines.today_nines,
+        "points": [_point(point) for point in nines.points],
+        "highest_reachable": None
+        if highest is None
+        else {
+            "nines": nines_of(highest.loss),
+            **(_best(highest) or {}),
+            "binding": [held.step for held in highest.binding],
+            "binding_reasons": [_pick(held, ("step", "reason")) for held in highest.binding],
+        },
+        "economic_optimum": optimum,
+        "assumed": nines.assumed,
+        "cautions": _cautions(nines.cautions),
+    }
+
+
+def _point(point: NinesPoint) -> dict[str, Any]:
+    return {
+        **_pick(point, ("label", "nines", "target_yield", "target_loss")),
+        "yield": point.yield_,
+        **_pick(point, ("loss", "total", "extra", "price_of_defect_budget", "changes", "gap")),
+    }
+
+
+def today_json(today: Today) -> dict[str, Any]:
+    return {
+        **_pick(today, ("title", "currency", "shipped_per_year", "targets")),
+        **_today_line(today.line),
+        "steps": [_step_today(step) for step in today.steps],
+        "assumed": today.assumed,
+        "cautions": _cautions(today.cautions),
+    }
+
+
+def _step_today(step: StepToday) -> dict[str, Any]:
+    shares = ("first_pass_yield", "starts_per_year", "scrap", "rework", "inspection", "defect_share", "money_share")
+    return {**_pick(step, ("step", "supplier")), **_pick(step.level, FULL_LEVEL_KEYS), **_pick(step, shares)}
+
+
+def check_json(check: Check) -> dict[str, Any]:
+    return {
+        "sound": True,
+        **_pick(check, ("title", "currency", "shipped_per_year", "file", "targets")),
+        "steps": [_understood(step) for step in check.steps],
+        "assumed": check.assumed,
+        "cautions": _cautions(check.cautions),
+    }
+
+
+def _understood(step: Understood) -> dict[str, Any]:
+    before = ("step", "supplier", "feeds", "items_per_unit", "opportunities", "given")
+    after = ("lost_when_scrapped", "net_cost_added", "ways", "improves", "inspection")
+    return {**_pick(step, before), **_pick(step.level, FULL_LEVEL_KEYS), **_pick(step, after)}

@@ -1,0 +1,218 @@
+"""The plan as text: what to buy and reach, for how much, and why that can be believed."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+
+from allocator.report import blocks, words
+from allocator.report.paper import LOG_WIDTH, Paper, columns
+from allocator.results import Plan, RuleOutcome, StepTarget
+
+
+def plan_text(plan: Plan, width: int = LOG_WIDTH) -> str:
+    """The whole sheet, from the answer in a sentence to the last word of caution."""
+    paper = Paper(width)
+    blocks.write_title(paper, plan.title, plan.shipped_per_year)
+    _write_answer(paper, plan)
+    if plan.yields is not None:
+        _write_tables(paper, plan)
+    _write_rules(paper, plan)
+    _write_next_nine(paper, plan)
+    _write_proof(paper, plan)
+    blocks.write_assumed(paper, plan.assumed)
+    blocks.write_cautions(paper, plan.cautions)
+    blocks.write_last_word(paper, [step.step for step in plan.steps if step.safety])
+    return paper.text()
+
+
+def _write_answer(paper: Paper, plan: Plan) -> None:
+    paper.heading(answer(plan))
+    if not plan.reached:
+        _write_out_of_reach(paper, plan)
+    if plan.capital is not None:
+        unit = words.money(plan.cost_per_unit)
+        dpu = f"{words.number(plan.dpu)} defects per unit (today {words.number(plan.today.dpu)})"
+        currency = words.clean(plan.currency)
+        paper.say(f"Capital {words.money(plan.capital)} {currency}; {unit} {currency} a shipped unit; {dpu}.")
+    blocks.write_money_reason(paper, plan.today)
+
+
+def answer(plan: Plan) -> str:
+    """The answer in one sentence, or for a target out of reach, that it is out of reach."""
+    wanted = words.targets_in_full(plan.targets, plan.target_losses, plan.split)
+    if not plan.reached:
+        return f"The target cannot be met: {wanted or 'what was asked'} is out of reach."
+    opening = {
+        "cheapest": f"For {wanted}",
+        "best yield": f"For the most {words.yield_name(plan.split)} that the money buys, {_reached(plan)}",
+        "optimum": f"No target is set; to run the line at the least cost, with a {words.yield_name(plan.split)} of "
+        f"{_reached(plan)}",
+    }.get(plan.question, f"For {wanted}")
+    return f"{opening}: {_actions(plan)}; it costs {_cost(plan)}."
+
+
+def _reached(plan: Plan) -> str:
+    if plan.yields is None:
+        return words.UNKNOWN
+    loss = getattr(plan.yields, plan.split.replace("_yield", "_loss"))
+    return words.yield_in_full(getattr(plan.yields, plan.split), loss)
+
+
+def _cost(plan: Plan) -> str:
+    now = None if plan.today.money is None else plan.today.money.total
+    total = None if plan.money is None else plan.money.total
+    return f"{words.per_year(total, plan.currency)} in all (today {words.money(now)})"
+
+
+def _actions(plan: Plan) -> str:
+    shared = [f"buy {words.quoted(bought.name)} (shared)" for bought in plan.purchases]
+    acts = shared + list(_step_actions(plan.steps))
+    return words.listed(acts, more="more changes (in the table)") if acts else "buy nothing and change nothing"
+
+
+def _step_actions(steps: tuple[StepTarget, ...]) -> Iterator[str]:
+    for step in steps:
+        at, level = words.quoted(step.step), words.fixed(step.target.sigma_level)
+        if step.alternatives:
+            names = words.listed([words.quoted(name) for name in step.alternatives], joint=" and ")
+            further = f" and improve it to {level} sigma" if step.law else ""
+            yield f"{'buy' if step.capital > 0.0 else 'take'} {names} at {at}{further}"
+        elif step.law:
+            yield f"raise {at} from {words.fixed(step.today.sigma_level)} to {level} sigma"
+
+
+def _write_out_of_reach(paper: Paper, plan: Plan) -> None:
+    if plan.yields is None:
+        paper.say("No choice at all keeps the floors and the limits.")
+    if plan.best_reachable is not None:
+        best = blocks.best_in_words(plan.best_reachable, plan.currency)
+        paper.say(f"The best reachable {words.yield_name(plan.split)} is {best}.")
+    if plan.binding:
+        paper.heading("What holds it out of reach")
+        blocks.write_binding(paper, plan.binding)
+    if plan.yields is not None:
+        paper.heading(f"The best reachable plan: {_actions(plan)}; it costs {_cost(plan)}. The tables show this plan.")
+
+
+def _write_tables(paper: Paper, plan: Plan) -> None:
+    blocks.write_yields(paper, plan.target_losses, [("plan", plan.yields), ("today", plan.today.yields)])
+    _write_steps(paper, plan)
+    _write_purchases(paper, plan)
+    blocks.write_money(paper, plan.currency, [("plan", plan.money), ("today", plan.today.money)])
+
+
+def _choice(step: StepTarget) -> str:
+    parts = [words.clean(name) for name in step.alternatives]
+    if step.law:
+        parts.append(f"improve ({words.clean(step.law)})")
+    return " + ".join(parts) or "as today"
+
+
+def _write_steps(paper: Paper, plan: Plan) -> None:
+    steps = plan.steps
+    paper.heading(f"Steps: what to choose (money in {words.clean(plan.currency)}/year)")
+    heads = columns(["step", "choice"], ["improve-\nment", "scrap", "share of\nbudget", "starts\nper year"])
+    rows = (
+        [step.step, _choice(step), words.money(step.improvement), words.money(step.scrap),
+         words.share(step.budget_share), words.number(step.starts_per_year)]
+        for step in steps
+    )  # fmt: skip
+    paper.table(heads, rows, len(steps))
+    paper.heading("Steps: levels to reach")
+    figures = (
+        "sigma\ntoday",
+        "sigma\ntarget",
+        "Cpk\ntoday",
+        "Cpk\ntarget",
+        "Cpk after\nshift",
+        "ppm\ntoday",
+        "ppm\ntarget",
+    )
+    paper.table(columns(["step"], figures), (_level_row(step) for step in steps), len(steps))
+    paper.say(blocks.INDEX_NOTE)
+    _write_limits(paper, plan)
+
+
+def _level_row(step: StepTarget) -> list[str]:
+    now, then = step.today, step.target
+    return [
+        step.step, words.fixed(now.sigma_level), words.fixed(then.sigma_level), words.fixed(now.cpk),
+        words.fixed(then.cpk), words.fixed(then.cpk_after_shift), words.number(now.ppm), words.number(then.ppm),
+    ]  # fmt: skip
+
+
+def _write_limits(paper: Paper, plan: Plan) -> None:
+    """Floors with where the plan stands, then the steps that sit at what was quoted or demonstrated."""
+    said = []
+    for step in plan.steps:
+        if step.floor is not None:
+            stands = "the floor binds" if step.floor_binds else "the floor does not bind"
+            level = f"Cpk {words.fixed(step.target.cpk)}, {words.fixed(step.target.sigma_level)} sigma"
+            said.append(f"{words.quoted(step.step)}: floor {words.clean(step.floor)}; plan {level}; {stands}")
+    for step in plan.steps:
+        if step.at_cap:
+            cap = words.clean(step.cap or "the most that was quoted or demonstrated")
+            said.append(f"{words.quoted(step.step)} sits at its cap: {cap}")
+    if said:
+        paper.heading("Floors and caps")
+        paper.bullets(said)
+
+
+def _write_purchases(paper: Paper, plan: Plan) -> None:
+    if plan.purchases:
+        paper.heading(f"Shared purchases ({words.clean(plan.currency)})")
+        rows = [[item.name, words.money(item.price), words.money(item.per_year_cost)] for item in plan.purchases]
+        paper.table(columns(["purchase"], ["price", "cost per year"]), rows, len(rows))
+
+
+def _write_rules(paper: Paper, plan: Plan) -> None:
+    if not plan.rules:
+        if plan.rules_note:
+            paper.heading(f"Simpler rules: {plan.rules_note}")
+        return
+    paper.heading(f"What simpler rules would cost ({words.clean(plan.currency)}/year)")
+    heads = columns(["rule"], ["total", words.yield_name(plan.split), "target", "the plan\nsaves"])
+    paper.table(heads, [_rule_row(rule) for rule in plan.rules], len(plan.rules))
+    broken = [f"{rule.rule} breaks: {words.listed(rule.broken, joint='; ')}" for rule in plan.rules if rule.broken]
+    if broken:
+        paper.bullets(broken)
+
+
+def _rule_row(rule: RuleOutcome) -> list[str]:
+    reached = words.percent(rule.yield_reached, rule.loss_reached)
+    saving = "-" if rule.saving is None else words.money(rule.saving)
+    return [rule.rule, words.money(rule.total), reached, "met" if rule.meets_target else "missed", saving]
+
+
+def _write_next_nine(paper: Paper, plan: Plan) -> None:
+    if not (plan.reached and plan.targets):
+        return
+    if plan.cost_of_next_nine is None:
+        said = "out of reach with what the scenario offers."
+    else:
+        loss = plan.target_losses.get(plan.split, 0.0)
+        step = f" (from {words.ppm(loss)} to {words.ppm(loss / 10.0)} ppm)" if loss > 0.0 else ""
+        said = f"{words.per_year(plan.cost_of_next_nine, plan.currency)} on top{step}."
+    paper.heading(f"The next nine of {words.yield_name(plan.split)}, ten times fewer losses: {said}")
+    if plan.best_reachable is not None:
+        paper.say(f"Highest reachable: {blocks.best_in_words(plan.best_reachable, plan.currency)}.")
+
+
+def _write_proof(paper: Paper, plan: Plan) -> None:
+    proof = plan.proof
+    if proof is None:
+        return
+    took = f"{clean_method(proof.method)}, {words.number(proof.seconds)} s"
+    if proof.lower_bound is None:
+        paper.heading(f"Proof: total {words.per_year(proof.total, plan.currency)}; no lower bound is proven; {took}.")
+    else:
+        bound = words.money(proof.lower_bound)
+        gap = words.UNKNOWN if proof.gap is None else f"{proof.gap:.1e}"
+        total = words.per_year(proof.total, plan.currency)
+        paper.heading(f"Proof: total {total}; proven lower bound {bound}; gap {gap} of the total; {took}.")
+    if proof.note:
+        paper.say(proof.note)
+
+
+def clean_method(method: str) -> str:
+    return words.clean(method) or "method not named"

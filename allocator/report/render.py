@@ -1,0 +1,41 @@
+"""Which renderer writes which result in which form."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Any, Literal
+
+from allocator.report.check_text import check_text
+from allocator.report.csv_out import check_csv, nines_csv, plan_csv, today_csv
+from allocator.report.json_out import check_json, nines_json, plan_json, to_json, today_json
+from allocator.report.nines_text import nines_text
+from allocator.report.paper import LOG_WIDTH
+from allocator.report.plan_text import plan_text
+from allocator.report.today_text import today_text
+from allocator.results import Check, Nines, Plan, Today
+
+Form = Literal["text", "json", "csv"]
+
+
+@dataclass(frozen=True)
+class _Renderers:
+    text: Callable[[Any, int], str]
+    json: Callable[[Any], dict[str, Any]]
+    csv: Callable[[Any], str]
+
+
+_RENDERERS: dict[type, _Renderers] = {
+    Plan: _Renderers(plan_text, plan_json, plan_csv),
+    Nines: _Renderers(nines_text, nines_json, nines_csv),
+    Today: _Renderers(today_text, today_json, today_csv),
+    Check: _Renderers(check_text, check_json, check_csv),
+}
+
+
+def render(result: object, form: Form = "text", width: int = LOG_WIDTH) -> str:
+    """The result as one text that ends in a line break; `width` counts for the form text only."""
+    renderers = _RENDERERS[type(result)]
+    if form == "json":
+        return to_json(renderers.json(result))
+    return renderers.csv(result) if form == "csv" else renderers.text(result, width)

@@ -1,0 +1,92 @@
+"""Hand a linear or mixed-integer programme to HiGHS through cvxpy and bring back values, prices and the dual bound."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.sparse import csr_array
+
+from allocator.errors import SolverError
+
+Array = NDArray[np.float64]
+FEASIBILITY = 1e-9
+"""Absolute tolerance asked of HiGHS; rows are scaled so that this is far below a defect budget."""
+
+
+@dataclass(frozen=True)
+class Rows:
+    """A programme: min cost·x, upper rows A·x ≤ b, equal rows E·x = d, low ≤ x ≤ high, some x binary."""
+
+    cost: Array
+    upper: csr_array
+    upper_limit: Array
+    equal: csr_array
+    equal_value: Array
+    low: Array
+    high: Array
+    binary: NDArray[np.bool_]
+
+
+@dataclass(frozen=True)
+class Answer:
+    """Values, a lower bound of the programme, and the prices of the rows (None for an integer solve)."""
+
+    x: Array
+    bound: float
+    upper_price: Array | None
+    equal_price: Array | None
+
+
+def solve_rows(rows: Rows, integer: bool, relative_gap: float = 0.0, seconds: float = 60.0) -> Answer | None:
+    """Solve the programme, its relaxation unless `integer`; None when it is infeasible.
+
+    The bound of a relaxation is computed from its prices, safe against the solver's tolerances because every
+    variable has finite ends (Neumaier and Shcherbina, Mathematical Programming 99, 2004); that of an integer solve is
+    the dual bound of the branch-and-bound tree.
+
+    Raises
+    ------
+    SolverError
+        When HiGHS stops without values (a time limit before the first solution, say).
+    """
+    import cvxpy as cp  # here, because it takes a second that continuous problems must not pay for
+
+    chosen = rows.binary if integer else np.zeros(len(rows.cost), dtype=bool)
+    x = cp.Variable(len(rows.cost))
+    if chosen.any():
+        whole = [(int(i),) for i in np.flatnonzero(chosen)]
+        x = cp.Variable(len(rows.cost), boolean=whole)
+    constraints = [rows.upper @ x <= rows.upper_limit, rows.equal @ x == rows.equal_value, x >= rows.low, x <= rows.high]
+    problem = cp.Problem(cp.Minimize(rows.cost @ x), constraints)
+    options = {
+        "primal_feasibility_tolerance": FEASIBILITY,
+        "dual_feasibility_tolerance": FEASIBILITY,
+        "time_limit": seconds,
+    }
+    if integer:
+        options |= {"mip_rel_gap": relative_gap, "mip_feasibility_tolerance": FEASIBILITY, "mip_abs_gap": 0.0}
+    try:
+        problem.solve(solver=cp.HIGHS, **options)
+    except cp.error.SolverError as failure:
+        raise SolverError(f"HiGHS stopped without an answer: {failure}") from failure
+    if problem.status in (cp.INFEASIBLE, cp.INFEASIBLE_OR_UNBOUNDED):
+        return None
+    if x.value is None:
+        raise SolverError(f"HiGHS stopped without values (status {problem.status}, {seconds:.0f} s allowed)")
+    if integer:
+        return Answer(x.value, float(problem.solver_stats.extra_stats.mip_dual_bound), None, None)
+    upper_price, equal_price = constraints[0].dual_value, constraints[1].dual_value
+    return Answer(x.value, _safe_bound(rows, upper_price, equal_price), upper_price, equal_price)
+
+
+def reduced_costs(rows: Rows, upper_price: Array, equal_price: Array) -> Array:
+    """Return what each variable costs after its rows are priced in, shape (n_variables,)."""
+    return np.asarray(rows.cost + rows.upper.T @ np.maximum(upper_price, 0.0) + rows.equal.T @ equal_price)
+
+
+def _safe_bound(rows: Rows, upper_price: Array, equal_price: Array) -> float:
+    reduced = reduced_costs(rows, upper_price, equal_price)
+    ends = np.minimum(reduced * rows.low, reduced * rows.high).sum()
+    return float(ends - np.maximum(upper_price, 0.0) @ rows.upper_limit - equal_price @ rows.equal_value)
