@@ -10,7 +10,7 @@ from allocator.report.paper import Paper, columns
 from allocator.results import BestReachable, Binding, Caution, Money, TodayLine, Yields
 
 MONEY_KINDS = ("scrap", "rework", "escapes", "inspection", "improvement")
-YIELDS_HEADING = "Yields (final yield here subtracts escapes; the common shop-floor figure does not)"
+YIELDS_NOTE = "(final yield here subtracts escapes; the common shop-floor figure does not)"
 SAFETY_CODE = "safety"
 INDEX_NOTE = (
     "Cpk is the study index, as measured on parts, without the drift allowance; Cpk after shift is what is left of it "
@@ -41,7 +41,8 @@ def _yield_cells(yields: Yields | None, name: str) -> tuple[str, str, str]:
 
 def write_yields(paper: Paper, losses: Mapping[str, float], states: Sequence[tuple[str, Yields | None]]) -> None:
     """The three yields together, each as per cent, ppm and nines, beside the targets set for them."""
-    paper.heading(YIELDS_HEADING)
+    paper.heading("Yields")
+    paper.say(YIELDS_NOTE)
     figures = [f"{label}{unit}" for label, _ in states for unit in ("", "\nppm", "\nnines")]
     rows = []
     for name in words.YIELDS:

@@ -47,7 +47,7 @@ def _write_flow(paper: Paper, check: Check) -> None:
 
 def _flow_row(step: Understood) -> list[str]:
     return [
-        step.step, step.feeds or "(customer)", words.number(step.items_per_unit), words.number(step.opportunities),
+        step.step, step.feeds or "(customer)", words.count(step.items_per_unit), words.count(step.opportunities),
         words.money(step.lost_when_scrapped), words.money(step.net_cost_added), f"{step.ways:,}",
     ]  # fmt: skip
 

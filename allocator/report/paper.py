@@ -76,7 +76,7 @@ class Paper:
 
     def table(self, columns: Sequence[Column], rows: Iterable[Sequence[str]], size: int, most: int = MOST_ROWS) -> None:
         """Print the first `most` of `size` rows; the rest is counted, never dropped in silence."""
-        table = Table(box=_BOX, show_edge=False, pad_edge=False, header_style="")
+        table = Table(box=_BOX, show_edge=False, pad_edge=False, padding=(0, 1, 0, 0), header_style="")
         for column in columns:
             table.add_column(Text(column.header), justify=column.justify, overflow="fold", vertical="top")
         for row in islice(rows, most):

@@ -44,9 +44,8 @@ def answer(plan: Plan) -> str:
         return f"The target cannot be met: {wanted or 'what was asked'} is out of reach."
     opening = {
         "cheapest": f"For {wanted}",
-        "best yield": f"For the most {words.yield_name(plan.split)} that the money buys, {_reached(plan)}",
-        "optimum": f"No target is set; to run the line at the least cost, with a {words.yield_name(plan.split)} of "
-        f"{_reached(plan)}",
+        "best yield": f"The best {words.yield_name(plan.split)} for the money is {_reached(plan)}",
+        "optimum": f"No target is set; the least cost is at a {words.yield_name(plan.split)} of {_reached(plan)}",
     }.get(plan.question, f"For {wanted}")
     return f"{opening}: {_actions(plan)}; it costs {_cost(plan)}."
 

@@ -31,8 +31,8 @@ def today_text(today: Today, width: int = LOG_WIDTH) -> str:
 def _standing(today: Today) -> str:
     yields, money = today.line.yields, today.line.money
     final = words.yield_in_full(yields.final_yield, yields.final_loss)
-    cost = words.per_year(None if money is None else money.total, today.currency)
-    return f"Today the final yield is {final}; {words.number(today.line.dpu)} defects per unit; it costs {cost} in all."
+    cost = "" if money is None else f"; it costs {words.per_year(money.total, today.currency)} in all"
+    return f"Today the final yield is {final}; {words.number(today.line.dpu)} defects per unit{cost}."
 
 
 def _write_lots(paper: Paper, today: Today) -> None:

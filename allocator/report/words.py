@@ -66,6 +66,16 @@ def number(value: float | None) -> str:
     return f"{value:,.{decimals}f}"
 
 
+def count(value: float | None) -> str:
+    """A number of things: whole where it is whole.
+
+    >>> count(4.0), count(0.5)
+    ('4', '0.50')
+    """
+    whole = value is not None and abs(value) < _LARGEST_WRITTEN_OUT and value == int(value)
+    return f"{value:,.0f}" if whole else number(value)
+
+
 def money(value: float | None) -> str:
     """An amount, without its unit: whole from a thousand, else with two decimals.
 
