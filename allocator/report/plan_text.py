@@ -201,7 +201,7 @@ def _write_proof(paper: Paper, plan: Plan) -> None:
     proof = plan.proof
     if proof is None:
         return
-    took = f"{clean_method(proof.method)}, {words.number(proof.seconds)} s"
+    took = f"{words.clean(proof.method) or 'method not named'}, {words.number(proof.seconds)} s"
     if proof.lower_bound is None:
         paper.heading(f"Proof: total {words.per_year(proof.total, plan.currency)}; no lower bound is proven; {took}.")
     else:
@@ -211,7 +211,3 @@ def _write_proof(paper: Paper, plan: Plan) -> None:
         paper.heading(f"Proof: total {total}; proven lower bound {bound}; gap {gap} of the total; {took}.")
     if proof.note:
         paper.say(proof.note)
-
-
-def clean_method(method: str) -> str:
-    return words.clean(method) or "method not named"
