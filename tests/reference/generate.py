@@ -10,7 +10,7 @@ from tests.reference.combination import ways_of
 from tests.reference.improvements import improvement
 from tests.reference.line import YIELDS, items_per_unit, lost_per_scrapped_item
 from tests.reference.optimum import combinations
-from tests.reference.states import selections, today_state
+from tests.reference.states import selections, settle, today_state
 
 MOST_COMBINATIONS = 300
 MOST_PER_STEP = 12
@@ -167,8 +167,10 @@ def _effect(rng: random.Random, scenario: dict, i: int, alternative: dict, key: 
     step = scenario["step"][i]
     state = today_state(scenario, step)
     if key == "capability":
-        alternative[key] = capabilities.better(rng, step, state)
-    elif key == "widen" and not state.attribute and "widen" not in alternative:
+        quoted = capabilities.better(rng, step, state)
+        if "widen" not in alternative or not settle(quoted, state).attribute:
+            alternative[key] = quoted
+    elif key == "widen" and not settle(alternative.get("capability", step["capability"]), state).attribute:
         alternative[key] = rounded(rng.uniform(1.03, 1.3), 3)
         alternative["price_allowance"] = rounded(lost_per_scrapped_item(scenario)[-1] * rng.uniform(0, 0.01), 2)
     elif key == "opportunities" and state.n > 1:
