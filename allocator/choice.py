@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 from allocator import curves as cv
 from allocator.capability import log_good
 from allocator.flow import GATE_FIELDS, Flow, Gates, Line, gate_values, loads, money, run
-from allocator.problem import Problem, within
+from allocator.problem import CAPITAL, COST, Problem, within
 from allocator.results import Money
 from allocator.state import State
 from allocator.ways import Options, law_cost
@@ -41,7 +41,9 @@ class Outcome:
 
     def value(self, objective: str) -> float:
         """Return what the objective minimises."""
-        return self.money.total if objective == "cost" else self.loads[objective]
+        if objective == COST:
+            return self.money.total
+        return self.capital if objective == CAPITAL else self.loads[objective]
 
 
 def evaluate(line: Line, options: Options, choice: Choice) -> Outcome:

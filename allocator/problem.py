@@ -12,6 +12,8 @@ from allocator.ways import Options, build_options
 
 COST = "cost"
 """The objective of the ordinary question; any of the three yields' names asks for the best of that yield."""
+CAPITAL = "capital"
+"""The objective that asks for the least capital, needed to see whether a capital limit can be kept at all."""
 ROUNDING = 1e-12
 """A budget or limit exceeded by this share of itself is met: it is the rounding of the figures it was computed from."""
 

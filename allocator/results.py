@@ -80,6 +80,8 @@ class StepTarget:
     """What caps the step (in words), when `at_cap`."""
     floor: str | None
     """The floor in words, when the step has one."""
+    floor_distance: str | None
+    """How far the target stands above the floor, in words with its unit."""
     floor_binds: bool
     safety: bool
     first_pass_yield: float
@@ -150,6 +152,8 @@ class TodayLine:
     """None when the flow overflows (flow exponent above 700); then `money_reason` says so."""
     money_reason: str | None
     dpu: float
+    bad_per_lot: tuple[tuple[int, float], ...]
+    """Units not right first time, by lot size."""
 
 
 @dataclass(frozen=True)
@@ -184,6 +188,8 @@ class Plan:
     """Why the simpler rules were left out, when they do not apply."""
     assumed: tuple[str, ...]
     cautions: tuple[Caution, ...]
+    spend_limit: float | None = None
+    capital_limit: float | None = None
 
     @property
     def cost_per_unit(self) -> float | None:

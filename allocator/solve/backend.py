@@ -2,7 +2,12 @@
 
 from __future__ import annotations
 
+import os
+import sys
+from collections.abc import Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -56,29 +61,45 @@ def solve_rows(rows: Rows, integer: bool, relative_gap: float = 0.0, seconds: fl
     chosen = rows.binary if integer else np.zeros(len(rows.cost), dtype=bool)
     x = cp.Variable(len(rows.cost))
     if chosen.any():
-        whole = [(int(i),) for i in np.flatnonzero(chosen)]
-        x = cp.Variable(len(rows.cost), boolean=whole)
+        x = cp.Variable(len(rows.cost), boolean=(np.flatnonzero(chosen),))
     constraints = [rows.upper @ x <= rows.upper_limit, rows.equal @ x == rows.equal_value, x >= rows.low, x <= rows.high]
     problem = cp.Problem(cp.Minimize(rows.cost @ x), constraints)
     options = {
         "primal_feasibility_tolerance": FEASIBILITY,
         "dual_feasibility_tolerance": FEASIBILITY,
         "time_limit": seconds,
+        "output_flag": False,
     }
     if integer:
         options |= {"mip_rel_gap": relative_gap, "mip_feasibility_tolerance": FEASIBILITY, "mip_abs_gap": 0.0}
     try:
-        problem.solve(solver=cp.HIGHS, **options)
+        with _silent_stdout():
+            problem.solve(solver=cp.HIGHS, **options)
     except cp.error.SolverError as failure:
         raise SolverError(f"HiGHS stopped without an answer: {failure}") from failure
-    if problem.status in (cp.INFEASIBLE, cp.INFEASIBLE_OR_UNBOUNDED):
+    if problem.status in cp.settings.INF_OR_UNB:
         return None
     if x.value is None:
         raise SolverError(f"HiGHS stopped without values (status {problem.status}, {seconds:.0f} s allowed)")
     if integer:
-        return Answer(x.value, float(problem.solver_stats.extra_stats.mip_dual_bound), None, None)
+        evidence: Any = problem.solver_stats.extra_stats
+        return Answer(x.value, float(evidence.mip_dual_bound), None, None)
     upper_price, equal_price = constraints[0].dual_value, constraints[1].dual_value
     return Answer(x.value, _safe_bound(rows, upper_price, equal_price), upper_price, equal_price)
+
+
+@contextmanager
+def _silent_stdout() -> Iterator[None]:
+    """Keep HiGHS's banner, which it writes past Python and past its own options, out of what programs read."""
+    sys.stdout.flush()
+    kept, nowhere = os.dup(1), os.open(os.devnull, os.O_WRONLY)
+    os.dup2(nowhere, 1)
+    try:
+        yield
+    finally:
+        os.dup2(kept, 1)
+        os.close(kept)
+        os.close(nowhere)
 
 
 def reduced_costs(rows: Rows, upper_price: Array, equal_price: Array) -> Array:

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 from allocator import curves as cv
 from allocator.curves import Curves
 from allocator.flow import GATE_FIELDS, Flow, Gates, Line, gradient, loads, run
-from allocator.problem import COST, Problem
+from allocator.problem import CAPITAL, COST, Problem
 
 Array = NDArray[np.float64]
 
@@ -47,7 +47,7 @@ class Program:
     scrap_weight : shape (n_steps,) [currency/year]
         G·q·κ.
     functions : dict
-        COST, the three yields' loads, and "capital".
+        COST, the three yields' loads, and CAPITAL.
     """
 
     step: NDArray[np.int64]
@@ -171,7 +171,7 @@ def _functions(
     }
     functions = {name: Function(used[name], slopes[name], none, False) for name in used}
     functions[COST] = Function(float(fixed), slope_cost, every, True)
-    functions["capital"] = Function(float(capital), none, capital_per_cost, False)
+    functions[CAPITAL] = Function(float(capital), none, capital_per_cost, False)
     return functions
 
 

@@ -1,0 +1,144 @@
+"""Solve one question: choose the method by its size, and say what stands in the way when nothing keeps the limits."""
+
+from __future__ import annotations
+
+import itertools
+import math
+import time
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from allocator.choice import Outcome
+from allocator.problem import CAPITAL, COST, Problem, within
+from allocator.solve.fixed import FixedAnswer, solve_fixed
+from allocator.solve.mixed import solve_mixed
+from allocator.solve.reduce import first_choices, ways_by_step, without_dominated
+
+SMALL_MOVING, SMALL_STILL = 40, 3000
+"""Choices solved one by one rather than by branch and bound: with levels to find in each, and without."""
+GAP = 1e-7
+"""Gap aimed at; the promise is 1e-6 continuous and 1e-4 mixed up to 200 steps of 6 ways."""
+GAP_LARGE = 2e-5
+LARGE = 600
+"""Ways above which the wider aim applies."""
+SECONDS = 60.0
+
+
+@dataclass(frozen=True)
+class Solved:
+    """The best choice found, its proven bound and gap, and the price of each limit; no outcome when infeasible.
+
+    `blocked` names the limit (a yield, "capital" or "cost") that no choice keeps beside the ones before it, and `least`
+    the lowest value it can take.
+    """
+
+    problem: Problem
+    outcome: Outcome | None
+    bound: float
+    gap: float
+    price: dict[str, float] | None
+    method: str
+    seconds: float
+    blocked: str | None = None
+    least: float = math.nan
+
+
+def solve(problem: Problem, starts: list[NDArray[np.int64]] | None = None) -> Solved:
+    """Return the best choice for the problem's objective, with its proof.
+
+    Parameters
+    ----------
+    problem : Problem
+    starts : list of int arrays, optional
+        Choices (rows of the problem's own table) worth trying first, from a neighbouring question.
+    """
+    began = time.monotonic()
+    reduced = without_dominated(problem)
+    translated = _in_reduced(problem, reduced, starts or [])
+    solved = _by_size(reduced, translated) or _first_feasible(reduced)
+    if solved.outcome is not None and solved.problem.objective != problem.objective:
+        # What was found keeps every limit; now it can serve as the start that the search was missing.
+        solved = _by_size(reduced, [solved.outcome.choice.rows]) or solved
+    return replace(solved, seconds=time.monotonic() - began)
+
+
+def _by_size(problem: Problem, starts: list[NDArray[np.int64]]) -> Solved | None:
+    """Solve choice by choice or by branch and bound; None when no choice that keeps the limits is known."""
+    by_step = ways_by_step(problem)
+    choices = math.prod(len(mine) for mine in by_step)
+    moving = bool(problem.options.ways.moves.any())
+    if choices <= (SMALL_MOVING if moving else SMALL_STILL):
+        return _every_choice(problem, by_step, choices)
+    gap = GAP if len(problem.options.ways) <= LARGE else GAP_LARGE
+    search = solve_mixed(problem, [*starts, *first_choices(problem)], gap, SECONDS)
+    if search.best is None:
+        return None
+    return _solved(problem, search.best, search.bound, "cutting planes and branch and bound")
+
+
+def _every_choice(problem: Problem, by_step: list[NDArray[np.int64]], choices: int) -> Solved | None:
+    answers = [solve_fixed(problem, np.array(rows, dtype=np.int64)) for rows in itertools.product(*by_step)]
+    found = [a for a in answers if a is not None]
+    if not found:
+        return None
+    best = min(found, key=lambda a: a.outcome.value(problem.objective))
+    bound = min(a.bound for a in found)
+    method = "interior point" if choices == 1 else f"all {choices:,} choices, each by interior point"
+    return _solved(problem, best, bound, method)
+
+
+def _first_feasible(problem: Problem) -> Solved:
+    """Find a choice that keeps every limit, taking the limits on one by one; or say which one cannot be kept.
+
+    The money limits come first and the split yield last, so that what is reported for it is its best beside the others.
+    """
+    limits: list[tuple[str, float]] = []
+    if problem.capital is not None:
+        limits.append((CAPITAL, problem.capital))
+    limits += [(name, budget) for name, budget in problem.budgets.items() if name != problem.split]
+    if problem.split in problem.budgets:
+        limits.append((problem.split, problem.budgets[problem.split]))
+    if problem.spend is not None:
+        limits.append((COST, problem.spend))
+    kept = replace(problem, budgets={}, capital=None, spend=None)
+    starts: list[NDArray[np.int64]] = []
+    solved = Solved(problem, None, math.nan, math.nan, None, "", 0.0)
+    for name, limit in limits:
+        found = _by_size(replace(kept, objective=name), starts)
+        assert found is not None, "the limits taken on so far were kept by an earlier choice"
+        assert found.outcome is not None
+        solved = found
+        least = found.outcome.value(name)
+        if not within(least, limit):
+            return Solved(problem, None, solved.bound, solved.gap, None, solved.method, 0.0, name, least)
+        starts = [found.outcome.choice.rows]
+        if name == CAPITAL:
+            kept = replace(kept, capital=limit)
+        elif name == COST:
+            kept = replace(kept, spend=limit)
+        else:
+            kept = kept.with_budget(name, limit)
+    return solved
+
+
+def _solved(problem: Problem, best: FixedAnswer, bound: float, method: str) -> Solved:
+    value = best.outcome.value(problem.objective)
+    bound = min(bound, value)
+    least = 1.0 if problem.objective == COST else 1e-300
+    return Solved(problem, best.outcome, bound, (value - bound) / max(abs(value), least), best.price, method, 0.0)
+
+
+def _in_reduced(problem: Problem, reduced: Problem, starts: list[NDArray[np.int64]]) -> list[NDArray[np.int64]]:
+    """Translate choices into rows of the reduced table; a way that was dropped is replaced by nothing (left out)."""
+    if reduced is problem:
+        return starts
+    key = {_key(reduced, w): w for w in range(len(reduced.options.ways))}
+    translated = [[key.get(_key(problem, int(w)), -1) for w in rows] for rows in starts]
+    return [np.array(rows, dtype=np.int64) for rows in translated if -1 not in rows]
+
+
+def _key(problem: Problem, w: int) -> tuple[object, ...]:
+    ways = problem.options.ways
+    return int(ways.step[w]), ways.text[w].alternatives, float(ways.z_low[w]), float(ways.z_high[w])
