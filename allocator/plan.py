@@ -4,20 +4,22 @@ from __future__ import annotations
 
 import math
 from dataclasses import replace
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from allocator.cautions import cautions_of_plan, what_is_assumed
 from allocator.choice import Outcome
 from allocator.errors import RangeError
-from allocator.flow import first_pass, rework_cost, scrap_cost, yields
+from allocator.flow import first_pass, rework_cost, scrap_lost_at, yields
 from allocator.flow import inspection_cost as inspection_by_step
-from allocator.problem import CAPITAL, COST, Problem, inspection_stated, pose
+from allocator.problem import CAPITAL, COST, Problem, pose
 from allocator.results import BestReachable, Binding, Bought, Level, Plan, Proof, StepTarget
 from allocator.rules import simpler_rules
 from allocator.scenario.model import Scenario, Step
 from allocator.solve.road import Solved, solve
-from allocator.standing import level_at, levels_today, line_today, load_parts, load_shares
+from allocator.standing import level_at, levels_today, line_today, load_parts, load_shares, shipped_known
 from allocator.state import State, floor_sigma, floor_words
 from allocator.ways import Ways
 
@@ -91,11 +93,11 @@ def cheapest_at(problem: Problem, best: Solved) -> Solved:
     assert best.outcome is not None
     load = best.outcome.loads[problem.split]
     budget = load * (1.0 + JUST_REACHABLE)
-    cheapest = solve(replace(problem.with_budget(problem.split, budget), objective=COST), [_rows_in(problem, best)])
+    cheapest = solve(replace(problem.with_budget(problem.split, budget), objective=COST), [rows_in(problem, best)])
     return cheapest if cheapest.outcome is not None else best
 
 
-def _rows_in(problem: Problem, solved: Solved) -> np.ndarray[tuple[int], np.dtype[np.int64]]:
+def rows_in(problem: Problem, solved: Solved) -> NDArray[np.int64]:
     """Return an answer's choice as rows of the full table of ways."""
     assert solved.outcome is not None
     small, full = solved.problem.options.ways, problem.options.ways
@@ -210,7 +212,7 @@ def describe(solved: Solved, question: str, problem: Problem) -> Plan:
         split=problem.split,
         targets={name: math.exp(-budget) for name, budget in problem.budgets.items()},
         target_losses={name: -math.expm1(-budget) for name, budget in problem.budgets.items()},
-        yields=yields(problem.line, outcome.flow, inspection_stated(scenario)),
+        yields=yields(problem.line, outcome.flow, shipped_known(problem, _states(solved))),
         money=outcome.money,
         dpu=float(sum(level.dpu for level in _target_levels(solved))),
         capital=outcome.capital,
@@ -258,7 +260,7 @@ def _with_next_nine(plan: Plan, problem: Problem, solved: Solved) -> Plan:
     if budget is None:
         return plan
     next_budget = -math.log1p(-0.1 * -math.expm1(-budget))
-    start = _rows_in(problem, solved)
+    start = rows_in(problem, solved)
     further = solve(problem.with_budget(problem.split, next_budget), [start])
     if further.outcome is not None:
         return replace(plan, cost_of_next_nine=further.outcome.money.total - solved.outcome.money.total)
@@ -286,10 +288,10 @@ def _step_targets(solved: Solved, problem: Problem) -> tuple[StepTarget, ...]:
     assert outcome is not None
     line, flow = problem.line, outcome.flow
     starts = line.shipped * line.per_finished * np.exp(flow.exponent)
-    columns = {
+    columns: dict[str, Any] = {
         "budget_share": load_shares(line, flow, problem.split),
         "starts_per_year": starts,
-        "scrap": scrap_cost(line, flow.exponent),
+        "scrap": scrap_lost_at(line, flow),
         "rework": rework_cost(line, flow),
         "inspection": inspection_by_step(line, flow.gates),
         "improvement": outcome.improvement,
@@ -307,7 +309,7 @@ def _step_targets(solved: Solved, problem: Problem) -> tuple[StepTarget, ...]:
     )
 
 
-def _choice_words(solved: Solved, outcome: Outcome, i: int) -> dict[str, object]:
+def _choice_words(solved: Solved, outcome: Outcome, i: int) -> dict[str, Any]:
     ways, row, z = solved.problem.options.ways, int(outcome.choice.rows[i]), float(outcome.choice.z[i])
     text = ways.text[row]
     same = [w for w in np.flatnonzero(ways.step == i) if ways.text[w].alternatives == text.alternatives]
@@ -323,7 +325,7 @@ def _choice_words(solved: Solved, outcome: Outcome, i: int) -> dict[str, object]
     }
 
 
-def _floor_words(step: Step, state: State, level: Level) -> dict[str, object]:
+def _floor_words(step: Step, state: State, level: Level) -> dict[str, Any]:
     floor = step.at_least
     if floor is None:
         return {"floor": None, "floor_distance": None, "floor_binds": False}

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 from allocator.capability import index_after_shift, log_good, study_index
 from allocator.choice import flow_of_states
 from allocator.flow import OVERFLOW, Flow, Line, gradient, money, yields
-from allocator.problem import Problem, inspection_stated
+from allocator.problem import Problem
 from allocator.results import Level, TodayLine
 from allocator.state import State, has_cp
 
@@ -47,11 +47,17 @@ def flow_today(problem: Problem) -> Flow:
     return flow_of_states(problem.line, problem.options.today)
 
 
+def shipped_known(problem: Problem, states: tuple[State, ...]) -> bool:
+    """Return whether escapes are known: some gate of the line states an inspection, or they are what is asked."""
+    asked = problem.split == "shipped_yield" or "shipped_yield" in problem.budgets
+    return asked or any(state.inspection is not None for state in states)
+
+
 def line_today(problem: Problem) -> TodayLine:
     """Return where the line stands; its money is left out where the flow overflows, with the reason."""
     flow = flow_today(problem)
     over = float(np.max(flow.exponent))
-    seen = yields(problem.line, flow, inspection_stated(problem.scenario))
+    seen = yields(problem.line, flow, shipped_known(problem, problem.options.today))
     reason = None
     if over > OVERFLOW:
         reason = (

@@ -1,0 +1,293 @@
+"""Which cautions does a scenario itself call for, before anything is solved."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Iterator
+
+from pydantic import BaseModel
+
+from allocator.capability import study_index
+from allocator.problem import Problem, inspection_stated
+from allocator.results import Caution
+from allocator.scenario.level import LONG_TERM, given
+from allocator.scenario.model import Capability, Step, Table
+from allocator.state import sigma_meant
+
+SMALL_SAMPLE = 50
+FEW_BAD = 5
+Z_95 = 1.6448536269514722
+"""Normal 95 % point, for one-sided lower limits."""
+
+
+def cautions_of_input(problem: Problem) -> tuple[Caution, ...]:
+    """Return the cautions that the scenario calls for, each once, with the steps that it concerns."""
+    found = [caution for look in LOOKS for caution in look(problem)]
+    return tuple(found)
+
+
+def lower_cpk(cpk: float, sample: int) -> float:
+    """Return the approximate one-sided 95 % lower limit of Cpk from `sample` parts (Bissell 1990).
+
+    >>> round(lower_cpk(1.33, 50), 4)
+    1.0958
+    """
+    return cpk - Z_95 * math.sqrt(1.0 / (9.0 * sample) + cpk**2 / (2.0 * (sample - 1)))
+
+
+def _about(code: str, steps: list[str], reason: str, fix: str) -> Iterator[Caution]:
+    if steps:
+        yield Caution(code, tuple(steps), reason, fix)
+
+
+def _steps(problem: Problem, test: Callable[[Step, int], bool]) -> list[str]:
+    return [step.name for i, step in enumerate(problem.scenario.step) if test(step, i)]
+
+
+def _capabilities(step: Step) -> Iterator[Capability]:
+    yield step.capability
+    yield from (a.capability for a in step.alternative if a.capability is not None)
+
+
+def _one_opportunity(problem: Problem) -> Iterator[Caution]:
+    steps = problem.scenario.step
+    if len(steps) > 2 and all(step.opportunities == 1.0 for step in steps):
+        reason = "every step counts one opportunity per item; a step with ten characteristics fails about ten times as often"
+        yield Caution("one_opportunity", (), reason, "set `opportunities` to the number of ways each item can go wrong")
+
+
+def _long_term(problem: Problem) -> Iterator[Caution]:
+    on_top = _steps(problem, lambda s, _: any(given(s.capability, LONG_TERM) and a.shift for a in s.alternative))
+    yield from _about(
+        "long_term_with_shift", on_top, "an alternative puts a shift on a long-term figure (pp, ppk), which holds the drift already",
+        "give the short-term figure (cp, cpk) where a shift applies, or drop the shift",
+    )  # fmt: skip
+    if problem.scenario.default.shift:
+        ignored = _steps(problem, lambda s, _: bool(given(s.capability, LONG_TERM)))
+        yield from _about(
+            "long_term_keeps_no_shift", ignored,
+            f"the line's shift of {problem.scenario.default.shift:g} is not put on a long-term figure (pp, ppk): it would count twice",
+            "nothing to do if the figure really is long-term; else give cp, cpk",
+        )  # fmt: skip
+
+
+def _small_sample(problem: Problem) -> Iterator[Caution]:
+    for i, step in enumerate(problem.scenario.step):
+        sample, level = step.capability.sample, problem.options.today[i].level
+        if sample is None or level.attribute or sample > SMALL_SAMPLE:
+            continue
+        cpk = float(study_index(level.sigma_level, level.k))
+        reason = (
+            f"Cpk {cpk:.2f} from {sample} parts is taken as exact; its 95 % lower limit is about {lower_cpk(cpk, sample):.2f}"
+        )
+        yield Caution("small_sample", (step.name,), reason, "measure 100 parts or more, or plan on the lower limit")
+
+
+def _beyond_the_data(problem: Problem) -> Iterator[Caution]:
+    def extrapolated(step: Step, i: int) -> bool:
+        sample, state = step.capability.sample, problem.options.today[i]
+        return sample is not None and not state.level.attribute and math.exp(state.log_p) < 1.0 / (3.0 * sample)
+
+    yield from _about(
+        "beyond_the_data", _steps(problem, extrapolated),
+        "the defect rate lies below one in three times the sample: it is the normal model speaking, not the data",
+        "treat these ppm as a model; confirm with counts before money is committed",
+    )  # fmt: skip
+
+
+def _inspection(problem: Problem) -> Iterator[Caution]:
+    today = problem.options.today
+    if not inspection_stated(problem.scenario):
+        yield Caution(
+            "inspection_assumed", (), "no step states an inspection, so every gate is assumed perfect and the shipped yield is unknown",
+            "state `inspection = {finds = …}` where parts are checked; a check rarely finds more than a part of what is wrong",
+        )  # fmt: skip
+        return
+    bought = _steps(problem, lambda s, i: s.supplier is not None and today[i].inspection is None)
+    yield from _about(
+        "bought_part_without_inspection", bought,
+        "a bought part without a stated inspection is assumed to be checked perfectly before it is used",
+        "state the incoming inspection, or finds = 0 where parts go straight to the line",
+    )  # fmt: skip
+    own = _steps(problem, lambda s, i: s.supplier is None and today[i].inspection is None)
+    yield from _about(
+        "gate_assumed_perfect", own, "no inspection is stated here while others state one: this gate is assumed to find all its own defects",
+        "state what the check at this step finds",
+    )  # fmt: skip
+    perfect = _steps(problem, lambda _, i: _finds_all(problem, i))
+    yield from _about(
+        "inspection_stated_perfect", perfect, "an inspection that finds everything is rare: 100 % inspected is not 0 ppm",
+        "enter the share found in an attribute study of the check",
+    )  # fmt: skip
+    if all(s.inspection is None or s.inspection.rejects_good == 0.0 for s in today):
+        yield Caution(
+            "no_false_rejects", (), "no inspection rejects good items; real checks do, and the rejects cost starts and scrap",
+            "enter `rejects_good` from a repeat test of rejected items",
+        )  # fmt: skip
+    repeated = [s.name for i, s in enumerate(problem.scenario.step) if (g := today[i].inspection) and g.earlier > 0.0]
+    if len(repeated) > 1:
+        yield Caution(
+            "repeated_inspection", tuple(repeated), "several gates look for the same hidden defects and are taken as independent; "
+            "with common misses two 80 % checks leak far more than 4 %", "lower `earlier` at the later gates for what all checks miss",
+        )  # fmt: skip
+    if problem.line.escape_cost == 0.0 and "shipped_yield" not in problem.budgets:
+        yield Caution(
+            "escapes_cost_nothing", (), "defects can escape, but no escape_cost and no shipped_yield target is set: leaks are free",
+            "set target.escape_cost, or a shipped_yield target",
+        )  # fmt: skip
+
+
+def _finds_all(problem: Problem, i: int) -> bool:
+    inspection = problem.options.today[i].inspection
+    return inspection is not None and inspection.finds * inspection.share_inspected == 1.0
+
+
+def _counts(problem: Problem) -> Iterator[Caution]:
+    none = _steps(problem, lambda s, _: any(c.bad == 0 for c in _capabilities(s)))
+    yield from _about(
+        "zero_bad", none, "0 bad found is not 0 ppm; the rate is taken at which none had an even chance, 1 − 0.5^(1/n)",
+        "count on a larger lot until a few bad ones are seen",
+    )  # fmt: skip
+    few = _steps(problem, lambda s, _: any(c.bad is not None and 0 < c.bad < FEW_BAD for c in _capabilities(s)))
+    yield from _about(
+        "few_bad", few, "a rate from fewer than five bad items is uncertain by a factor of two or more",
+        "pool more lots, or plan on an upper limit of the count",
+    )  # fmt: skip
+
+
+def _near_tail(problem: Problem) -> Iterator[Caution]:
+    def near(c: Capability) -> bool:
+        return (c.cpk is not None and c.cp is None) or (c.ppk is not None and c.pp is None)
+
+    alone = _steps(problem, lambda s, i: near(s.capability) and problem.options.today[i].level.sides == 1)
+    yield from _about(
+        "near_tail_only", alone, "Cpk (Ppk) alone tells only the nearer tail; the far one is left out and recentring cannot be weighed",
+        "give cp beside cpk, or the limits with mean and std",
+    )  # fmt: skip
+
+
+def _copies(problem: Problem) -> Iterator[Caution]:
+    independent = _steps(
+        problem, lambda s, _: any(a.copies is not None and a.copies.common_cause == 0.0 for a in s.alternative)
+    )
+    yield from _about(
+        "copies_without_common_cause", independent,
+        "copies are taken to fail independently; a common cause of 2 to 10 % limits the gain to 10 to 50 times",
+        "set copies.common_cause from the applicable standard or field data",
+    )  # fmt: skip
+
+
+def _laws(problem: Problem) -> Iterator[Caution]:
+    open_ended = _steps(problem, lambda s, _: s.improve is not None and s.improve.up_to is None and s.improve.law != "quotes")
+    yield from _about(
+        "no_up_to", open_ended, "the law states no `up_to`; nothing is extrapolated past one tenth of the starting defects",
+        "set up_to to the best level demonstrated or quoted",
+    )  # fmt: skip
+    beyond = [step.name for i, step in enumerate(problem.scenario.step) if _at_out_of_reach(problem, step, i)]
+    yield from _about(
+        "at_beyond_cap", beyond, "the level named in `at` lies beyond the law's cap, so the plan cannot go where the price was quoted",
+        "set up_to to that level or higher",
+    )  # fmt: skip
+
+
+def _at_out_of_reach(problem: Problem, step: Step, i: int) -> bool:
+    if step.improve is None or step.improve.at is None:
+        return False
+    ways, today = problem.options.ways, problem.options.today[i]
+    mine = [w for w in range(len(ways)) if ways.step[w] == i and not ways.text[w].alternatives]
+    return bool(mine) and sigma_meant(step.improve.at, today) > max(ways.z_high[w] for w in mine) * (1.0 + 1e-9)
+
+
+def _judged(problem: Problem) -> Iterator[Caution]:
+    yield from _about(
+        "judged", _steps(problem, lambda s, _: is_judged(s)), "figures here are judged, not measured or quoted; the answer rests on them",
+        "replace them by quotations or trials before money is committed",
+    )  # fmt: skip
+
+
+def is_judged(table: BaseModel) -> bool:
+    """Return whether a table, or any table inside it, is marked as judged."""
+    if isinstance(table, Table) and table.evidence == "judged":
+        return True
+    inside = (getattr(table, name) for name in type(table).model_fields)
+    return any(
+        is_judged(value) if isinstance(value, BaseModel) else any(is_judged(v) for v in value if isinstance(v, BaseModel))
+        for value in inside
+        if isinstance(value, BaseModel | tuple)
+    )
+
+
+def _safety(problem: Problem) -> Iterator[Caution]:
+    yield from _about(
+        "safety", _steps(problem, lambda s, _: s.safety),
+        "a safety characteristic is a floor that money never trades away; the floor itself is not set by this program",
+        "follow the governing code and let a qualified, where required licensed, practitioner decide",
+    )  # fmt: skip
+
+
+def _widening(problem: Problem) -> Iterator[Caution]:
+    yield from _about(
+        "wider_spec", _steps(problem, lambda s, _: any(a.widen for a in s.alternative)), "widening a specification changes the product",
+        "record the functional evidence and the design authority's approval first",
+    )  # fmt: skip
+
+
+def _rework(problem: Problem) -> Iterator[Caution]:
+    free = _steps(problem, lambda _, i: bool((r := problem.options.today[i].rework) and r.share > 0.0 and r.cost == 0.0))
+    yield from _about(
+        "free_rework", free, "rework is entered as costing nothing; hidden rework is what a good final yield hides",
+        "enter rework.cost: labour, parts and the second check",
+    )  # fmt: skip
+
+
+def _shifts(problem: Problem) -> Iterator[Caution]:
+    measured = [s.level.shift for s in problem.options.today if not s.level.attribute]
+    if measured and max(measured) == 0.0 and not any(given(s.capability, LONG_TERM) for s in problem.scenario.step):
+        yield Caution(
+            "no_drift_allowance", (), "all measured capabilities are taken to hold all year (shift 0)",
+            "set default.shift (1.5 is the trade's usual allowance, unproven) or give long-term pp, ppk",
+        )  # fmt: skip
+    if len(set(measured)) > 1:
+        yield Caution(
+            "mixed_shifts", (), f"shifts between {min(measured):g} and {max(measured):g} are mixed: the same Cpk means different ppm",
+            "make sure that each step's shift is meant",
+        )  # fmt: skip
+
+
+def _three_sigma(problem: Problem) -> Iterator[Caution]:
+    weak = _steps(
+        problem, lambda _, i: study_index(problem.options.today[i].level.sigma_level, problem.options.today[i].level.k) <= 1.0
+    )
+    if len(weak) > 1:
+        lost = 1.0 - (1.0 - 0.0026998) ** len(weak)
+        yield Caution(
+            "three_sigma_each", tuple(weak), f"{len(weak)} steps stand at Cpk 1.00 or less; as many at exactly 1.00 centred would lose "
+            f"{lost:.1%} of units between them", "judge steps by their share of the defect budget, not one by one",
+        )  # fmt: skip
+
+
+def _loose_ends(problem: Problem) -> Iterator[Caution]:
+    nothing = _steps(problem, lambda s, _: not s.fixed and not s.alternative and s.improve is None)
+    if len(nothing) == len(problem.scenario.step):
+        yield Caution(
+            "nothing_to_choose", (), "no step has an alternative or a law of improvement, so there is nothing to decide",
+            "enter quotes or `improve` for the steps that could get better",
+        )  # fmt: skip
+    free = _steps(problem, lambda s, _: any(_costs_nothing(a.name, s) for a in s.alternative))
+    yield from _about(
+        "free_alternative", free, "an alternative is entered as costing nothing: it will be taken wherever it helps",
+        "enter its price, per_year or per_item, or note why it is free (recentring may be)",
+    )  # fmt: skip
+
+
+def _costs_nothing(name: str, step: Step) -> bool:
+    a = next(a for a in step.alternative if a.name == name)
+    money = (a.price, a.per_year, a.per_item, a.price_allowance)
+    dearer_gate = a.inspection is not None and a.inspection.per_item > 0.0
+    return not any(money) and a.uses is None and not dearer_gate and not (a.rework is not None and a.rework.cost > 0.0)
+
+
+LOOKS: tuple[Callable[[Problem], Iterator[Caution]], ...] = (
+    _safety, _inspection, _long_term, _shifts, _small_sample, _beyond_the_data, _counts, _near_tail, _one_opportunity,
+    _three_sigma, _copies, _laws, _judged, _widening, _rework, _loose_ends,
+)  # fmt: skip
