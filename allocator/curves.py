@@ -7,7 +7,7 @@ probability of one opportunity (of the set, where copies share the job).
 from __future__ import annotations
 
 from dataclasses import dataclass, fields
-from typing import Any
+from typing import Any, cast
 
 import numpy as np
 from numpy.typing import NDArray
@@ -63,9 +63,9 @@ class Curves:
 
 def log_probability(curves: Curves, z: Array) -> Array:
     """Return ln P of one opportunity at sigma level z (of the set of copies, where there are any)."""
-    log_p: Array = log_defects(z, curves.k, curves.shift, curves.sides)
+    log_p = log_defects(z, curves.k, curves.shift, curves.sides)
     if not curves.copied.any():
-        return log_p
+        return cast(Array, log_p)
     with np.errstate(divide="ignore"):
         together = np.log(redundancy.failure(np.exp(log_p), curves.installed, curves.needed, curves.common_cause))
     return np.asarray(np.where(curves.copied, together, log_p))

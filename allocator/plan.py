@@ -25,8 +25,8 @@ from allocator.ways import Ways
 
 AT_CAP = 1e-5
 """A step whose defects are within this share of its cap's is at the cap."""
-JUST_REACHABLE = 1e-9
-"""Room given to the best reachable budget, so that its least cost can be found."""
+JUST_REACHABLE = 2e-10
+"""Room given to the best reachable budget when its least cost is asked for, against rounding."""
 BINDING_SLACK = 1e-6
 """A budget used to within this share of itself binds."""
 
@@ -288,7 +288,7 @@ def _step_targets(solved: Solved, problem: Problem) -> tuple[StepTarget, ...]:
     assert outcome is not None
     line, flow = problem.line, outcome.flow
     starts = line.shipped * line.per_finished * np.exp(flow.exponent)
-    columns: dict[str, Any] = {
+    columns = {
         "budget_share": load_shares(line, flow, problem.split),
         "starts_per_year": starts,
         "scrap": scrap_lost_at(line, flow),
@@ -303,7 +303,7 @@ def _step_targets(solved: Solved, problem: Problem) -> tuple[StepTarget, ...]:
         StepTarget(
             step=step.name, supplier=step.supplier, today=today[i], target=target[i], safety=step.safety,
             **_choice_words(solved, outcome, i), **_floor_words(step, _states(solved)[i], target[i]),
-            **{name: float(values[i]) for name, values in columns.items()},
+            **{name: float(values[i]) for name, values in columns.items()},  # type: ignore[arg-type]
         )  # fmt: skip
         for i, step in enumerate(problem.scenario.step)
     )

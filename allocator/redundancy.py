@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import ArrayLike
 from scipy.special import betainc, betaln
 
-BISECTIONS = 200
+NEWTON_STEPS = 200
 
 
 def failure(p: ArrayLike, installed: ArrayLike, needed: ArrayLike, common_cause: ArrayLike) -> Any:
@@ -52,18 +52,25 @@ def failure_slopes(p: ArrayLike, installed: ArrayLike, needed: ArrayLike, common
 def one_copy(total: ArrayLike, installed: ArrayLike, needed: ArrayLike, common_cause: ArrayLike) -> Any:
     """Return ln p of one copy so that the set fails with probability `total`, the inverse of `failure`.
 
-    Bisection on ln p between total's own bounds (a set never fails more often than the union of its copies, and
-    p below 1e-300 is taken as 0); relative error of p about 1e-13.
+    Newton on ln F against ln p, which is close to a straight line, kept inside a shrinking bracket; relative error of p
+    about 1e-13 (p below 1e-300 is taken as 0).
 
     >>> round(float(np.exp(one_copy(0.0004, 2, 1, 0.0))), 6)
     0.02
     """
     total, n, m, beta = np.broadcast_arrays(*(np.asarray(x, dtype=float) for x in (total, installed, needed, common_cause)))
     low, high = np.full(total.shape, -690.0), np.zeros(total.shape)
-    for _ in range(BISECTIONS):
-        middle = 0.5 * (low + high)
-        over = failure(np.exp(middle), n, m, beta) > total
-        low, high = np.where(over, low, middle), np.where(over, middle, high)
-        if np.all(high - low <= 1e-15 * np.abs(high)):
+    wanted = np.log(np.maximum(total, 1e-300))
+    log_p = np.clip(wanted, low, -1e-9)
+    for _ in range(NEWTON_STEPS):
+        p = np.exp(log_p)
+        fails = failure(p, n, m, beta)
+        low, high = np.where(fails > total, low, log_p), np.where(fails > total, log_p, high)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            moved = log_p - (np.log(fails) - wanted) * fails / (failure_slopes(p, n, m, beta)[0] * p)
+        moved = np.where((moved > low) & (moved < high), moved, 0.5 * (low + high))
+        settled = np.all(np.abs(moved - log_p) <= 1e-14 * np.abs(moved))
+        log_p = moved
+        if settled:
             break
-    return (0.5 * (low + high))[()]
+    return log_p[()]

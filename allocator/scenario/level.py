@@ -14,6 +14,8 @@ LONG_TERM = ("pp", "ppk")
 PER_OPPORTUNITY = ("yield_", "defect_rate", "dpmo")
 PER_ITEM = ("item_yield", "ppm", "bad")
 ATTRIBUTE = PER_OPPORTUNITY + PER_ITEM
+ROUNDED = 1e-4
+"""A Cpk above its Cp by no more than this share is a rounding of the same figure."""
 MEDIAN_CHANCE = 0.5
 """With 0 bad in n, the rate is taken at which none in n had an even chance."""
 
@@ -112,7 +114,7 @@ def _offset(capability: Capability, inherited: Level | None) -> float:
 
 def checked_offset(k: float, figures: str) -> float:
     """Return k, or say with its figures why no process can have it (RangeError)."""
-    if -1e-12 <= k < 0.0:
+    if -ROUNDED <= k < 0.0:
         return 0.0
     if not 0.0 <= k < 1.0:
         raise RangeError(f"offset k = {figures} = {k:.4g}, outside 0 ≤ k < 1 (the mean must lie between the limits)")

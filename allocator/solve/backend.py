@@ -62,7 +62,8 @@ def solve_rows(rows: Rows, integer: bool, relative_gap: float = 0.0, seconds: fl
     x = cp.Variable(len(rows.cost))
     if chosen.any():
         x = cp.Variable(len(rows.cost), boolean=(np.flatnonzero(chosen),))
-    constraints = [rows.upper @ x <= rows.upper_limit, rows.equal @ x == rows.equal_value, x >= rows.low, x <= rows.high]
+    upper, equal = cp.Constant(rows.upper), cp.Constant(rows.equal)
+    constraints = [upper @ x <= rows.upper_limit, equal @ x == rows.equal_value, x >= rows.low, x <= rows.high]
     problem = cp.Problem(cp.Minimize(rows.cost @ x), constraints)
     options = {
         "primal_feasibility_tolerance": FEASIBILITY,

@@ -52,8 +52,9 @@ class _Scaled:
         span = self.program.high - self.program.low
         results = []
         v = self.point(x)
+        laws = self.program.law_slopes(v)
         for name, limit, size in [(self.objective, 0.0, self.size), *((n, b, _size(b)) for n, b in self.limits.items())]:
-            value, grad, bend, weight = self.program.derivatives(name, v)
+            value, grad, bend, weight = self.program.derivatives(name, v, laws)
             results.append(((value - limit) / size, grad * span / size, bend * span**2 / size, weight / size))
         return results, span
 

@@ -67,14 +67,19 @@ class Program:
 
     def value(self, name: str, v: Array) -> float:
         """Return one function at v (infinite where the flow overflows)."""
-        return self.derivatives(name, v, order=0)[0]
+        return self.derivatives(name, v)[0]
 
-    def derivatives(self, name: str, v: Array, order: int = 2) -> tuple[float, Array, Array, Array]:
-        """Return value, gradient, diagonal curvature of the laws, and the scrap weights G·q·κ·exp(S) (0 without scrap)."""
+    def derivatives(
+        self, name: str, v: Array, laws: tuple[Array, Array, Array] | None = None
+    ) -> tuple[float, Array, Array, Array]:
+        """Return value, gradient, diagonal curvature of the laws, and the scrap weights G·q·κ·exp(S) (0 without scrap).
+
+        `laws` are the slopes at v, where they are known already.
+        """
         function = self.functions[name]
         value, grad, bend = function.constant + float(function.linear @ v), function.linear, np.zeros(self.size)
         if function.law.any():
-            cost, first, second = self.law_slopes(v)
+            cost, first, second = self.law_slopes(v) if laws is None else laws
             value += float(function.law @ cost)
             grad, bend = grad + function.law * first, function.law * second
         weight = np.zeros(len(self.base))
