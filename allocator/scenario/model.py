@@ -4,12 +4,20 @@ from __future__ import annotations
 
 from typing import Annotated, Literal
 
-from pydantic import BaseModel, ConfigDict, Field
+from pydantic import BaseModel, ConfigDict, Discriminator, Field, Tag
 
-Share = Annotated[float, Field(ge=0.0, le=1.0)]
-Nonnegative = Annotated[float, Field(ge=0.0, allow_inf_nan=False)]
-Positive = Annotated[float, Field(gt=0.0, allow_inf_nan=False)]
-Finite = Annotated[float, Field(allow_inf_nan=False)]
+# Strict: "1.2" in quotes and true are no numbers; 1 is one.
+Finite = Annotated[float, Field(strict=True, allow_inf_nan=False)]
+Nonnegative = Annotated[Finite, Field(ge=0.0)]
+Positive = Annotated[Finite, Field(gt=0.0)]
+Share = Annotated[Finite, Field(ge=0.0, le=1.0)]
+OpenShare = Annotated[Finite, Field(gt=0.0, lt=1.0)]
+BelowOne = Annotated[Finite, Field(ge=0.0, lt=1.0)]
+PerMillion = Annotated[Finite, Field(gt=0.0, lt=1e6)]
+Factor = Annotated[Finite, Field(ge=1.0)]
+Count = Annotated[int, Field(strict=True, ge=1)]
+Flag = Annotated[bool, Field(strict=True)]
+Name = Annotated[str, Field(strict=True, min_length=1)]
 Evidence = Literal["measured", "quoted", "judged"]
 YieldName = Literal["final_yield", "rolled_yield", "shipped_yield"]
 YIELD_NAMES: tuple[YieldName, ...] = ("final_yield", "rolled_yield", "shipped_yield")
@@ -28,7 +36,7 @@ class Table(BaseModel):
 class Capability(Table):
     """A capability as quoted, in exactly one of the accepted forms (see `level.resolve`)."""
 
-    sigma_level: Finite | None = None
+    sigma_level: Positive | None = None
     cp: Positive | None = None
     cpk: Finite | None = None
     pp: Positive | None = None
@@ -37,19 +45,19 @@ class Capability(Table):
     usl: Finite | None = None
     mean: Finite | None = None
     std: Positive | None = None
-    yield_: float | None = Field(None, gt=0.0, lt=1.0, alias="yield")
-    defect_rate: float | None = Field(None, gt=0.0, lt=1.0)
-    dpmo: float | None = Field(None, gt=0.0, lt=1e6)
-    item_yield: float | None = Field(None, gt=0.0, lt=1.0)
-    ppm: float | None = Field(None, gt=0.0, lt=1e6)
-    bad: int | None = Field(None, ge=0)
-    of: int | None = Field(None, ge=1)
+    yield_: OpenShare | None = Field(None, alias="yield")
+    defect_rate: OpenShare | None = None
+    dpmo: PerMillion | None = None
+    item_yield: OpenShare | None = None
+    ppm: PerMillion | None = None
+    bad: int | None = Field(None, strict=True, ge=0)
+    of: Count | None = None
     data: str | None = None
     column: str | None = None
     shift: Nonnegative | None = None
-    k: float | None = Field(None, ge=0.0, lt=1.0)
+    k: BelowOne | None = None
     sides: Literal[1, 2] | None = None
-    sample: int | None = Field(None, ge=2)
+    sample: int | None = Field(None, strict=True, ge=2)
 
 
 class Inspection(Table):
@@ -57,7 +65,7 @@ class Inspection(Table):
 
     finds: Share = 1.0
     earlier: Share = 0.0
-    rejects_good: float = Field(0.0, ge=0.0, lt=1.0)
+    rejects_good: BelowOne = 0.0
     rejects_lost: Share = 1.0
     per_item: Nonnegative = 0.0
     share_inspected: Share = 1.0
@@ -73,9 +81,9 @@ class Rework(Table):
 class Floor(Table):
     """A level that binds whatever money says; exactly one of the three."""
 
-    cpk: Finite | None = None
-    sigma_level: Finite | None = None
-    dpmo: float | None = Field(None, gt=0.0, lt=1e6)
+    cpk: Positive | None = None
+    sigma_level: Positive | None = None
+    dpmo: PerMillion | None = None
 
 
 class Quote(Capability):
@@ -84,6 +92,14 @@ class Quote(Capability):
     price: Nonnegative | None = None
     per_year: Nonnegative | None = None
     per_item: Nonnegative | None = None
+
+
+NUMBER_TAG, TABLE_TAG = "<number>", "<table>"
+"""Names of the two forms of `up_to` in pydantic's errors; no key can be spelled like them."""
+
+
+def _form_of_cap(value: object) -> str:
+    return TABLE_TAG if isinstance(value, (dict, Capability)) else NUMBER_TAG
 
 
 class Law(Table):
@@ -97,15 +113,20 @@ class Law(Table):
     per_item: Nonnegative | None = None
     life_years: Positive | None = None
     at: Capability | None = None
-    up_to: Finite | Capability | None = None
+    up_to: (
+        Annotated[
+            Annotated[Positive, Tag(NUMBER_TAG)] | Annotated[Capability, Tag(TABLE_TAG)], Discriminator(_form_of_cap)
+        ]
+        | None
+    ) = None
     points: tuple[Quote, ...] = ()
 
 
 class Copies(Table):
     """Redundancy: `installed` items of which `needed` must be good, with a common-cause share."""
 
-    installed: int = Field(ge=1)
-    needed: int = Field(ge=1)
+    installed: Count
+    needed: Count
     common_cause: Share = 0.0
 
 
@@ -122,22 +143,22 @@ class Costs(Table):
 class Purchase(Costs):
     """Bought once, used by every alternative that names it."""
 
-    name: str
+    name: Name
 
 
 class Alternative(Costs):
     """One thing a step could change, in a group of which at most one is chosen."""
 
-    name: str
-    group: str = "machine"
+    name: Name
+    group: Name = "machine"
     uses: str | None = None
     per_item: Finite = 0.0
     price_allowance: Finite = 0.0
     capability: Capability | None = None
-    k: float | None = Field(None, ge=0.0, lt=1.0)
+    k: BelowOne | None = None
     shift: Nonnegative | None = None
-    widen: float | None = Field(None, ge=1.0, allow_inf_nan=False)
-    opportunities: float | None = Field(None, gt=0.0, allow_inf_nan=False)
+    widen: Factor | None = None
+    opportunities: Positive | None = None
     copies: Copies | None = None
     inspection: Inspection | None = None
     rework: Rework | None = None
@@ -146,7 +167,7 @@ class Alternative(Costs):
 class Step(Table):
     """One step (or bought part): it ends in a gate and feeds exactly one later step."""
 
-    name: str
+    name: Name
     supplier: str | None = None
     feeds: str | None = None
     per_unit: Positive = 1.0
@@ -158,8 +179,8 @@ class Step(Table):
     inspection: Inspection | None = None
     rework: Rework | None = None
     at_least: Floor | None = None
-    safety: bool = False
-    fixed: bool = False
+    safety: Flag = False
+    fixed: Flag = False
     improve: Law | None = None
     alternative: tuple[Alternative, ...] = ()
 
@@ -169,7 +190,7 @@ class Demand(Table):
 
     shipped_per_year: Positive
     years: Positive | None = None
-    discount_rate: float | None = Field(None, ge=0.0, allow_inf_nan=False)
+    discount_rate: Nonnegative | None = None
 
 
 class Target(Table):
@@ -196,8 +217,8 @@ class Default(Table):
     shift: Nonnegative | None = None
 
 
-class Scenario(Table):
-    """One product, one volume: everything the user wrote, already checked."""
+class Head(Table):
+    """Everything of a scenario but its steps."""
 
     title: str = ""
     currency: str = "EUR"
@@ -206,5 +227,10 @@ class Scenario(Table):
     limits: Limits = Field(default_factory=Limits)
     default: Default = Field(default_factory=Default)
     purchase: tuple[Purchase, ...] = ()
+
+
+class Scenario(Head):
+    """One product, one volume: everything the user wrote, already checked."""
+
     step: tuple[Step, ...] = Field(min_length=1)
     file: str = ""

@@ -1,0 +1,125 @@
+"""Do the keys of a law of improvement fit together, and does its `at` lie above today's level."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+from allocator.errors import RangeError
+from allocator.scenario.forms import Remark, form_remarks
+from allocator.scenario.level import Level, given, resolve
+from allocator.scenario.model import Capability, Law, Step
+
+SCALES = ("price", "per_year", "per_item")
+PARAMETER = {"power": "exponent", "exponential": "rate"}
+ONE_SCALE = "give exactly one of price, per_year, per_item"
+
+
+def law_remarks(law: Law) -> list[Remark]:
+    """Return what is wrong with the keys of a law, taken by itself."""
+    remarks = _parameter_remarks(law)
+    remarks += _quote_remarks(law) if law.law == "quotes" else _scale_remarks(law)
+    for key, level in (("at", law.at), ("up_to", law.up_to)):
+        if isinstance(level, Capability):
+            remarks += quoted_remarks(key, level)
+    return remarks
+
+
+def quoted_remarks(key: str, level: Capability) -> list[Remark]:
+    """Return what is wrong with a level quoted inside a law."""
+    if level.data is not None:
+        return [(f"{key}.data", "a file of measurements", "quote the level itself, as { cpk = 1.67 } or { dpmo = 20 }")]
+    return [(f"{key}.{below}".rstrip("."), found, allowed) for below, found, allowed in form_remarks(level)]
+
+
+def _parameter_remarks(law: Law) -> list[Remark]:
+    needed = PARAMETER.get(law.law)
+    remarks: list[Remark] = []
+    for key, value in (("exponent", law.exponent), ("rate", law.rate)):
+        if key == needed and value is None:
+            remarks.append((key, "nothing", f"law '{law.law}' needs it, a number above 0"))
+        if key != needed and value is not None:
+            takes = f"takes {needed}" if needed else "takes neither exponent nor rate"
+            remarks.append((key, f"{value:g}", f"leave it out: law '{law.law}' {takes}"))
+    return remarks
+
+
+def _scales(law: object) -> list[str]:
+    return [key for key in SCALES if getattr(law, key) is not None]
+
+
+def _scale_remarks(law: Law) -> list[Remark]:
+    remarks: list[Remark] = []
+    if law.points:
+        remarks.append(("points", "a list", f"leave it out: only law 'quotes' takes points, this is '{law.law}'"))
+    scales = _scales(law)
+    if len(scales) != 1:
+        remarks.append(("", " and ".join(scales) or "no price, per_year or per_item", ONE_SCALE))
+    return remarks
+
+
+def _quote_remarks(law: Law) -> list[Remark]:
+    remarks: list[Remark] = []
+    if law.at is not None:
+        remarks.append(("at", "a table", "leave it out: law 'quotes' takes its levels from its points"))
+    remarks += [(key, f"{getattr(law, key):g}", "leave it out: every point states its own") for key in _scales(law)]
+    if not law.points:
+        remarks.append(("points", "nothing", "give at least one, as points = [{ cpk = 1.67, price = 80_000 }]"))
+    kinds = [_scales(point) for point in law.points]
+    for number, (point, scales) in enumerate(zip(law.points, kinds, strict=True), start=1):
+        remarks += quoted_remarks(f"points.{number}", point)
+        if len(scales) != 1:
+            found = " and ".join(scales) or "no price, per_year or per_item"
+            remarks.append((f"points.{number}", found, ONE_SCALE))
+    return remarks + _mixed_scales(kinds)
+
+
+def _mixed_scales(kinds: Sequence[list[str]]) -> list[Remark]:
+    used = dict.fromkeys(key for scales in kinds if len(scales) == 1 for key in scales)
+    if len(used) < 2:
+        return []
+    return [("points", " in one point, ".join(used) + " in another", "state all points of a law on the same scale")]
+
+
+def start_remarks(step: Step, law: Law, default_shift: float | None) -> list[Remark]:
+    """Return what is wrong between a sound law and the step's sound capability: where the law starts from."""
+    needs_positive = law.law == "power" and _may_be_negative(step.capability)
+    if law.at is None and not needs_positive:
+        return []
+    try:
+        today = resolve(step.capability, step.opportunities, None, default_shift)
+        remarks = _power_remarks(today) if needs_positive else []
+        return remarks + (_at_remarks(law.at, step, today) if law.at is not None else [])
+    except RangeError as error:
+        return [("at", str(error), "check the figures")]
+
+
+def _may_be_negative(capability: Capability) -> bool:
+    """Only a count of mostly bad opportunities stands for a sigma level of 0 or less."""
+    if any(good is not None and good <= 0.5 for good in (capability.yield_, capability.item_yield)):
+        return True
+    if (capability.defect_rate or 0.0) >= 0.5 or max(capability.dpmo or 0.0, capability.ppm or 0.0) >= 0.5e6:
+        return True
+    return capability.bad is not None and capability.of is not None and 2 * capability.bad >= capability.of
+
+
+def _power_remarks(today: Level) -> list[Remark]:
+    if today.sigma_level > 0.0:
+        return []
+    found = f"law 'power' from a sigma level of {today.sigma_level:.4g}"
+    return [("law", found, "a power needs a level above 0 to start from: use 'exponential', 'decade' or 'quotes'")]
+
+
+def _at_remarks(at: Capability, step: Step, today: Level) -> list[Remark]:
+    """`at` lies above today's level when its defect probability is lower."""
+    there = resolve(at, step.opportunities, today)
+    if there.log_p < today.log_p:
+        return []
+    stated = ", ".join(f"{key.rstrip('_')} = {getattr(at, key):g}" for key in given(at, FIGURES))
+    found = f"{{ {stated} }}, sigma level {there.sigma_level:.4g}, where today's is {today.sigma_level:.4g}"
+    return [("at", found, "the level that the price leads to must lie above today's level")]
+
+
+FIGURES = (
+    "sigma_level", "cp", "cpk", "pp", "ppk", "lsl", "usl", "mean", "std", "yield_", "defect_rate", "dpmo", "item_yield",
+    "ppm", "bad", "of",
+)  # fmt: skip

@@ -1,0 +1,204 @@
+"""What stands in a table of steps or alternatives: CSV columns to the same nested keys as in the scenario file."""
+
+from __future__ import annotations
+
+import csv
+import io
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any
+
+from allocator.errors import Fault, InputError
+from allocator.scenario.faults import SHOWN, did_you_mean, hint
+from allocator.scenario.model import Alternative, Step
+from allocator.scenario.schema import columns, spec
+
+SEPARATORS = ";,\t"
+TRUTHS = {"true": True, "yes": True, "false": False, "no": False}
+Cells = list[list[str]]
+
+
+@dataclass
+class TableRead:
+    """The rows of one table as nested dicts, the row that each was written in, and what is wrong with its columns.
+
+    `lost` are the first keys of columns that could not be used: their absence must not be reported again.
+    """
+
+    file: str
+    records: list[dict[str, Any]] = field(default_factory=list)
+    rows: list[int] = field(default_factory=list)
+    owners: list[str] = field(default_factory=list)
+    faults: list[Fault] = field(default_factory=list)
+    lost: set[str] = field(default_factory=set)
+
+
+def read_text(path: Path, name: str) -> str:
+    """Return a file's text, or say in one fault (InputError) why it cannot be read."""
+    try:
+        data = path.read_bytes()
+    except FileNotFoundError:
+        raise _refused(name, "no such file", f"check the name; the folder is {path.parent.resolve()}") from None
+    except IsADirectoryError:
+        raise _refused(name, "a folder", "name a file") from None
+    except OSError as error:
+        raise _refused(name, error.strerror or "an error", "make the file readable") from None
+    try:
+        text = data.decode("utf-8-sig")
+    except UnicodeDecodeError as error:
+        line = data.count(b"\n", 0, error.start) + 1
+        raise _refused(name, f"bytes on line {line} that are no UTF-8", "save the file as UTF-8") from None
+    if not text.strip():
+        raise _refused(name, "an empty file", "write the table, or name another file")
+    return text
+
+
+def _refused(name: str, found: str, allowed: str) -> InputError:
+    return InputError([Fault(name, "", found, allowed)])
+
+
+def read_cells(text: str) -> Cells:
+    """Return header and rows; the separator is the one that the header line has most of."""
+    header = text.lstrip("\r\n").splitlines()[0]
+    separator = max(SEPARATORS, key=header.count) if any(s in header for s in SEPARATORS) else ","
+    return list(csv.reader(io.StringIO(text, newline=""), delimiter=separator))
+
+
+def read_table(path: Path, name: str, record: type[Step] | type[Alternative]) -> TableRead:
+    """Return the rows of a table of steps, or of alternatives (whose column `step` names the step).
+
+    Values that do not convert stay texts, for the check of the keys to report with their row.
+
+    Raises
+    ------
+    InputError
+        When the file cannot be read as a table at all.
+    """
+    if path.suffix.lower() in (".xlsx", ".xls", ".ods") or "#" in name:
+        raise _refused(name, "a workbook", "save the sheet as CSV (UTF-8) and name that file")
+    try:
+        cells = read_cells(read_text(path, name))
+    except csv.Error as error:
+        raise _refused(name, f"a table that cannot be read ({error})", "save the sheet as CSV (UTF-8)") from None
+    table = TableRead(name)
+    written = [(number, row) for number, row in enumerate(cells, start=1) if row and any(map(str.strip, row))]
+    header, body = [cell.strip() for cell in written[0][1]], written[1:]
+    table.rows = [number for number, _ in body]
+    _refuse_long_rows(table, body, len(header))
+    used = _usable_columns(table, header, record)
+    width = len(header)
+    full = [row if len(row) == width else (row + [""] * width)[:width] for _, row in body]
+    if record is Alternative:
+        at = header.index("step") if "step" in header else None
+        table.owners = [row[at].strip() if at is not None else "" for row in full]
+    filled = {keys: _converted([row[i] for row in full], record, keys) for i, keys in used.items()}
+    table.records = _nested(filled, len(body))
+    return table
+
+
+def _refuse_long_rows(table: TableRead, body: Sequence[tuple[int, list[str]]], width: int) -> None:
+    long = [number for number, row in body if len(row) > width and any(map(str.strip, row[width:]))]
+    if long:
+        more = f" and {len(long) - SHOWN:,} more" if len(long) > SHOWN else ""
+        places = ", ".join(f"row {number}" for number in long[:SHOWN]) + more
+        allowed = f"the header names {width} columns; put a text that holds the separator in quotes"
+        table.faults.append(Fault(f"{table.file}, {places}", "", "more cells than columns", allowed))
+
+
+def _usable_columns(
+    table: TableRead, header: list[str], record: type[Step] | type[Alternative]
+) -> dict[int, tuple[str, ...]]:
+    """Return the path of keys of every column that can be used; the others are reported once each."""
+    known = columns(record)
+    used: dict[int, tuple[str, ...]] = {}
+    for i, name in enumerate(header):
+        if record is Alternative and name == "step" and "step" not in header[:i]:
+            continue
+        path = known.get(name)
+        if path is None:
+            _report_column(table, name, i, known)
+        elif path in used.values():
+            table.faults.append(Fault(table.file, f"column '{name}'", "the same column twice", "keep one of the two"))
+        else:
+            used[i] = path
+    if record is Alternative and "step" not in header:
+        allowed = "add a column `step` with the name of the step that each alternative belongs to"
+        table.faults.append(Fault(table.file, "column 'step'", "nothing", allowed))
+    return used
+
+
+def _report_column(table: TableRead, name: str, position: int, known: dict[str, tuple[str, ...]]) -> None:
+    if not name:
+        allowed = "name the column, or delete it"
+        table.faults.append(Fault(table.file, f"column {position + 1}", "a column without a name", allowed))
+        return
+    otherwise = "a column bears the name of a key, as name, cost_added, cp, inspection.finds, improve.law"
+    table.faults.append(
+        Fault(table.file, f"column '{name}'", "an unknown column", did_you_mean(name, known, otherwise))
+    )
+    near = hint(name, known)
+    table.lost.add(known[near][0] if near else name)
+
+
+def _converted(cells: Sequence[str], record: type[Step] | type[Alternative], path: tuple[str, ...]) -> list[Any]:
+    kinds = spec(record, path).kinds
+    if "number" in kinds:
+        return _each(cells, float)
+    if "integer" in kinds:
+        return _each(cells, _whole)
+    if "boolean" in kinds:
+        return _each(cells, lambda cell: TRUTHS[cell.strip().lower()])
+    return [cell.strip() or None for cell in cells]
+
+
+def _each(cells: Sequence[str], convert: Callable[[str], Any]) -> list[Any]:
+    """Convert a column at once; only where that fails look at every cell, and leave as text what does not convert."""
+    try:
+        return [convert(cell) if cell else None for cell in cells]
+    except (ValueError, KeyError):
+        return [_one(cell.strip(), convert) for cell in cells]
+
+
+def _one(cell: str, convert: Callable[[str], Any]) -> Any:
+    try:
+        return convert(cell) if cell else None
+    except (ValueError, KeyError):
+        return cell
+
+
+def _whole(cell: str) -> int | float:
+    """Return a whole number; 120.0, as sheets write it, is 120, and 120.5 stays for the check to refuse."""
+    try:
+        return int(cell)
+    except ValueError:
+        number = float(cell)
+        return int(number) if number.is_integer() else number
+
+
+def _nested(filled: dict[tuple[str, ...], list[Any]], count: int) -> list[dict[str, Any]]:
+    """Return one nested dict per row; cells that are empty, and tables all empty, are left out."""
+    inner: dict[str, dict[tuple[str, ...], list[Any]]] = {}
+    for path, values in filled.items():
+        if len(path) > 1:
+            inner.setdefault(path[0], {})[path[1:]] = values
+    merged = {path[0]: values for path, values in filled.items() if len(path) == 1}
+    for key, deeper in inner.items():
+        tables = [table or None for table in _nested(deeper, count)]
+        merged[key] = list(map(_number_or_table, merged[key], tables)) if key in merged else tables
+    if not merged:
+        return [{} for _ in range(count)]
+    keys = tuple(merged)
+    if not any(None in values for values in merged.values()):
+        return [dict(zip(keys, row, strict=True)) for row in zip(*merged.values(), strict=True)]
+    return [
+        {key: value for key, value in zip(keys, row, strict=True) if value is not None}
+        for row in zip(*merged.values(), strict=True)
+    ]
+
+
+def _number_or_table(number: Any, table: dict[str, Any] | None) -> Any:
+    """Return the one that is given; both together stay a list, for the check of the keys to refuse."""
+    if number is not None and table is not None:
+        return [number, table]
+    return table if number is None else number
