@@ -260,12 +260,14 @@ def _with_next_nine(plan: Plan, problem: Problem, solved: Solved) -> Plan:
     if budget is None:
         return plan
     next_budget = -math.log1p(-0.1 * -math.expm1(-budget))
-    start = rows_in(problem, solved)
-    further = solve(problem.with_budget(problem.split, next_budget), [start])
-    if further.outcome is not None:
+    best = solve(problem.best_of(problem.split), [rows_in(problem, solved)])
+    assert best.outcome is not None, "the plan itself keeps every other limit"
+    if best.outcome.loads[problem.split] <= next_budget:
+        further = solve(problem.with_budget(problem.split, next_budget), [rows_in(problem, best)])
+        assert further.outcome is not None
         return replace(plan, cost_of_next_nine=further.outcome.money.total - solved.outcome.money.total)
-    best = best_reachable(problem)
-    return replace(plan, best_reachable=summarise(problem, best, binding_steps(problem, best, next_budget)))
+    highest = cheapest_at(problem, best)
+    return replace(plan, best_reachable=summarise(problem, highest, binding_steps(problem, highest, next_budget)))
 
 
 def _with_cautions(plan: Plan, problem: Problem) -> Plan:

@@ -6,7 +6,6 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.optimize import brentq
 
 from allocator import curves as cv
 from allocator.curves import Curves
@@ -72,6 +71,8 @@ def _curvature(curve: Curves, levels: Array) -> Array:
 
 
 def _sign_changes(curve: Curves, levels: Array, bend: Array) -> list[float]:
+    from scipy.optimize import brentq  # here, because its import costs 0.2 s and few laws need it
+
     changes = np.flatnonzero((bend[:-1] < 0.0) != (bend[1:] < 0.0))
     return [
         float(brentq(lambda z: _curvature(curve, np.array([z]))[0], levels[i], levels[i + 1], xtol=1e-13))

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import time
+from collections.abc import Iterable
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -17,6 +18,8 @@ from allocator.solve.rows import Master, build_master
 
 Array = NDArray[np.float64]
 ROUNDS_RELAXED = 14
+ROUNDED_AT = (1, 4)
+"""Rounds after which the relaxation's rounding is worth an exact solve, beside the last."""
 ROUNDS_INTEGER = 25
 SETTLED = 1e-9
 """The relaxation has settled when a round lifts its bound by less than this share."""
@@ -30,6 +33,15 @@ class Search:
     best: FixedAnswer | None
     bound: float
     tried: dict[bytes, FixedAnswer | None]
+    enough: float | None = None
+
+    def done(self, gap: float) -> bool:
+        """Return whether the gap is closed, or what was asked (`enough`) is decided either way."""
+        if self.best is None:
+            return False
+        if self.enough is not None and (self.value(self.best) <= self.enough or self.bound > self.enough * (1.0 + 1e-9)):
+            return True
+        return self.gap <= gap
 
     def offer(self, rows: NDArray[np.int64]) -> FixedAnswer | None:
         """Solve for one way per step (once) and keep it if it is the best so far."""
@@ -54,7 +66,9 @@ class Search:
         return (value - self.bound) / max(abs(value), least)
 
 
-def solve_mixed(problem: Problem, starts: list[NDArray[np.int64]], gap: float, seconds: float) -> Search:
+def solve_mixed(
+    problem: Problem, starts: Iterable[NDArray[np.int64]], gap: float, seconds: float, enough: float | None = None
+) -> Search:
     """Search for the best choice and prove it.
 
     Parameters
@@ -66,17 +80,21 @@ def solve_mixed(problem: Problem, starts: list[NDArray[np.int64]], gap: float, s
         Relative gap aimed at.
     seconds : float
         Time after which the best so far is returned with the gap proven by then.
+    enough : float, optional
+        Stop as soon as a choice is at or below this value, or none can be.
     """
     began = time.monotonic()
-    search = Search(problem, None, -np.inf, {})
+    search = Search(problem, None, -np.inf, {}, enough)
     for rows in starts:
         search.offer(rows)
+        if search.done(gap):
+            return search
     if search.best is None:
         return search
     master = _master(search)
     fixed_out = _relax(search, master, gap)
     rounds = 0
-    while search.gap > gap and rounds < ROUNDS_INTEGER:
+    while not search.done(gap) and rounds < ROUNDS_INTEGER:
         left = seconds - (time.monotonic() - began)
         if left <= 0.5 or not _branch(search, master, fixed_out, gap, left):
             break
@@ -119,7 +137,7 @@ def _relax(search: Search, master: Master, gap: float) -> NDArray[np.bool_]:
     """Tighten the relaxation, try its roundings, and return the ways that its reduced costs exclude."""
     excluded = np.zeros(len(search.problem.options.ways), dtype=bool)
     before = -np.inf
-    for _ in range(ROUNDS_RELAXED):
+    for turn in range(ROUNDS_RELAXED):
         rows = master.rows()
         answer = solve_rows(rows, integer=False)
         if answer is None:
@@ -127,14 +145,21 @@ def _relax(search: Search, master: Master, gap: float) -> NDArray[np.bool_]:
         bound = answer.bound * master.objective_scale
         search.bound = max(search.bound, bound)
         added = cuts_at(master, answer.x)
-        rounded = search.offer(_rounded(search.problem, master, answer.x))
-        if rounded is not None:
-            cuts_for_choice(master, rounded.outcome.choice.rows, rounded.outcome.flow.intensity, rounded.outcome.flow.exponent)
+        settled = added == 0 or bound - before <= SETTLED * abs(bound)
+        if settled or turn in ROUNDED_AT:
+            _offer_rounded(search, master, answer.x)
         excluded |= _excluded(search, master, rows, answer, bound)
-        if search.gap <= gap or added == 0 or bound - before <= SETTLED * abs(bound):
+        if search.done(gap) or settled:
             break
         before = bound
     return excluded
+
+
+def _offer_rounded(search: Search, master: Master, x: Array) -> None:
+    """Offer the choice nearest to a relaxed answer and teach the master its exact value."""
+    rounded = search.offer(_rounded(search.problem, master, x))
+    if rounded is not None:
+        cuts_for_choice(master, rounded.outcome.choice.rows, rounded.outcome.flow.intensity, rounded.outcome.flow.exponent)
 
 
 def _excluded(search: Search, master: Master, rows: Rows, answer: Answer, bound: float) -> NDArray[np.bool_]:

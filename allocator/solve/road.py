@@ -31,7 +31,7 @@ class Solved:
     """The best choice found, its proven bound and gap, and the price of each limit; no outcome when infeasible.
 
     `blocked` names the limit (a yield, "capital" or "cost") that no choice keeps beside the ones before it, and `least`
-    the lowest value it can take.
+    a value that it cannot go below.
     """
 
     problem: Problem
@@ -64,7 +64,7 @@ def solve(problem: Problem, starts: list[NDArray[np.int64]] | None = None) -> So
     return replace(solved, seconds=time.monotonic() - began)
 
 
-def _by_size(problem: Problem, starts: list[NDArray[np.int64]]) -> Solved | None:
+def _by_size(problem: Problem, starts: list[NDArray[np.int64]], enough: float | None = None) -> Solved | None:
     """Solve choice by choice or by branch and bound; None when no choice that keeps the limits is known."""
     by_step = ways_by_step(problem)
     choices = math.prod(len(mine) for mine in by_step)
@@ -72,7 +72,9 @@ def _by_size(problem: Problem, starts: list[NDArray[np.int64]]) -> Solved | None
     if choices <= (SMALL_MOVING if moving else SMALL_STILL):
         return _every_choice(problem, by_step, choices)
     gap = GAP if len(problem.options.ways) <= LARGE else GAP_LARGE
-    search = solve_mixed(problem, [*starts, *first_choices(problem)], gap, SECONDS)
+    search = solve_mixed(problem, starts or first_choices(problem), gap, SECONDS, enough)
+    if search.best is None and starts:
+        search = solve_mixed(problem, first_choices(problem), gap, SECONDS, enough)
     if search.best is None:
         return None
     return _solved(problem, search.best, search.bound, "cutting planes and branch and bound")
@@ -106,13 +108,13 @@ def _first_feasible(problem: Problem) -> Solved:
     starts: list[NDArray[np.int64]] = []
     solved = Solved(problem, None, math.nan, math.nan, None, "", 0.0)
     for name, limit in limits:
-        found = _by_size(replace(kept, objective=name), starts)
+        found = _by_size(replace(kept, objective=name), starts, enough=limit)
         assert found is not None, "the limits taken on so far were kept by an earlier choice"
         assert found.outcome is not None
         solved = found
         least = found.outcome.value(name)
         if not within(least, limit):
-            return Solved(problem, None, solved.bound, solved.gap, None, solved.method, 0.0, name, least)
+            return Solved(problem, None, solved.bound, solved.gap, None, solved.method, 0.0, name, solved.bound)
         starts = [found.outcome.choice.rows]
         if name == CAPITAL:
             kept = replace(kept, capital=limit)
