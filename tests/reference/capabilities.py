@@ -39,8 +39,11 @@ def today(rng: random.Random, p: float, opportunities: int, default_shift: float
         return {whole: cp, near: _round(cp * (1 - k), 7)} | told
     if form in ("limits", "one limit"):
         return _limits(rng, form, p, k, shift) | told
+    near_level = z_for(p, 0.0, 0.0 if form == "ppk" else shift, 1)
+    if form in ("cpk", "ppk") and near_level > 0.1:
+        return {form: _round(near_level / 3)} | told
     if form in ("cpk", "ppk"):
-        return {form: _round(z_for(p, 0.0, 0.0 if form == "ppk" else shift, 1) / 3)} | told
+        form = "yield"
     if rng.random() < 0.3:
         told["sides"] = 2
         if k:
@@ -89,7 +92,8 @@ def better(rng: random.Random, step: dict, state: State) -> dict:
         return {form: _round(z * (1 - state.k) / 3)}
     if form == "cp cpk":
         k = state.k * rng.uniform(0.5, 1)
-        return {"cp": _round(z / 3), "cpk": _round(z / 3 * (1 - k), 7)}
+        cp = _round(z / 3)
+        return {"cp": cp, "cpk": _round(cp * (1 - k), 7)}
     if form == "limits":
         k = state.k * rng.uniform(0.5, 1)
         return {"lsl": -_round(z), "usl": _round(z), "mean": k * _round(z), "std": 1.0}

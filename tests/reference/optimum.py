@@ -24,6 +24,10 @@ SEEDS = range(240)
 HARD_SEEDS = range(1000, 1040)
 BUDGET_SLACK = 1e-9
 """Relative, for asking again at a yield just found to be the best."""
+NO_DEFECTS = 1e-15
+"""A budget of exactly nothing has no relative slack."""
+LOOSE = 1e-6
+"""Relative, for the softness of that answer."""
 
 
 def optimum(scenario: dict, of: str | None = None, targets: dict | None = None) -> dict:
@@ -41,19 +45,41 @@ def best_reachable(
 ) -> dict:
     """Highest yield `of` with floors, capital limit (and other targets) kept; and the least cost of getting it.
 
-    Returns {"yield", "loss", "exponent", "total", "choice"}, all None where even what is kept cannot be met.
+    Returns {"yield", "loss", "exponent", "total", "choice", "total_from", "total_to"}, all None where even what is kept
+    cannot be met.
     """
     of = of or split_target(scenario)
     kept = target_yields(scenario, targets) if keep_others else {}
     budgets = {name: -math.log(goal) for name, goal in kept.items() if name != of}
     best = _search(scenario, budgets, of, of)
     if best["choice"] is None:
-        return {"yield": None, "loss": None, "exponent": None, "total": None, "choice": None}
+        return dict.fromkeys(("yield", "loss", "exponent", "total", "choice", "total_from", "total_to"))
     exponent = best["total"]
-    budgets[of] = exponent * (1 + BUDGET_SLACK)
-    cheapest = _search(scenario, budgets, "cost", of) if exponent > 0 else optimum(scenario, of, {})
     found = {"yield": math.exp(-exponent), "loss": -math.expm1(-exponent), "exponent": exponent}
-    return found | {"total": cheapest["total"], "choice": cheapest["choice"]}
+    return found | _least_cost_there(scenario, budgets, of, exponent)
+
+
+def _least_cost_there(scenario: dict, budgets: dict[str, float], of: str, exponent: float) -> dict:
+    """Least cost at the best yield, and the range in which it lies.
+
+    A step whose defects no longer count costs what the last part in 10⁹ of the budget allows, so the figure is soft:
+    from below by the cost with a little more budget, from above by everything at its cap.
+    """
+    exponent = max(exponent, NO_DEFECTS)
+    budgets = budgets | {of: exponent * (1 + BUDGET_SLACK)}
+    cheapest = _search(scenario, budgets, "cost", of)
+    loose = _search(scenario, budgets | {of: exponent * (1 + LOOSE)}, "cost", of)
+    capped = [
+        problem.cost(problem.low)
+        for problem in combinations(scenario)
+        if all(problem.exponent(name, problem.low) <= budget for name, budget in budgets.items())
+    ]
+    return {
+        "total": cheapest["total"],
+        "choice": cheapest["choice"],
+        "total_from": loose["lower"],
+        "total_to": max(min(capped, default=cheapest["total"]), cheapest["total"]),
+    }
 
 
 def combinations(scenario: dict) -> Iterator[Combination]:
@@ -101,7 +127,8 @@ def row_of(seed: int) -> dict:
         "total": best["total"],
         "lower": best["lower"],
         "best_loss": reach["loss"],
-        "best_total": reach["total"],
+        "best_from": reach["total_from"],
+        "best_to": reach["total_to"],
     }
     told = {key: repr(value) if isinstance(value, float) else value for key, value in told.items()}
     return told | {"seconds": round(time.perf_counter() - start, 2)}
