@@ -1,1 +1,61 @@
-"""From one promised yield to the cheapest quality target for every step and supplier."""
+"""From one promised yield to the cheapest quality target for every step and supplier.
+
+>>> import allocator
+>>> scenario = allocator.read_scenario("scenarios/latch.toml")  # doctest: +SKIP
+>>> plan = allocator.make_plan(scenario)  # doctest: +SKIP
+"""
+
+from __future__ import annotations
+
+import importlib
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from allocator.check import check_scenario
+    from allocator.errors import AllocatorError, InputError
+    from allocator.nines import price_nines
+    from allocator.plan import make_plan
+    from allocator.results import Check, Nines, Plan, Today
+    from allocator.scenario.model import Scenario
+    from allocator.scenario.read import read_scenario, scenario_from_dict
+    from allocator.today import see_today
+
+_HOMES = {
+    "AllocatorError": "errors",
+    "Check": "results",
+    "InputError": "errors",
+    "Nines": "results",
+    "Plan": "results",
+    "Scenario": "scenario.model",
+    "Today": "results",
+    "check_scenario": "check",
+    "make_plan": "plan",
+    "price_nines": "nines",
+    "read_scenario": "scenario.read",
+    "scenario_from_dict": "scenario.read",
+    "see_today": "today",
+}
+
+__all__ = [
+    "AllocatorError",
+    "Check",
+    "InputError",
+    "Nines",
+    "Plan",
+    "Scenario",
+    "Today",
+    "check_scenario",
+    "make_plan",
+    "price_nines",
+    "read_scenario",
+    "scenario_from_dict",
+    "see_today",
+]
+__version__ = "0.1.0"
+
+
+def __getattr__(name: str) -> Any:
+    """Import a public name when it is first asked for, so that `import allocator` and `--help` stay light."""
+    if name not in _HOMES:
+        raise AttributeError(f"module 'allocator' has no attribute '{name}'")
+    return getattr(importlib.import_module(f"allocator.{_HOMES[name]}"), name)

@@ -31,12 +31,19 @@ def check_scenario(scenario: Scenario) -> Check:
         file=scenario.file,
         steps=tuple(
             Understood(
-                step=step.name, supplier=step.supplier, feeds=_feeds(problem, i),
-                items_per_unit=float(problem.line.per_finished[i]), opportunities=step.opportunities, level=levels[i],
-                given=given_as(step.capability), lost_when_scrapped=float(problem.line.lost[i]),
-                net_cost_added=float(problem.line.net_cost[i]), ways=sum(1 for _ in combinations(step)),
-                improves=_law_words(problem, step, i), inspection=_inspection_words(problem.options.today[i].inspection),
-            )  # fmt: skip
+                step=step.name,
+                supplier=step.supplier,
+                feeds=_feeds(problem, i),
+                items_per_unit=float(problem.line.per_finished[i]),
+                opportunities=step.opportunities,
+                level=levels[i],
+                given=given_as(step.capability),
+                lost_when_scrapped=float(problem.line.lost[i]),
+                net_cost_added=float(problem.line.net_cost[i]),
+                ways=sum(1 for _ in combinations(step)),
+                improves=_law_words(problem, step, i),
+                inspection=_inspection_words(problem.options.today[i].inspection),
+            )
             for i, step in enumerate(scenario.step)
         ),
         targets={name: math.exp(-budget) for name, budget in problem.budgets.items()},

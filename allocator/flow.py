@@ -57,8 +57,8 @@ class Line:
 class Gates:
     """One gate per step, its inspected share already multiplied in; all arrays of shape (n_steps,).
 
-    `finds`, `earlier`, `rejects` (good items rejected), `lost` (share of these really lost), `reworked` (share ρ of what
-    is found) are shares; `rework_cost` and `per_item` are [currency/item].
+    `finds`, `earlier`, `rejects` (good items rejected), `lost` (share of these really lost), `reworked` (share ρ of
+    what is found) are shares; `rework_cost` and `per_item` are [currency/item].
     """
 
     finds: Array
@@ -243,7 +243,7 @@ def scrap_cost(line: Line, exponent: Array) -> Array:
 
 
 def scrap_lost_at(line: Line, flow: Flow) -> Array:
-    """Return what is thrown away at each gate [currency/year]: items scrapped there times w; same total as `scrap_cost`."""
+    """Return what is thrown away at each gate, items scrapped there times w [currency/year]; total as `scrap_cost`."""
     passed = flow.exponent - flow.scrap_intensity
     with np.errstate(over="ignore"):
         scrapped = line.shipped * line.per_finished * np.exp(passed) * np.expm1(flow.scrap_intensity)

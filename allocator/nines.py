@@ -82,7 +82,11 @@ def price_nines(
 
 
 def _loss(yields: Yields, split: str) -> float:
-    losses = {"rolled_yield": yields.rolled_loss, "final_yield": yields.final_loss, "shipped_yield": yields.shipped_loss}
+    losses = {
+        "rolled_yield": yields.rolled_loss,
+        "final_yield": yields.final_loss,
+        "shipped_yield": yields.shipped_loss,
+    }
     return losses[split] or 0.0
 
 
@@ -94,7 +98,9 @@ def _stops(problem: Problem, today: float, highest: BestReachable, points: int |
         stops.append(_Stop("target", -math.expm1(-budget)))
     end = nines_of(highest.loss)
     if math.isfinite(end):
-        stops += [_Stop("whole nine", 10.0**-n) for n in range(math.floor(nines_of(today)) + 1, math.floor(end + SAME) + 1)]
+        stops += [
+            _Stop("whole nine", 10.0**-n) for n in range(math.floor(nines_of(today)) + 1, math.floor(end + SAME) + 1)
+        ]
         stops += _grid(nines_of(today), end, points or 0)
     kept: list[_Stop] = []
     for stop in sorted(stops, key=lambda s: (-s.loss, s.label != "today")):
@@ -119,12 +125,18 @@ def _priced(problem: Problem, stops: list[_Stop], best: Solved, optimum: Solved)
         load, total = solved.outcome.loads[problem.split], solved.outcome.money.total
         priced.append(
             NinesPoint(
-                label=stop.label, nines=nines_of(stop.loss), target_yield=1.0 - stop.loss, target_loss=stop.loss,
-                yield_=math.exp(-load), loss=-math.expm1(-load), total=total,
+                label=stop.label,
+                nines=nines_of(stop.loss),
+                target_yield=1.0 - stop.loss,
+                target_loss=stop.loss,
+                yield_=math.exp(-load),
+                loss=-math.expm1(-load),
+                total=total,
                 extra=total - priced[-1].total if priced else None,
                 price_of_defect_budget=price_of_budget(solved, asked),
-                changes=_changes(problem, before, solved), gap=solved.gap,
-            )  # fmt: skip
+                changes=_changes(problem, before, solved),
+                gap=solved.gap,
+            )
         )
         before = solved
     return tuple(priced)
@@ -150,15 +162,18 @@ def _changes(problem: Problem, before: Solved | None, after: Solved) -> tuple[st
     texts = []
     old, new = _bought(problem, before), _bought(problem, after)
     for name in old:
-        texts += [f"{name}: + {thing}" for thing in new[name] if thing not in old[name]]
-        texts += [f"{name}: - {thing}" for thing in old[name] if thing not in new[name]]
+        texts += [f"{name}: take {thing}" for thing in new[name] if thing not in old[name]]
+        texts += [f"{name}: drop {thing}" for thing in old[name] if thing not in new[name]]
     return tuple(texts)
 
 
 def _bought(problem: Problem, solved: Solved) -> dict[str, tuple[str, ...]]:
     assert solved.outcome is not None
     text = solved.problem.options.ways.text
-    things = {step.name: text[w].alternatives for step, w in zip(problem.scenario.step, solved.outcome.choice.rows, strict=True)}
+    things = {
+        step.name: text[w].alternatives
+        for step, w in zip(problem.scenario.step, solved.outcome.choice.rows, strict=True)
+    }
     names = problem.options.purchase_names
     things["shared"] = tuple(n for n, bought in zip(names, solved.outcome.bought, strict=True) if bought)
     return things

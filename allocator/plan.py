@@ -147,7 +147,9 @@ def _other_limit_blocks(problem: Problem, blocked: Solved) -> Plan:
     if name in (CAPITAL, COST):
         limit = problem.capital if name == CAPITAL else problem.spend
         what = "capital" if name == CAPITAL else "yearly total"
-        reason = f"the {what} cannot be brought below {least:,.0f} with the floors and targets kept (limit {limit:,.0f})"
+        reason = (
+            f"the {what} cannot be brought below {least:,.0f} with the floors and targets kept (limit {limit:,.0f})"
+        )
         plan = _no_plan(problem, (Binding("(whole line)", reason),))
         return replace(plan, spend_limit=problem.spend, capital_limit=problem.capital)
     other = replace(problem, split=name, budgets={k: v for k, v in problem.budgets.items() if k == name})
@@ -167,7 +169,7 @@ def summarise(problem: Problem, best: Solved, binding: tuple[Binding, ...]) -> B
 
 
 def binding_steps(problem: Problem, best: Solved, budget: float | None) -> tuple[Binding, ...]:
-    """Return the steps that hold a target out of reach: the fewest, largest first, without whose defects it would be met.
+    """Return the steps that hold a target out of reach: the fewest, largest first, whose defects alone do so.
 
     Without a target (the end of the price of nines) the next nine is taken as the target.
     """
@@ -192,7 +194,9 @@ def _what_holds(problem: Problem, best: Solved, i: int) -> str:
     chosen = f" with {', '.join(text.alternatives)}" if text.alternatives else ""
     if step.fixed:
         return f"fixed by the scenario at {at}"
-    if problem.capital is not None and best.outcome.capital >= problem.capital * (1.0 - BINDING_SLACK):
+    least = float(np.min(ways.delta_low[ways.step == i]))
+    could_do_better = best.outcome.flow.intensity[i] > least * (1.0 + AT_CAP)
+    if problem.capital is not None and could_do_better:
         return f"at {at}{chosen}; the capital limit allows no more"
     missing = "" if step.alternative else "; no alternative is offered"
     return f"at {at}{chosen}: {text.cap}{missing}"
@@ -249,7 +253,11 @@ def price_of_budget(solved: Solved, problem: Problem) -> float | None:
     assert outcome is not None
     if solved.price is None:
         return None
-    if budget is None or outcome.loads[problem.split] < budget * (1.0 - BINDING_SLACK):
+    if (
+        budget is None
+        or problem.split not in solved.problem.budgets
+        or outcome.loads[problem.split] < budget * (1.0 - BINDING_SLACK)
+    ):
         return 0.0
     return solved.price.get(problem.split)
 
@@ -303,10 +311,15 @@ def _step_targets(solved: Solved, problem: Problem) -> tuple[StepTarget, ...]:
     today, target = levels_today(problem), _target_levels(solved)
     return tuple(
         StepTarget(
-            step=step.name, supplier=step.supplier, today=today[i], target=target[i], safety=step.safety,
-            **_choice_words(solved, outcome, i), **_floor_words(step, _states(solved)[i], target[i]),
+            step=step.name,
+            supplier=step.supplier,
+            today=today[i],
+            target=target[i],
+            safety=step.safety,
+            **_choice_words(solved, outcome, i),
+            **_floor_words(step, _states(solved)[i], target[i]),
             **{name: float(values[i]) for name, values in columns.items()},  # type: ignore[arg-type]
-        )  # fmt: skip
+        )
         for i, step in enumerate(problem.scenario.step)
     )
 

@@ -85,7 +85,9 @@ def pose(scenario: Scenario, of: str | None = None, losses: dict[str, float] | N
     if split not in YIELD_NAMES:
         raise RangeError(f"'{split}' is not a yield; allowed are {', '.join(YIELD_NAMES)}")
     if "shipped_yield" in (split, *budgets) and not inspection_stated(scenario):
-        raise RangeError("the shipped yield is unknown while no step states an inspection; state one, or use another yield")
+        raise RangeError(
+            "the shipped yield is unknown while no step states an inspection; state one, or use another yield"
+        )
     return Problem(scenario, line, build_options(scenario, line), budgets, split, capital=scenario.limits.capital)
 
 

@@ -58,7 +58,9 @@ def one_copy(total: ArrayLike, installed: ArrayLike, needed: ArrayLike, common_c
     >>> round(float(np.exp(one_copy(0.0004, 2, 1, 0.0))), 6)
     0.02
     """
-    total, n, m, beta = np.broadcast_arrays(*(np.asarray(x, dtype=float) for x in (total, installed, needed, common_cause)))
+    total, n, m, beta = np.broadcast_arrays(
+        *(np.asarray(x, dtype=float) for x in (total, installed, needed, common_cause))
+    )
     low, high = np.full(total.shape, -690.0), np.zeros(total.shape)
     wanted = np.log(np.maximum(total, 1e-300))
     log_p = np.clip(wanted, low, -1e-9)

@@ -120,7 +120,8 @@ def _outcome(
         broken.append(f"needs {result.capital:,.0f} of capital, above the limit")
     load = result.loads[problem.split]
     return RuleOutcome(
-        rule=name, source=source, total=result.money.total, yield_reached=math.exp(-load), loss_reached=-math.expm1(-load),
+        rule=name, source=source, total=result.money.total, yield_reached=math.exp(-load),
+        loss_reached=-math.expm1(-load),
         meets_target=met, saving=result.money.total - plan.money.total if met else None, broken=tuple(broken),
     )  # fmt: skip
 
@@ -133,7 +134,9 @@ def _cheapest_within(
     A floor binds whatever the rule says; a part that no way keeps is kept as nearly as possible.
     """
     ways, options, step = problem.options.ways, problem.options, problem.scenario.step[i]
-    mine = np.array([w for w in np.flatnonzero(ways.step == i) if _same_gate(problem, int(w), i, gates)], dtype=np.int64)
+    mine = np.array(
+        [w for w in np.flatnonzero(ways.step == i) if _same_gate(problem, int(w), i, gates)], dtype=np.int64
+    )
     if len(mine) == 0:
         mine = np.flatnonzero(ways.step == i).astype(np.int64)
     wanted = part / weight if weight > 0.0 else math.inf

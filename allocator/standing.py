@@ -74,9 +74,10 @@ def line_today(problem: Problem) -> TodayLine:
 
 
 def load_shares(line: Line, flow: Flow, split: str) -> NDArray[np.float64]:
-    """Return each step's part of the used budget of one yield, from defects that arise here and this gate's false rejects.
+    """Return each step's part of the used budget of one yield.
 
-    Shape (n_steps,); sums to 1, or is all 0 where nothing is used.
+    From defects that arise here, wherever found, and this gate's false rejects. Shape (n_steps,); sums to 1, or is
+    all 0 where nothing is used.
     """
     parts = load_parts(line, flow, split)
     total = float(parts.sum())

@@ -1,4 +1,4 @@
-"""What does a combination of alternatives make of a step: capability, opportunities, copies and gate, in fixed order."""
+"""What does a combination of alternatives make of a step: capability, opportunities, copies and gate."""
 
 from __future__ import annotations
 
@@ -86,9 +86,7 @@ def _with_structure(state: State, alternative: Alternative) -> State:
         state = replace(state, opportunities=alternative.opportunities)
     if alternative.copies is not None:
         copies = alternative.copies
-        state = replace(
-            state, installed=copies.installed, needed=copies.needed, common_cause=copies.common_cause
-        )
+        state = replace(state, installed=copies.installed, needed=copies.needed, common_cause=copies.common_cause)
     if alternative.inspection is not None:
         state = replace(state, inspection=alternative.inspection)
     if alternative.rework is not None:

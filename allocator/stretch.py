@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from dataclasses import dataclass
 
 import numpy as np
@@ -47,7 +48,7 @@ def convex_stretches(curve: Curves, low: float, high: float) -> list[Stretch]:
         return [Stretch(low, high, None)]
     cuts = [low, *_sign_changes(curve, levels, bend), high]
     stretches: list[Stretch] = []
-    for left, right in zip(cuts[:-1], cuts[1:], strict=True):
+    for left, right in itertools.pairwise(cuts):
         if _curvature(curve, np.array([0.5 * (left + right)]))[0] >= 0.0:
             stretches.append(Stretch(left, right, None))
         else:
@@ -84,6 +85,4 @@ def _chords(curve: Curves, left: float, right: float) -> list[Stretch]:
     ends = np.linspace(left, right, CHORDS + 1)
     many = curve.take(np.zeros(len(ends), dtype=int))
     delta, cost = cv.intensity(many, ends), cv.smooth_cost(many, ends)
-    return [
-        Stretch(ends[i], ends[i + 1], (delta[[i + 1, i]], cost[[i + 1, i]])) for i in range(CHORDS)
-    ]
+    return [Stretch(ends[i], ends[i + 1], (delta[[i + 1, i]], cost[[i + 1, i]])) for i in range(CHORDS)]

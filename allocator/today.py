@@ -48,10 +48,16 @@ def _steps(problem: Problem) -> tuple[StepToday, ...]:
     yields_ = first_pass(flow)
     return tuple(
         StepToday(
-            step=step.name, supplier=step.supplier, level=levels[i], first_pass_yield=float(yields_[i]),
-            starts_per_year=float(starts[i]), scrap=float(scrap[i]), rework=float(rework[i]),
-            inspection=float(inspection[i]), defect_share=levels[i].dpu / all_defects if all_defects else 0.0,
+            step=step.name,
+            supplier=step.supplier,
+            level=levels[i],
+            first_pass_yield=float(yields_[i]),
+            starts_per_year=float(starts[i]),
+            scrap=float(scrap[i]),
+            rework=float(rework[i]),
+            inspection=float(inspection[i]),
+            defect_share=levels[i].dpu / all_defects if all_defects else 0.0,
             money_share=float(money_share[i]),
-        )  # fmt: skip
+        )
         for i, step in enumerate(problem.scenario.step)
     )

@@ -8,7 +8,6 @@ intensity is cut into shorter ones that carry their chord, so that every way is 
 from __future__ import annotations
 
 import itertools
-import math
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 
@@ -16,17 +15,15 @@ import numpy as np
 from numpy.typing import NDArray
 
 from allocator import curves as cv
-from allocator import laws
 from allocator.curves import Curves
 from allocator.flow import GATE_FIELDS, Gates, Line, gate_values
-from allocator.money import annual_cost, capital_recovery
-from allocator.scenario.model import Alternative, Costs, Law, Purchase, Scenario, Step
-from allocator.stretch import Stretch, convex_stretches
-from allocator.state import State, floor_sigma, floor_words, sigma_meant, state_today, state_with
+from allocator.money import annual_cost
+from allocator.reach import horizon, law_in_use, reaches
+from allocator.scenario.model import Alternative, Costs, Purchase, Scenario, Step
+from allocator.state import State, floor_sigma, floor_words, state_today, state_with
+from allocator.stretch import Stretch
 
 Array = NDArray[np.float64]
-SLACK = 1e-12
-"""Relative slack on levels: a floor written as the present level is kept by it."""
 
 
 @dataclass(frozen=True)
@@ -101,8 +98,8 @@ class Ways:
 class Options:
     """Everything the steps could become, the shared purchases, and what was noticed on the way.
 
-    `purchase_cost` [currency/year] and `purchase_capital` [currency] have shape (n_purchases,). `no_way` names the steps
-    that cannot keep their floor by any way, with the reason. `today` is the state of every step as it stands.
+    `purchase_cost` [currency/year] and `purchase_capital` [currency] have shape (n_purchases,). `no_way` names
+    the steps that cannot keep their floor by any way, with the reason. `today` is the state of every step as it stands.
     """
 
     ways: Ways
@@ -131,19 +128,6 @@ class _Row:
     capital_per_cost: float
     uses: tuple[str, ...]
     text: WayText
-
-
-@dataclass(frozen=True)
-class _LawInUse:
-    """A law with its scale worked out: kind, parameter, yearly cost and capital per unit of shape."""
-
-    law: Law
-    kind: int
-    parameter: float
-    scale: float
-    capital: float
-    knots: tuple[tuple[float, float], ...]
-    """For quotes: (sigma level, yearly cost) of every quote, in the order written."""
 
 
 def build_options(scenario: Scenario, line: Line) -> Options:
@@ -175,17 +159,9 @@ def yearly_cost(scenario: Scenario, costs: Costs) -> float:
     """Return what a purchase or alternative costs per year, apart from what is charged per item [currency/year]."""
     total = costs.per_year
     if costs.price or costs.trade_in or costs.resale:
-        years, rate = _horizon(scenario, costs.life_years)
+        years, rate = horizon(scenario, costs.life_years)
         total += annual_cost(costs.price, costs.trade_in, costs.resale, rate, years)
     return total
-
-
-def _horizon(scenario: Scenario, life_years: float | None) -> tuple[float, float]:
-    years = life_years if life_years is not None else scenario.demand.years
-    rate = scenario.demand.discount_rate
-    assert years is not None, "checked when read"
-    assert rate is not None, "checked when read"
-    return years, rate
 
 
 def combinations(step: Step) -> Iterator[tuple[Alternative, ...]]:
@@ -200,7 +176,7 @@ def combinations(step: Step) -> Iterator[tuple[Alternative, ...]]:
 def _ways_of_step(
     scenario: Scenario, step: Step, index: int, today: State, items: float, notes: list[str]
 ) -> Iterator[_Row]:
-    law = _law_in_use(scenario, step, today, items) if step.improve is not None else None
+    law = law_in_use(scenario, step, today, items) if step.improve is not None else None
     for chosen in combinations(step):
         state = state_with(today, chosen)
         fixed = sum(
@@ -211,145 +187,11 @@ def _ways_of_step(
         uses = tuple(a.uses for a in chosen if a.uses is not None)
         names = tuple(a.name for a in chosen)
         floor = floor_sigma(step.at_least, state)
-        for reach in _reaches(step, state, today, law, floor, notes):
+        for reach in reaches(step, state, today, law, floor, notes):
             yield _Row(
                 index, state, reach.stretch, reach.kind, state.level.sigma_level, reach.parameter, reach.scale,
                 fixed, capital, reach.capital_per_cost, uses, WayText(names, reach.law, reach.cap),
             )  # fmt: skip
-
-
-@dataclass(frozen=True)
-class _Reach:
-    """A stretch of levels that one state reaches, with the law that pays for it."""
-
-    stretch: Stretch
-    kind: int = cv.NONE
-    parameter: float = 0.0
-    scale: float = 0.0
-    capital_per_cost: float = 0.0
-    law: str | None = None
-    cap: str = "no law of improvement"
-
-
-def _reaches(
-    step: Step, state: State, today: State, law: _LawInUse | None, floor: float, notes: list[str]
-) -> Iterator[_Reach]:
-    start = state.level.sigma_level
-    low = start if floor <= start + SLACK * abs(start) else floor
-    high, cap = (start, "no law of improvement") if law is None else _cap(step, state, law, notes)
-    if step.fixed:
-        cap = "fixed by the scenario"
-    if low > high + SLACK * abs(high):
-        return
-    if law is None or high <= start:
-        yield _Reach(Stretch(start, start, None), cap=cap)
-        return
-    ratio = law.capital / law.scale if law.scale else 0.0
-    curve = _one_curve(state, law)
-    if law.kind == cv.LINES:
-        stretches = [_quoted_stretch(step, state, today, law, min(low, high), high, curve, notes)]
-    else:
-        stretches = convex_stretches(curve, min(low, high), high)
-    for stretch in stretches:
-        yield _Reach(stretch, law.kind, law.parameter, law.scale, ratio, law.law.law, cap)
-
-
-def _cap(step: Step, state: State, law: _LawInUse, notes: list[str]) -> tuple[float, str]:
-    """Return how far the law reaches in this state, and what stops it."""
-    start = state.level.sigma_level
-    high, words = math.inf, ""
-    if law.kind == cv.LINES:
-        high, words = max(z for z, _ in law.knots), "the best level quoted"
-    if law.law.up_to is not None:
-        stated = sigma_meant(law.law.up_to, state)
-        if stated < high:
-            high, words = stated, f"up_to (sigma level {stated:.4g})"
-    elif law.kind != cv.LINES:
-        high, words = state.sigma_at(state.log_p - laws.LOG_TEN), "one tenth of its starting defects (no up_to is given)"
-    if high <= start:
-        notes.append(f"'{step.name}': {words} does not lie above the level at hand ({start:.4g}): no improvement there")
-        return start, words
-    return high, words
-
-
-def _one_curve(state: State, law: _LawInUse) -> Curves:
-    """Return the curve of one state under a law, as a table of one row."""
-    level = state.level
-    return Curves(
-        k=np.array([level.k]),
-        shift=np.array([level.shift]),
-        sides=np.array([level.sides]),
-        opportunities=np.array([state.opportunities]),
-        installed=np.array([state.installed]),
-        needed=np.array([state.needed]),
-        common_cause=np.array([state.common_cause]),
-        start=np.array([level.sigma_level]),
-        kind=np.array([law.kind]),
-        parameter=np.array([law.parameter]),
-        scale=np.array([law.scale]),
-    )
-
-
-def _law_in_use(scenario: Scenario, step: Step, today: State, items: float) -> _LawInUse:
-    law = step.improve
-    assert law is not None
-    kind = {"power": cv.POWER, "exponential": cv.EXPONENTIAL, "decade": cv.DECADE, "quotes": cv.LINES}[law.law]
-    parameter = law.exponent or law.rate or 0.0
-    knots: tuple[tuple[float, float], ...] = ()
-    if kind == cv.LINES:
-        priced = any(point.price is not None for point in law.points)
-        yearly, capital = _per_unit_of_scale(scenario, law, priced, items, any(p.per_item is not None for p in law.points))
-        knots = tuple((sigma_meant(p, today), yearly * _amount(p.price, p.per_year, p.per_item)) for p in law.points)
-        return _LawInUse(law, kind, parameter, yearly, capital, knots)
-    stated = _amount(law.price, law.per_year, law.per_item)
-    if law.at is not None:
-        stated /= _shape_at(law, kind, parameter, today)
-    yearly, capital = _per_unit_of_scale(scenario, law, law.price is not None, items, law.per_item is not None)
-    return _LawInUse(law, kind, parameter, stated * yearly, stated * capital, knots)
-
-
-def _amount(*stated: float | None) -> float:
-    return next((x for x in stated if x is not None), 0.0)
-
-
-def _per_unit_of_scale(
-    scenario: Scenario, law: Law, priced: bool, items: float, per_item: bool
-) -> tuple[float, float]:
-    """Return yearly cost and capital of one unit on the law's scale (price, per_year or per_item)."""
-    if priced:
-        years, rate = _horizon(scenario, law.life_years)
-        return capital_recovery(rate, years), 1.0
-    return (items, 0.0) if per_item else (1.0, 0.0)
-
-
-def _shape_at(law: Law, kind: int, parameter: float, today: State) -> float:
-    """Return the law's shape at its `at` level, so that getting there from today costs the stated amount."""
-    assert law.at is not None
-    there, here = sigma_meant(law.at, today), today.level.sigma_level
-    if kind == cv.POWER:
-        return float(laws.power(there, here, parameter))
-    if kind == cv.EXPONENTIAL:
-        return float(laws.exponential(there, here, parameter))
-    return float(laws.decade(today.log_p_at(there), today.log_p))
-
-
-def _quoted_stretch(
-    step: Step, state: State, today: State, law: _LawInUse, low: float, high: float, curve: Curves, notes: list[str]
-) -> Stretch:
-    """Return the envelope of the quotes in this state's own intensity, from its level (or floor) to the cap."""
-    z = np.array([today.level.sigma_level, *(z for z, _ in law.knots)])
-    cost = np.array([0.0, *(c for _, c in law.knots)])
-    many = curve.take(np.zeros(len(z), dtype=int))
-    delta, costs, kept = laws.lower_envelope(cv.intensity(many, z), cost)
-    for quote in np.flatnonzero(~kept):
-        if quote > 0:
-            notes.append(f"'{step.name}': quote {quote} (sigma level {z[quote]:.4g}) lies above the others' envelope")
-    ends = cv.intensity(curve.take(np.zeros(2, dtype=int)), np.array([high, low]))
-    start = cv.intensity(curve, curve.start)[0]
-    inside = (delta > ends[0]) & (delta < ends[1])
-    knots = np.unique(np.concatenate([ends, delta[inside]]))
-    above_start = np.interp(knots, delta, costs) - np.interp(start, delta, costs)
-    return Stretch(low, high, (knots, np.maximum(above_start, 0.0)))
 
 
 def _table(rows: Sequence[_Row], purchases: tuple[str, ...]) -> Ways:
@@ -370,7 +212,9 @@ def _table(rows: Sequence[_Row], purchases: tuple[str, ...]) -> Ways:
         scale=column([r.scale for r in rows]),
     )
     z_low, z_high = column([r.stretch.low for r in rows]), column([r.stretch.high for r in rows])
-    gates = np.array([gate_values(r.state.inspection, r.state.rework) for r in rows], dtype=float).reshape(len(rows), -1)
+    gates = np.array([gate_values(r.state.inspection, r.state.rework) for r in rows], dtype=float).reshape(
+        len(rows), -1
+    )
     return Ways(
         step=np.array([r.step for r in rows], dtype=np.int64),
         curves=curves,

@@ -31,7 +31,9 @@ def _of_answer(problem: Problem, plan: Plan) -> Iterator[Caution]:
             "plan_rests_on_judgement", rests, "what the plan does here rests on judged figures",
             "get quotations or trials for these before money is committed",
         )  # fmt: skip
-    unseen = tuple(s.step for s in plan.steps if 0.0 < s.target.dpmo and _cannot_be_shown(s.target.ppm, s.starts_per_year))
+    unseen = tuple(
+        s.step for s in plan.steps if s.target.dpmo > 0.0 and _cannot_be_shown(s.target.ppm, s.starts_per_year)
+    )
     if unseen:
         yield Caution(
             "cannot_be_demonstrated", unseen, "a year's items would not show this target with 95 % confidence, even with none bad",

@@ -32,7 +32,9 @@ def _inspection(problem: Problem) -> list[str]:
         return ["No inspection is stated: every gate is assumed to find all of its own defects, so nothing escapes."]
     names = [problem.scenario.step[i].name for i in assumed]
     shown = ", ".join(names[:4]) + (f" and {len(names) - 4} more" if len(names) > 4 else "")
-    return [f"Without a stated inspection a gate is assumed to find all of its own defects and no earlier ones: {shown}."]
+    return [
+        f"Without a stated inspection a gate is assumed to find all of its own defects and no earlier ones: {shown}."
+    ]
 
 
 def _shift(problem: Problem) -> list[str]:

@@ -52,7 +52,9 @@ def _capabilities(step: Step) -> Iterator[Capability]:
 def _one_opportunity(problem: Problem) -> Iterator[Caution]:
     steps = problem.scenario.step
     if len(steps) > 2 and all(step.opportunities == 1.0 for step in steps):
-        reason = "every step counts one opportunity per item; a step with ten characteristics fails about ten times as often"
+        reason = (
+            "every step counts one opportunity per item; a step with ten characteristics fails about ten times as often"
+        )
         yield Caution("one_opportunity", (), reason, "set `opportunities` to the number of ways each item can go wrong")
 
 
@@ -77,9 +79,7 @@ def _small_sample(problem: Problem) -> Iterator[Caution]:
         if sample is None or level.attribute or sample > SMALL_SAMPLE:
             continue
         cpk = float(study_index(level.sigma_level, level.k))
-        reason = (
-            f"Cpk {cpk:.2f} from {sample} parts is taken as exact; its 95 % lower limit is about {lower_cpk(cpk, sample):.2f}"
-        )
+        reason = f"Cpk {cpk:.2f} from {sample} parts is taken as exact; its 95 % lower limit is about {lower_cpk(cpk, sample):.2f}"
         yield Caution("small_sample", (step.name,), reason, "measure 100 parts or more, or plan on the lower limit")
 
 
@@ -178,7 +178,9 @@ def _copies(problem: Problem) -> Iterator[Caution]:
 
 
 def _laws(problem: Problem) -> Iterator[Caution]:
-    open_ended = _steps(problem, lambda s, _: s.improve is not None and s.improve.up_to is None and s.improve.law != "quotes")
+    open_ended = _steps(
+        problem, lambda s, _: s.improve is not None and s.improve.up_to is None and s.improve.law != "quotes"
+    )
     yield from _about(
         "no_up_to", open_ended, "the law states no `up_to`; nothing is extrapolated past one tenth of the starting defects",
         "set up_to to the best level demonstrated or quoted",
@@ -211,7 +213,9 @@ def is_judged(table: BaseModel) -> bool:
         return True
     inside = (getattr(table, name) for name in type(table).model_fields)
     return any(
-        is_judged(value) if isinstance(value, BaseModel) else any(is_judged(v) for v in value if isinstance(v, BaseModel))
+        is_judged(value)
+        if isinstance(value, BaseModel)
+        else any(is_judged(v) for v in value if isinstance(v, BaseModel))
         for value in inside
         if isinstance(value, BaseModel | tuple)
     )
@@ -233,7 +237,9 @@ def _widening(problem: Problem) -> Iterator[Caution]:
 
 
 def _rework(problem: Problem) -> Iterator[Caution]:
-    free = _steps(problem, lambda _, i: bool((r := problem.options.today[i].rework) and r.share > 0.0 and r.cost == 0.0))
+    free = _steps(
+        problem, lambda _, i: bool((r := problem.options.today[i].rework) and r.share > 0.0 and r.cost == 0.0)
+    )
     yield from _about(
         "free_rework", free, "rework is entered as costing nothing; hidden rework is what a good final yield hides",
         "enter rework.cost: labour, parts and the second check",
@@ -256,7 +262,8 @@ def _shifts(problem: Problem) -> Iterator[Caution]:
 
 def _three_sigma(problem: Problem) -> Iterator[Caution]:
     weak = _steps(
-        problem, lambda _, i: study_index(problem.options.today[i].level.sigma_level, problem.options.today[i].level.k) <= 1.0
+        problem,
+        lambda _, i: study_index(problem.options.today[i].level.sigma_level, problem.options.today[i].level.k) <= 1.0,
     )
     if len(weak) > 1:
         lost = 1.0 - (1.0 - 0.0026998) ** len(weak)

@@ -145,7 +145,7 @@ def _write_limits(paper: Paper, plan: Plan) -> None:
     said = []
     for step in plan.steps:
         if step.floor is not None:
-            stands = "the floor binds" if step.floor_binds else "the floor does not bind"
+            stands = f"the floor {'binds' if step.floor_binds else 'does not bind'} ({step.floor_distance})"
             level = f"Cpk {words.fixed(step.target.cpk)}, {words.fixed(step.target.sigma_level)} sigma"
             said.append(f"{words.quoted(step.step)}: floor {words.clean(step.floor)}; plan {level}; {stands}")
     for step in plan.steps:

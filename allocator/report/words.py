@@ -77,13 +77,15 @@ def count(value: float | None) -> str:
 
 
 def money(value: float | None) -> str:
-    """An amount, without its unit: whole from a thousand, else with two decimals.
+    """An amount, without its unit: whole from a thousand, else with two decimals; less than half a cent is nothing.
 
     >>> [money(x) for x in (1234567.4, -999.5, 0.0, 0.001)]
-    ['1,234,567', '-999.50', '0', '0.0010']
+    ['1,234,567', '-999.50', '0', '0']
     """
-    if value is None or not math.isfinite(value) or abs(value) < 0.005 or abs(value) >= _LARGEST_WRITTEN_OUT:
+    if value is None or not math.isfinite(value) or abs(value) >= _LARGEST_WRITTEN_OUT:
         return number(value)
+    if abs(value) < 0.005:
+        return "0"
     return f"{value:,.0f}" if abs(value) >= 999.995 else f"{value:,.2f}"
 
 

@@ -36,10 +36,10 @@ def cross_findings(scenario: Scenario, damage: Damage = NO_DAMAGE) -> list[Findi
     findings += feeds_findings(scenario, "name" not in topics)
     for i, step in enumerate(scenario.step):
         findings += _step_findings(i, step, scenario)
-    line_unsound = {f.topic[1] for f in findings} & {"feeds", "cost"} or topics & {"feeds", "per_unit", "cost"}
+    line_unsound = {f.topic[1] for f in findings} & {"feeds", "cost"} or topics & {"name", "feeds", "per_unit", "cost"}
     if not line_unsound:
         findings += net_cost_findings(scenario)
-    findings += _horizon_findings(scenario)
+    findings += _horizon_findings(scenario, damage)
     if "inspection" not in topics and "default" not in topics:
         findings += _shipped_findings(scenario)
     return [finding for finding in findings if finding.topic not in damage]
@@ -49,12 +49,12 @@ def _repeated(kind: str, names: Sequence[str], within: Owner = ()) -> list[Findi
     """Return a finding for every name after its first use, under the owner (kind, *within, position)."""
     if len(set(names)) == len(names):
         return []
-    seen: set[str] = set()
+    first: dict[str, int] = {}
     findings: list[Finding] = []
     for i, name in enumerate(names):
-        if name in seen and name != NAMELESS:
-            findings.append(Finding((kind, *within, i), "name", "a name used before", "give every one its own name"))
-        seen.add(name)
+        if first.setdefault(name, i) != i and name != NAMELESS:
+            found = f"the name of {kind} {first[name] + 1} again"
+            findings.append(Finding((kind, *within, i), "name", found, "give every one its own name"))
     return findings
 
 
@@ -156,9 +156,11 @@ def _group_findings(owner: Owner, step: Step) -> Iterator[Finding]:
         yield Finding(owner, "alternative", f"{combinations:,} combinations ({counts})", allowed)
 
 
-def _horizon_findings(scenario: Scenario) -> list[Finding]:
-    demand = scenario.demand
-    missing = [key for key in ("years", "discount_rate") if getattr(demand, key) is None]
+def _horizon_findings(scenario: Scenario, damage: Damage) -> list[Finding]:
+    if ((), "demand") in damage:
+        return []
+    keys = [key for key in ("years", "discount_rate") if (("demand",), key) not in damage]
+    missing = [key for key in keys if getattr(scenario.demand, key) is None]
     place = next(_priced_places(scenario), None) if missing else None
     if place is None:
         return []

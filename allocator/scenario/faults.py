@@ -9,7 +9,7 @@ from dataclasses import dataclass, field
 from allocator.errors import Fault
 
 Owner = tuple[str | int, ...]
-"""Whose key it is: (), ("demand",), ("purchase", 0), ("step", 3) or ("alternative", 3, 0)."""
+"""Whose key it is: (), ("demand",), ("purchase", 0), ("step", 3), ("alternative", 3, 0), or a ("row", 7) of no step."""
 Damage = set[tuple[Owner, str]]
 """Topics of owners already reported; later checks on them would only repeat the same trouble."""
 SHOWN = 3
@@ -59,7 +59,7 @@ class Places:
         parts = [f"row {self.rows[owner][1]}"] if owner in self.rows else []
         if owner and owner[0] == "alternative":
             parts.append(self._named("step", ("step", owner[1])))
-        parts.extend([self._named(str(owner[0]), owner)] if owner else [])
+        parts.extend([self._named(str(owner[0]), owner)] if owner and owner[0] != "row" else [])
         return ", ".join(parts)
 
     def _named(self, kind: str, owner: Owner) -> str:
@@ -117,7 +117,8 @@ def to_faults(findings: Sequence[Finding], places: Places) -> list[Fault]:
         kind = finding.owner[0] if finding.owner else ""
         group = (places.file_of(finding.owner), kind, finding.key, finding.allowed)
         groups.setdefault(group, []).append(finding)
-    return [fault for group in groups.values() for fault in _faults_of_group(group, places)]
+    faults = [fault for group in groups.values() for fault in _faults_of_group(group, places)]
+    return [fault for _, fault in sorted(faults, key=lambda placed: placed[0])]
 
 
 def _file_order(finding: Finding) -> tuple[int, ...]:
@@ -127,12 +128,13 @@ def _file_order(finding: Finding) -> tuple[int, ...]:
     return (1, *(int(part) for part in owner[1:])) if owner and owner[0] == "purchase" else (0,)
 
 
-def _faults_of_group(group: list[Finding], places: Places) -> list[Fault]:
+def _faults_of_group(group: list[Finding], places: Places) -> list[tuple[tuple[int, ...], Fault]]:
+    """Return the faults of findings with the same key and remedy, each with its place in the file order."""
     if len(group) <= SHOWN:
-        return [Fault(_where([f], places), f.key, f.found, f.allowed) for f in group]
+        return [(_file_order(f), Fault(_where([f], places), f.key, f.found, f.allowed)) for f in group]
     founds = list(dict.fromkeys(f.found for f in group))
     found = ", ".join(founds[:SHOWN]) + (", …" if len(founds) > SHOWN else "")
-    return [Fault(_where(group, places), group[0].key, found, group[0].allowed)]
+    return [(_file_order(group[0]), Fault(_where(group, places), group[0].key, found, group[0].allowed))]
 
 
 def _where(group: Sequence[Finding], places: Places) -> str:

@@ -82,13 +82,22 @@ def read_record(record: type[Record], raw: Any, owner: Owner, findings: list[Fin
         try:
             return record.model_validate(rest)
         except ValidationError as error:
-            for entry in error.errors(include_url=False):
+            entries = error.errors(include_url=False)
+            meant = {(*e["loc"][:-1], _meant(record, e["loc"])) for e in entries if e["type"] == "extra_forbidden"}
+            for entry in entries:
                 path = tuple(p for p in entry["loc"] if p not in (NUMBER_TAG, TABLE_TAG))
-                if number == 0:  # Later rounds only meet stand-ins that do not fit.
+                # Later rounds only meet stand-ins that do not fit; a misspelled key is not missing as well.
+                if number == 0 and not (entry["type"] == "missing" and entry["loc"] in meant):
                     _report(record, entry["type"], path, entry["input"], owner, findings, damage)
                 rest = _without(rest, path) if entry["type"] != "missing" else _with_stand_in(rest, path)
     damage.update((owner, topic_of(key)) for key in known_keys(record))
     return record.model_validate(STAND_INS.get(record, {}))
+
+
+def _meant(record: type[Table], location: Path) -> str | None:
+    """Return the key nearest to an unknown one."""
+    path = tuple(part for part in location if part not in (NUMBER_TAG, TABLE_TAG))
+    return hint(str(path[-1]), known_keys(record, path[:-1]))
 
 
 def _report(
@@ -101,8 +110,11 @@ def _report(
         findings.append(finding)
     damage.add(finding.topic)
     if kind == "extra_forbidden":
-        meant = hint(str(path[-1]), known_keys(record, path[:-1]))
-        damage.add((whose, topic_of(meant or key)))
+        # A misspelled name of a list entry or of a key deeper down has that key's topic already.
+        damage.add((whose, topic_of(_meant(record, path) or key if len(inner) == 1 else key)))
+    if not inner:
+        below = ("alternative", 0) if whose != owner and whose[0] == "alternative" else ()
+        damage.update((whose, topic_of(known)) for known in known_keys(record, below))
 
 
 def _owner_of(owner: Owner, path: Path) -> tuple[Owner, Path]:

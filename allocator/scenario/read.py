@@ -15,7 +15,7 @@ from typing import Any
 from allocator.errors import Fault, InputError
 from allocator.scenario.cross import cross_findings
 from allocator.scenario.data import fill_from_data
-from allocator.scenario.faults import Damage, Finding, Owner, Places, did_you_mean, shown, to_faults
+from allocator.scenario.faults import Damage, Finding, Owner, Places, did_you_mean, hint, shown, to_faults
 from allocator.scenario.keys import bulk, read_record, read_steps
 from allocator.scenario.model import Alternative, Head, Scenario, Step
 from allocator.scenario.tables import TableRead, read_table, read_text
@@ -69,9 +69,19 @@ def _syntax_fault(name: str, text: str, message: str) -> Fault:
         return Fault(name, "", f"text that is not TOML ({message})", "complete it, quotes and brackets closed")
     line, column = int(place[1]), int(place[2])
     written = text.split("\n")[line - 1].strip()
-    said = message[: place.start()]
     where = f"{name}, line {line}, column {column}"
-    return Fault(where, "", f"{shown(written)}, which is not TOML", f"correct it: {said}")
+    return Fault(where, "", f"{shown(written)}, which is not TOML", _syntax_remedy(message[: place.start()], written))
+
+
+def _syntax_remedy(said: str, written: str) -> str:
+    """Return what to do about a TOML error, in the words of someone who never heard of a parser where possible."""
+    if said == "Cannot overwrite a value":
+        return "a key stands once in a table: keep one of the two"
+    if re.search(r"=\s*-?\d+,\d", written):
+        return "a number has a decimal point, as 1.5"
+    if said == "Invalid value":
+        return 'a text stands in quotes, as "Weld"'
+    return f"correct it: {said}"
 
 
 def scenario_from_dict(data: dict[str, Any], file: str = "scenario", folder: Path | None = None) -> Scenario:
@@ -102,6 +112,7 @@ def _without_none(value: Any) -> Any:
 
 
 def _read(data: dict[str, Any], reading: _Reading) -> Scenario:
+    data = _with_known_keys(data, reading)
     _collect_steps(data, reading)
     _collect_alternatives(data, reading)
     _name_places(reading)
@@ -124,14 +135,22 @@ def _read(data: dict[str, Any], reading: _Reading) -> Scenario:
     return scenario
 
 
-def _read_head(data: dict[str, Any], reading: _Reading) -> Head:
-    """Return everything but steps and target; misspelled keys of the top level are told all that may stand there."""
-    raw = {key: value for key, value in data.items() if key not in OUTSIDE_HEAD}
+def _with_known_keys(data: dict[str, Any], reading: _Reading) -> dict[str, Any]:
+    """Return the top level without its unknown keys; a misspelled one is read on under the name that was meant."""
     known = [*Head.model_fields, *OUTSIDE_HEAD]
-    for key in [key for key in raw if key not in Head.model_fields]:
-        otherwise = f"the tables known here are {', '.join(known)}"
+    sound = {key: value for key, value in data.items() if key in known}
+    for key in [key for key in data if key not in known]:
+        otherwise = f"the keys known here are {', '.join(known)}"
         reading.findings.append(Finding((), key, "an unknown key", did_you_mean(key, known, otherwise)))
-        del raw[key]
+        meant = hint(key, known)
+        if meant is not None:
+            sound.setdefault(meant, data[key])
+    return sound
+
+
+def _read_head(data: dict[str, Any], reading: _Reading) -> Head:
+    """Return everything but steps and target."""
+    raw = {key: value for key, value in data.items() if key not in OUTSIDE_HEAD}
     return read_record(Head, raw, (), reading.findings, reading.damage)
 
 
@@ -150,7 +169,7 @@ def _collect_steps(data: dict[str, Any], reading: _Reading) -> None:
     unreadable = "steps_from" in data and table is None
     if unreadable:
         reading.damage.update({(("step", -1), topic) for topic in ("name", "cost", "inspection")})
-    elif not reading.steps and not reading.findings:
+    elif not reading.steps and not any(finding.key == "step" for finding in reading.findings):
         allowed = "add a [[step]] for every step of the line, in its order"
         reading.findings.append(Finding((), "step", "no step", allowed))
 

@@ -16,7 +16,7 @@ PLAIN_WORDS = {
     "string": "a text in quotes",
     "boolean": "true or false",
     "object": "a table { … }",
-    "array": "a list of tables",
+    "array": "a list of tables, [[…]] in double brackets or [{ … }]",
 }
 
 
@@ -103,8 +103,8 @@ def _range(option: dict[str, Any]) -> str:
     high, below = option.get("maximum"), option.get("exclusiveMaximum")
     if low is not None and high is not None:
         return f" from {low:g} to {high:g}"
-    ends = [f"above {above:g}"] if above is not None else []
-    ends += [f"below {below:g}"] if below is not None else []
+    ends = [f"above {above:,.9g}"] if above is not None else []
+    ends += [f"below {below:,.9g}"] if below is not None else []
     start = f", {low:g} or more" if low is not None else ""
     return start + (" " if ends and not start else " and " if ends else "") + " and ".join(ends)
 

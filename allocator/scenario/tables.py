@@ -11,7 +11,7 @@ from typing import Any
 
 from allocator.errors import Fault, InputError
 from allocator.scenario.faults import SHOWN, did_you_mean, hint
-from allocator.scenario.model import Alternative, Step
+from allocator.scenario.model import Alternative, Step, Table
 from allocator.scenario.schema import columns, spec
 
 SEPARATORS = ";,\t"
@@ -39,7 +39,7 @@ def read_text(path: Path, name: str) -> str:
     try:
         data = path.read_bytes()
     except FileNotFoundError:
-        raise _refused(name, "no such file", f"check the name; the folder is {path.parent.resolve()}") from None
+        raise _refused(name, "no such file", f"check the name; it was looked for as {path}") from None
     except IsADirectoryError:
         raise _refused(name, "a folder", "name a file") from None
     except OSError as error:
@@ -50,7 +50,7 @@ def read_text(path: Path, name: str) -> str:
         line = data.count(b"\n", 0, error.start) + 1
         raise _refused(name, f"bytes on line {line} that are no UTF-8", "save the file as UTF-8") from None
     if not text.strip():
-        raise _refused(name, "an empty file", "write the table, or name another file")
+        raise _refused(name, "an empty file", "write it, or name another file")
     return text
 
 
@@ -111,27 +111,37 @@ def _usable_columns(
 ) -> dict[int, tuple[str, ...]]:
     """Return the path of keys of every column that can be used; the others are reported once each."""
     known = columns(record)
+    if record is Alternative:
+        known["step"] = ("step",)
     used: dict[int, tuple[str, ...]] = {}
     for i, name in enumerate(header):
-        if record is Alternative and name == "step" and "step" not in header[:i]:
-            continue
         path = known.get(name)
+        if path == ("step",) and "step" not in header[:i]:
+            continue
         if path is None:
-            _report_column(table, name, i, known)
-        elif path in used.values():
+            _report_column(table, name, i, record, known)
+        elif path in used.values() or path == ("step",):
             table.faults.append(Fault(table.file, f"column '{name}'", "the same column twice", "keep one of the two"))
         else:
             used[i] = path
-    if record is Alternative and "step" not in header:
+    if record is Alternative and "step" not in header and "step" not in table.lost:
+        table.lost.add("step")
         allowed = "add a column `step` with the name of the step that each alternative belongs to"
         table.faults.append(Fault(table.file, "column 'step'", "nothing", allowed))
     return used
 
 
-def _report_column(table: TableRead, name: str, position: int, known: dict[str, tuple[str, ...]]) -> None:
+def _report_column(
+    table: TableRead, name: str, position: int, record: type[Table], known: dict[str, tuple[str, ...]]
+) -> None:
     if not name:
         allowed = "name the column, or delete it"
         table.faults.append(Fault(table.file, f"column {position + 1}", "a column without a name", allowed))
+        return
+    if "array" in spec(record, name.split(".")).kinds:
+        allowed = "leave it out: a list does not fit into a cell; write that step as [[step]] in the scenario file"
+        table.faults.append(Fault(table.file, f"column '{name}'", "a column for a list", allowed))
+        table.lost.add(name.split(".")[0])
         return
     otherwise = "a column bears the name of a key, as name, cost_added, cp, inspection.finds, improve.law"
     table.faults.append(

@@ -75,7 +75,7 @@ def solve_rows(rows: Rows, integer: bool, relative_gap: float = 0.0, seconds: fl
         options |= {"mip_rel_gap": relative_gap, "mip_feasibility_tolerance": FEASIBILITY, "mip_abs_gap": 0.0}
     try:
         with _silent_stdout():
-            problem.solve(solver=cp.HIGHS, **options)
+            problem.solve(solver=cp.HIGHS, **options)  # type: ignore[no-untyped-call]
     except cp.error.SolverError as failure:
         raise SolverError(f"HiGHS stopped without an answer: {failure}") from failure
     if problem.status in cp.settings.INF_OR_UNB:

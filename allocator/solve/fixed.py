@@ -37,7 +37,9 @@ def solve_fixed(problem: Problem, rows: NDArray[np.int64]) -> FixedAnswer | None
     outcome = evaluate(problem.line, problem.options, _choice(problem, rows, program, point))
     if not keeps_limits(problem, outcome):
         return None
-    return FixedAnswer(outcome, min(point.bound, outcome.value(problem.objective)), point.prices if program.size else None)
+    return FixedAnswer(
+        outcome, min(point.bound, outcome.value(problem.objective)), point.prices if program.size else None
+    )
 
 
 def _limits(problem: Problem) -> dict[str, float]:

@@ -53,7 +53,10 @@ class _Scaled:
         results = []
         v = self.point(x)
         laws = self.program.law_slopes(v)
-        for name, limit, size in [(self.objective, 0.0, self.size), *((n, b, _size(b)) for n, b in self.limits.items())]:
+        for name, limit, size in [
+            (self.objective, 0.0, self.size),
+            *((n, b, _size(b)) for n, b in self.limits.items()),
+        ]:
             value, grad, bend, weight = self.program.derivatives(name, v, laws)
             results.append(((value - limit) / size, grad * span / size, bend * span**2 / size, weight / size))
         return results, span
@@ -94,7 +97,7 @@ def minimise(program: Program, objective: str, limits: dict[str, float], enough:
                 return None
             if program.value(name, cheapest.v) >= limit - INTERIOR * abs(limit):
                 value = program.value(objective, cheapest.v)
-                return _with_fixed(Point(cheapest.v, value, value, {name: 0.0 for name in limits}), fixed)
+                return _with_fixed(Point(cheapest.v, value, value, {}), fixed)
             start = cheapest.v
     return _with_fixed(_solve(program, objective, {**rising, **falling}, start, enough), fixed)
 
@@ -162,7 +165,9 @@ def _start(program: Program, limits: dict[str, float]) -> Array:
     return program.low + step * (program.high - program.low)
 
 
-def _solve(program: Program, objective: str, limits: dict[str, float], start: Array, enough: float | None = None) -> Point:
+def _solve(
+    program: Program, objective: str, limits: dict[str, float], start: Array, enough: float | None = None
+) -> Point:
     """Run the primal-dual iteration from a strictly feasible start."""
     size = max(abs(program.value(objective, start)), 1e-300)
     scaled = _Scaled(program, objective, limits, size)
@@ -213,7 +218,12 @@ def _bound(functions: list[tuple[float, Array, Array, Array]], x: Array, prices:
 
 
 def _newton(
-    functions: list[tuple[float, Array, Array, Array]], reach: Array, x: Array, room: Array, multiplier: Array, weight: float
+    functions: list[tuple[float, Array, Array, Array]],
+    reach: Array,
+    x: Array,
+    room: Array,
+    multiplier: Array,
+    weight: float,
 ) -> tuple[Array, Array]:
     """Return the Newton step in x and in the multipliers for the centring weight."""
     m, k = len(x), len(functions) - 1

@@ -39,7 +39,9 @@ class Search:
         """Return whether the gap is closed, or what was asked (`enough`) is decided either way."""
         if self.best is None:
             return False
-        if self.enough is not None and (self.value(self.best) <= self.enough or self.bound > self.enough * (1.0 + 1e-9)):
+        if self.enough is not None and (
+            self.value(self.best) <= self.enough or self.bound > self.enough * (1.0 + 1e-9)
+        ):
             return True
         return self.gap <= gap
 
@@ -126,7 +128,11 @@ def _most_exponent(search: Search) -> float:
     steps = np.zeros(line.n_steps)
     np.maximum.at(steps, ways.step, ways.delta_high + ways.gates.scrap_of_good)
     most = float(np.sum(steps * np.maximum(line.per_finished, 1.0)) * max(1.0, float(np.max(1.0 / line.per_finished))))
-    money = problem.spend if problem.spend is not None else (best.outcome.money.total if problem.objective == COST else None)
+    money = (
+        problem.spend
+        if problem.spend is not None
+        else (best.outcome.money.total if problem.objective == COST else None)
+    )
     if money is not None and np.all(weight > 0.0):
         savings = -np.minimum(ways.fixed_cost, 0.0).sum() - np.minimum(problem.options.purchase_cost, 0.0).sum()
         most = min(most, float(np.log1p((max(money, 0.0) + savings) / weight.min())) * 1.01 + 1e-6)
@@ -159,7 +165,9 @@ def _offer_rounded(search: Search, master: Master, x: Array) -> None:
     """Offer the choice nearest to a relaxed answer and teach the master its exact value."""
     rounded = search.offer(_rounded(search.problem, master, x))
     if rounded is not None:
-        cuts_for_choice(master, rounded.outcome.choice.rows, rounded.outcome.flow.intensity, rounded.outcome.flow.exponent)
+        cuts_for_choice(
+            master, rounded.outcome.choice.rows, rounded.outcome.flow.intensity, rounded.outcome.flow.exponent
+        )
 
 
 def _excluded(search: Search, master: Master, rows: Rows, answer: Answer, bound: float) -> NDArray[np.bool_]:

@@ -53,7 +53,9 @@ def first_choices(problem: Problem) -> list[NDArray[np.int64]]:
     """Return a few choices worth trying first: the least defects, the least spent, and prices in between."""
     ways = problem.options.ways
     per_finished = problem.line.per_finished[ways.step]
-    defects = per_finished * ways.delta_low * (1.0 - 0.5 * ways.gates.reworked) + per_finished * ways.gates.scrap_of_good
+    defects = (
+        per_finished * ways.delta_low * (1.0 - 0.5 * ways.gates.reworked) + per_finished * ways.gates.scrap_of_good
+    )
     missed = per_finished * ways.delta_low * (1.0 - ways.gates.finds) + 1e-3 * defects * (1.0 - ways.gates.earlier)
     cost = ways.fixed_cost + problem.line.shipped * per_finished * ways.gates.per_item
     scale = float(np.sum(np.abs(cost))) / max(float(defects.sum()), 1e-300)

@@ -1,4 +1,4 @@
-"""The master problem's fixed rows: one way per step, the tree's flow, budgets and money, linear in δ and in the choices.
+"""The master problem's fixed rows: one way per step, the tree's flow, budgets and money, all linear.
 
 Where a step's gate is itself a choice, its inflow is split over the gates (the exact disaggregated form), so that a
 choice never multiplies a flow. Everything counted in defects is divided by one defect scale, money by one money scale.
@@ -135,7 +135,9 @@ def build_master(problem: Problem, defect_scale: float, money_scale: float, most
 def _layout(problem: Problem, defect_scale: float, money_scale: float, most_exponent: float) -> Layout:
     ways, line, n_ways = problem.options.ways, problem.line, len(problem.options.ways)
     none = np.full(n_ways, -1)
-    layout = Layout(none.copy(), none.copy(), none.copy(), np.array([], dtype=int), *(np.full(line.n_steps, -1),) * 2, [], [], [])
+    layout = Layout(
+        none.copy(), none.copy(), none.copy(), np.array([], dtype=int), *(np.full(line.n_steps, -1),) * 2, [], [], []
+    )
     moves = ways.moves
     dearest = _dearest_law(problem)
     for w in range(n_ways):
@@ -238,19 +240,21 @@ def _flow(master: Master) -> None:
         "rolled_yield": rolled,
         "final_yield": plus((1.0, final), (1.0, escape)),
         "shipped_yield": escape,
-        COST: plus((1.0, cost), (shipped * line.escape_cost * scale / master.money_scale, escape), (1.0, _fixed_money(master))),
+        COST: plus(
+            (1.0, cost), (shipped * line.escape_cost * scale / master.money_scale, escape), (1.0, _fixed_money(master))
+        ),
         CAPITAL: _capital(master),
     }
 
 
-def _gates_of(
-    master: Master, mine: NDArray[np.int64], inflow: Terms, most: float
-) -> list[tuple[list[int], Terms]]:
+def _gates_of(master: Master, mine: NDArray[np.int64], inflow: Terms, most: float) -> list[tuple[list[int], Terms]]:
     """Return the step's ways grouped by gate, each with the part of the inflow that enters when it is chosen."""
     table = master.problem.options.ways.gates
     groups: dict[tuple[float, ...], list[int]] = {}
     for w in mine.tolist():
-        groups.setdefault(tuple(float(getattr(table, name)[w]) for name in ("finds", "earlier", "reworked", "rework_cost")), []).append(w)
+        groups.setdefault(
+            tuple(float(getattr(table, name)[w]) for name in ("finds", "earlier", "reworked", "rework_cost")), []
+        ).append(w)
     if len(groups) == 1 or not inflow:
         return [(group, inflow if len(groups) == 1 else {}) for group in groups.values()]
     shares: list[tuple[list[int], Terms]] = []
@@ -287,7 +291,9 @@ def _capital(master: Master) -> Terms:
     problem, layout = master.problem, master.layout
     ways = problem.options.ways
     terms = {int(layout.pick[w]): float(ways.capital[w]) for w in range(len(ways))}
-    terms |= {int(layout.law[w]): float(ways.capital_per_cost[w]) * master.money_scale for w in np.flatnonzero(ways.moves)}
+    terms |= {
+        int(layout.law[w]): float(ways.capital_per_cost[w]) * master.money_scale for w in np.flatnonzero(ways.moves)
+    }
     terms |= {int(v): float(c) for v, c in zip(layout.buy, problem.options.purchase_capital, strict=True)}
     return terms
 

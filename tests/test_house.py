@@ -1,0 +1,64 @@
+"""Does the house keep its own rules: layers, light import, public names, file sizes, documented commands?"""
+
+from __future__ import annotations
+
+import subprocess
+import sys
+from pathlib import Path
+
+import pytest
+from importlinter.application.use_cases import lint_imports
+from importlinter.cli import EXIT_STATUS_SUCCESS  # noqa: F401  (configures the linter's adapters)
+
+ROOT = Path(__file__).parent.parent
+LONGEST_FILE = 400
+PUBLIC = {
+    "AllocatorError", "Check", "InputError", "Nines", "Plan", "Scenario", "Today", "check_scenario", "make_plan",
+    "price_nines", "read_scenario", "scenario_from_dict", "see_today",
+}  # fmt: skip
+HEAVY = ("numpy", "scipy", "cvxpy", "pandas", "pydantic", "rich", "matplotlib")
+
+
+def test_layers_point_one_way(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.chdir(ROOT)
+    assert lint_imports(config_filename=str(ROOT / ".importlinter"), cache_dir=None)
+
+
+def test_public_names_are_pinned_and_exist() -> None:
+    import allocator
+
+    assert set(allocator.__all__) == PUBLIC
+    for name in allocator.__all__:
+        assert getattr(allocator, name).__name__ == name
+    with pytest.raises(AttributeError, match="nonsense"):
+        _ = allocator.nonsense
+
+
+def test_import_is_light() -> None:
+    script = f"import sys, allocator; print([m for m in {HEAVY!r} if m in sys.modules])"
+    seen = subprocess.run([sys.executable, "-c", script], capture_output=True, text=True, check=True)
+    assert seen.stdout.strip() == "[]"
+
+
+def test_no_file_is_over_400_lines() -> None:
+    long = {p.name: n for p in ROOT.glob("allocator/**/*.py") if (n := len(p.read_text().splitlines())) > LONGEST_FILE}
+    assert long == {}
+
+
+def test_every_module_says_first_what_it_answers() -> None:
+    silent = [
+        str(p)
+        for p in ROOT.glob("allocator/**/*.py")
+        if p.stat().st_size and not p.read_text().startswith(('"""', 'r"""'))
+    ]
+    assert silent == []
+
+
+def test_every_command_is_in_the_readme() -> None:
+    from typer.main import get_command
+
+    from allocator.cli import app
+
+    readme = (ROOT / "README.md").read_text()
+    missing = [name for name in get_command(app).commands if f"allocator {name}" not in readme]  # type: ignore[attr-defined]
+    assert missing == []
