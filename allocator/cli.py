@@ -272,4 +272,6 @@ def _refuse_unfit_money(spend: float | None, capital: float | None) -> None:
 
 
 def main() -> None:
+    # The matrices are small: threads that wait for each other cost more than they save, above all on a busy machine.
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
     app(prog_name="allocator")

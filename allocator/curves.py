@@ -73,7 +73,8 @@ def log_probability(curves: Curves, z: Array) -> Array:
 
 def intensity(curves: Curves, z: Array) -> Array:
     """Return δ [defects per item] at sigma level z, shape (n_rows,)."""
-    return -curves.opportunities * np.asarray(log_good(log_probability(curves, z)))
+    good: Array = log_good(log_probability(curves, z))
+    return -curves.opportunities * good
 
 
 def sigma(curves: Curves, delta: Array) -> Array:

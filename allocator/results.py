@@ -2,7 +2,19 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from collections.abc import Sequence
+from dataclasses import asdict, dataclass, field
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    import pandas
+
+
+def as_table(rows: Sequence[Any]) -> pandas.DataFrame:
+    """Return records as a table, one row each; nested figures become columns such as `target.cpk`."""
+    import pandas  # here, because only those who ask for a table should wait for it
+
+    return pandas.json_normalize([asdict(row) for row in rows])
 
 
 @dataclass(frozen=True)
@@ -195,6 +207,10 @@ class Plan:
     def cost_per_unit(self) -> float | None:
         return None if self.money is None else self.money.total / self.shipped_per_year
 
+    def table(self) -> pandas.DataFrame:
+        """Return the steps as a table: today's and the target's level, what is chosen, cost and share."""
+        return as_table(self.steps)
+
 
 @dataclass(frozen=True)
 class NinesPoint:
@@ -230,6 +246,10 @@ class Nines:
     assumed: tuple[str, ...]
     cautions: tuple[Caution, ...]
 
+    def table(self) -> pandas.DataFrame:
+        """Return the points as a table."""
+        return as_table(self.points)
+
 
 @dataclass(frozen=True)
 class StepToday:
@@ -262,6 +282,10 @@ class Today:
     target_losses: dict[str, float]
     assumed: tuple[str, ...]
     cautions: tuple[Caution, ...]
+
+    def table(self) -> pandas.DataFrame:
+        """Return the steps as a table."""
+        return as_table(self.steps)
 
 
 @dataclass(frozen=True)

@@ -37,19 +37,25 @@ class Point:
 
 @dataclass(frozen=True)
 class _Scaled:
-    """The program in x from 0 to 1, objective and limits divided by their own size."""
+    """The program in x from 0 to its wall, objective and limits divided by their own size.
+
+    `span` [defects per item] is one unit of x, about twice the distance of the start from the low end: a tight budget
+    leaves only the lowest millionth of a long range, and in units of the range its slopes would dwarf all else.
+    """
 
     program: Program
     objective: str
     limits: dict[str, float]
     size: float
+    span: Array
+    wall: Array
 
     def point(self, x: Array) -> Array:
-        return self.program.low + (self.program.high - self.program.low) * x
+        return np.minimum(self.program.low + self.span * x, self.program.high)
 
     def all_functions(self, x: Array) -> tuple[list[tuple[float, Array, Array, Array]], Array]:
         """Return objective first, then the limits, each (value, gradient, curvature, scrap weight) in x."""
-        span = self.program.high - self.program.low
+        span = self.span
         results = []
         v = self.point(x)
         laws = self.program.law_slopes(v)
@@ -170,27 +176,29 @@ def _solve(
 ) -> Point:
     """Run the primal-dual iteration from a strictly feasible start."""
     size = max(abs(program.value(objective, start)), 1e-300)
-    scaled = _Scaled(program, objective, limits, size)
-    x = np.clip((start - program.low) / (program.high - program.low), 1e-12, 1.0 - 1e-12)
+    reach = program.high - program.low
+    span = np.minimum(np.maximum(2.0 * (start - program.low), 1e-12 * reach), reach)
+    scaled = _Scaled(program, objective, limits, size, span, reach / span)
+    x = np.clip((start - program.low) / span, 1e-12, scaled.wall - 1e-12)
     count = 2 * len(x) + len(limits)
     functions, _ = scaled.all_functions(x)
-    room = _room(functions, x)
+    room = _room(functions, x, scaled.wall)
     multiplier = 1.0 / room
     best: tuple[float, float, Array, Array] = (-np.inf, np.inf, x, multiplier)
     for _ in range(ITERATIONS):
         value, prices = functions[0][0], multiplier[: len(limits)]
-        bound = _bound(functions, x, prices)
+        bound = _bound(functions, x, prices, scaled.wall)
         if bound > best[0] or value < best[1]:
             best = _better(best, bound, value, x, multiplier)
         if best[1] - best[0] <= GAP * max(abs(best[1]), 1e-300) or (enough is not None and value * size < enough):
             break
         weight = CENTRING * count / float(room @ multiplier)
-        move = _newton(functions, program.exponent_slope * (program.high - program.low), x, room, multiplier, weight)
+        move = _newton(functions, program.exponent_slope * span, x, room, multiplier, weight)
         stepped = _step(scaled, functions, x, multiplier, room, move, weight)
         if stepped is None:
             break
         x, multiplier, functions = stepped
-        room = _room(functions, x)
+        room = _room(functions, x, scaled.wall)
     bound, value, x, multiplier = best
     named = {name: float(multiplier[i]) * size / _size(limit) for i, (name, limit) in enumerate(limits.items())}
     return Point(scaled.point(x), value * size, bound * size, named)
@@ -205,16 +213,16 @@ def _better(
     return max(bound, best[0]), best[1], best[2], best[3]
 
 
-def _room(functions: list[tuple[float, Array, Array, Array]], x: Array) -> Array:
+def _room(functions: list[tuple[float, Array, Array, Array]], x: Array, wall: Array) -> Array:
     """Return the room left (positive inside) in the limits, the lower and the upper ends of the box."""
-    return np.concatenate([[-f[0] for f in functions[1:]], x, 1.0 - x])
+    return np.concatenate([[-f[0] for f in functions[1:]], x, wall - x])
 
 
-def _bound(functions: list[tuple[float, Array, Array, Array]], x: Array, prices: Array) -> float:
+def _bound(functions: list[tuple[float, Array, Array, Array]], x: Array, prices: Array, wall: Array) -> float:
     """Return a lower bound of the objective over all points that keep the limits (see the module's first lines)."""
     slope = functions[0][1] + sum((p * f[1] for p, f in zip(prices, functions[1:], strict=True)), np.zeros(len(x)))
     value = functions[0][0] + sum(p * f[0] for p, f in zip(prices, functions[1:], strict=True))
-    return float(value + np.sum(np.minimum(-slope * x, slope * (1.0 - x))))
+    return float(value + np.sum(np.minimum(-slope * x, slope * (wall - x))))
 
 
 def _newton(
@@ -230,11 +238,11 @@ def _newton(
     prices, lower, upper = multiplier[:k], multiplier[k : k + m], multiplier[k + m :]
     gradients = [f[1] for f in functions[1:]]
     diagonal = functions[0][2] + sum((p * f[2] for p, f in zip(prices, functions[1:], strict=True)), np.zeros(m))
-    diagonal = diagonal + lower / x + upper / (1.0 - x)
+    diagonal = diagonal + lower / x + upper / room[k + m :]
     scrap = functions[0][3] + sum((p * f[3] for p, f in zip(prices, functions[1:], strict=True)), 0.0 * functions[0][3])
     hessian = reach.T @ (scrap[:, None] * reach)
     hessian[np.diag_indices(m)] += diagonal
-    force = functions[0][1] - (1.0 / weight) * (1.0 / x - 1.0 / (1.0 - x))
+    force = functions[0][1] - (1.0 / weight) * (1.0 / x - 1.0 / room[k + m :])
     for i, g in enumerate(gradients):
         hessian += prices[i] / room[i] * np.outer(g, g)
         force = force + g / (weight * room[i])
@@ -254,12 +262,14 @@ def _solve_positive(matrix: Array, right: Array) -> Array:
         return np.asarray(scale * np.linalg.lstsq(scaled, scale * right, rcond=None)[0])
 
 
-def _residual(functions: list[tuple[float, Array, Array, Array]], x: Array, multiplier: Array, weight: float) -> float:
+def _residual(
+    functions: list[tuple[float, Array, Array, Array]], x: Array, multiplier: Array, weight: float, wall: Array
+) -> float:
     m, k = len(x), len(functions) - 1
     slope = functions[0][1] - multiplier[k : k + m] + multiplier[k + m :]
     for p, f in zip(multiplier[:k], functions[1:], strict=True):
         slope = slope + p * f[1]
-    return float(np.sqrt(np.sum(slope**2) + np.sum((multiplier * _room(functions, x) - 1.0 / weight) ** 2)))
+    return float(np.sqrt(np.sum(slope**2) + np.sum((multiplier * _room(functions, x, wall) - 1.0 / weight) ** 2)))
 
 
 def _step(
@@ -270,14 +280,14 @@ def _step(
     dx, dm = move
     shrinking = dm < 0.0
     length = min(1.0, 0.995 * float(np.min(-multiplier[shrinking] / dm[shrinking], initial=np.inf)))
-    walls = np.concatenate([-x[dx < 0.0] / dx[dx < 0.0], (1.0 - x[dx > 0.0]) / dx[dx > 0.0]])
+    walls = np.concatenate([-x[dx < 0.0] / dx[dx < 0.0], (scaled.wall - x)[dx > 0.0] / dx[dx > 0.0]])
     length = min(length, 0.995 * float(np.min(walls, initial=np.inf)))
-    before = _residual(functions, x, multiplier, weight)
+    before = _residual(functions, x, multiplier, weight, scaled.wall)
     for _ in range(60):
         moved, changed = x + length * dx, multiplier + length * dm
         new, _ = scaled.all_functions(moved)
-        inside = all(np.isfinite(f[0]) for f in new) and bool(np.all(_room(new, moved) > 0.0))
-        if inside and _residual(new, moved, changed, weight) <= (1.0 - 0.01 * length) * before:
+        inside = all(np.isfinite(f[0]) for f in new) and bool(np.all(_room(new, moved, scaled.wall) > 0.0))
+        if inside and _residual(new, moved, changed, weight, scaled.wall) <= (1.0 - 0.01 * length) * before:
             return moved, changed, new
         length *= 0.6
     return None
