@@ -9,7 +9,7 @@ from math import prod
 from allocator.scenario.faults import Damage, Finding, Owner, did_you_mean, listed
 from allocator.scenario.forms import Remark, form_remarks
 from allocator.scenario.keys import NAMELESS
-from allocator.scenario.law_rules import law_remarks, start_remarks
+from allocator.scenario.law_rules import law_remarks, start_remarks, start_remarks_of
 from allocator.scenario.level import ATTRIBUTE, given
 from allocator.scenario.line_rules import cost_key_findings, feeds_findings, net_cost_findings
 from allocator.scenario.model import Alternative, Capability, Costs, Floor, Law, Scenario, Step
@@ -73,7 +73,7 @@ def _step_findings(i: int, step: Step, scenario: Scenario) -> Iterator[Finding]:
     if step.safety or step.fixed:
         yield from _promise_findings(owner, step)
     if step.alternative:
-        yield from _alternatives_findings(i, step, scenario)
+        yield from _alternatives_findings(i, step, scenario, not unsound)
 
 
 def _under(key: str, owner: Owner, remarks: Sequence[Remark]) -> Iterator[Finding]:
@@ -98,13 +98,16 @@ def _promise_findings(owner: Owner, step: Step) -> Iterator[Finding]:
         yield Finding(owner, "fixed", "true beside improve", "leave out one of the two")
 
 
-def _alternatives_findings(i: int, step: Step, scenario: Scenario) -> Iterator[Finding]:
+def _alternatives_findings(i: int, step: Step, scenario: Scenario, sound: bool) -> Iterator[Finding]:
     yield from _repeated("alternative", [a.name for a in step.alternative], (i,))
     purchases = [purchase.name for purchase in scenario.purchase]
     for j, alternative in enumerate(step.alternative):
         owner = ("alternative", i, j)
         if alternative.capability is not None:
-            yield from _under("capability", owner, form_remarks(alternative.capability))
+            remarks = form_remarks(alternative.capability)
+            if not remarks and sound:
+                remarks = start_remarks_of(alternative.capability, step, scenario.default.shift)
+            yield from _under("capability", owner, remarks)
         if alternative.uses is not None and alternative.uses not in purchases:
             otherwise = "name a [[purchase]] of this file" if purchases else "add a [[purchase]] of that name"
             allowed = did_you_mean(alternative.uses, purchases, otherwise)

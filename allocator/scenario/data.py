@@ -49,7 +49,7 @@ def _values(capability: dict[str, Any], owner: Owner, folder: Path | None, findi
     if folder is None:
         return refuse("data", shown(name), "no folder is known to look in: give lsl, usl, mean, std and sample instead")
     try:
-        cells = [row for row in read_cells(read_text(folder / name, name)) if any(map(str.strip, row))]
+        cells = [row for row in read_cells(read_text(folder / name, name), name) if any(map(str.strip, row))]
     except InputError as error:
         return refuse("data", f"'{name}': {error.faults[0].found}", error.faults[0].allowed)
     header = [cell.strip() for cell in cells[0]]

@@ -84,7 +84,8 @@ def shown(value: object) -> str:
         return "a table"
     if isinstance(value, (list, tuple)):
         return "a list"
-    text = repr(value)
+    # TOML knows dates; everything else that is not a text shows as it was written.
+    text = repr(value) if isinstance(value, (str, int, float)) else str(value)
     return text if len(text) <= LONGEST else f"{text[: LONGEST - 4]} …'"
 
 
@@ -133,7 +134,7 @@ def _faults_of_group(group: list[Finding], places: Places) -> list[tuple[tuple[i
     if len(group) <= SHOWN:
         return [(_file_order(f), Fault(_where([f], places), f.key, f.found, f.allowed)) for f in group]
     founds = list(dict.fromkeys(f.found for f in group))
-    found = ", ".join(founds[:SHOWN]) + (", …" if len(founds) > SHOWN else "")
+    found = " / ".join(founds[:SHOWN]) + (" …" if len(founds) > SHOWN else "")
     return [(_file_order(group[0]), Fault(_where(group, places), group[0].key, found, group[0].allowed))]
 
 

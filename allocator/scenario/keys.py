@@ -14,7 +14,7 @@ from typing import Any, TypeVar
 from pydantic import TypeAdapter, ValidationError
 
 from allocator.scenario.faults import Damage, Finding, Owner, did_you_mean, hint, listed, shown, topic_of
-from allocator.scenario.model import NUMBER_TAG, TABLE_TAG, Head, Step, Table
+from allocator.scenario.model import MOST_COUNTED, NUMBER_TAG, TABLE_TAG, Head, Step, Table
 from allocator.scenario.schema import Spec, known_keys, spec
 
 Record = TypeVar("Record", bound=Table)
@@ -146,8 +146,9 @@ def _allowed(here: Spec, found: object) -> str:
     if here.choices and isinstance(found, str):
         near = hint(found, here.choices)
         return f"did you mean '{near}'?" if near else f"give {here.words}"
-    number = isinstance(found, (int, float)) and not isinstance(found, bool)
-    if number and here.upper == 1.0 and 1.0 < float(found) <= 100.0:  # type: ignore[arg-type]
+    if isinstance(found, (int, float)) and MOST_COUNTED < abs(found) < float("inf"):
+        return f"give {here.words}, of a size that a line can have"
+    if isinstance(found, (int, float)) and here.upper == 1.0 and 1.0 < found <= 100.0:
         return f"give {here.words}; a percentage is divided by 100, as 99.5 % is 0.995"
     if isinstance(found, str) and "number" in here.kinds + ("number",) * ("integer" in here.kinds):
         return f"give {here.words}, {_number_help(found)}"

@@ -102,11 +102,24 @@ def _may_be_negative(capability: Capability) -> bool:
     return capability.bad is not None and capability.of is not None and 2 * capability.bad >= capability.of
 
 
+NO_POWER = "a power needs a level above 0 to start from: use 'exponential', 'decade' or 'quotes'"
+
+
 def _power_remarks(today: Level) -> list[Remark]:
     if today.sigma_level > 0.0:
         return []
-    found = f"law 'power' from a sigma level of {today.sigma_level:.4g}"
-    return [("law", found, "a power needs a level above 0 to start from: use 'exponential', 'decade' or 'quotes'")]
+    return [("law", f"law 'power' from a sigma level of {today.sigma_level:.4g}", NO_POWER)]
+
+
+def start_remarks_of(alternative: Capability, step: Step, default_shift: float | None) -> list[Remark]:
+    """Return what is wrong between the step's law and an alternative's sound capability, from which it starts too."""
+    if step.improve is None or step.improve.law != "power" or not _may_be_negative(alternative):
+        return []
+    today = resolve(step.capability, step.opportunities, None, default_shift)
+    level = resolve(alternative, step.opportunities, today)
+    if level.sigma_level > 0.0:
+        return []
+    return [("", f"a sigma level of {level.sigma_level:.4g}, from which law 'power' starts", NO_POWER)]
 
 
 def _at_remarks(at: Capability, step: Step, today: Level) -> list[Remark]:

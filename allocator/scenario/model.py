@@ -6,8 +6,15 @@ from typing import Annotated, Literal
 
 from pydantic import BaseModel, ConfigDict, Discriminator, Field, Tag
 
+LARGEST = 1e30
+"""Beyond every figure a line can have, and small enough that no product of a few of them overflows."""
+MOST_COUNTED = 10**12
+MOST_COPIES = 1000
+STEEPEST = 100.0
+"""Largest exponent or rate of a law: a tenth of a sigma already multiplies its cost."""
+
 # Strict: "1.2" in quotes and true are no numbers; 1 is one.
-Finite = Annotated[float, Field(strict=True, allow_inf_nan=False)]
+Finite = Annotated[float, Field(strict=True, allow_inf_nan=False, ge=-LARGEST, le=LARGEST)]
 Nonnegative = Annotated[Finite, Field(ge=0.0)]
 Positive = Annotated[Finite, Field(gt=0.0)]
 Share = Annotated[Finite, Field(ge=0.0, le=1.0)]
@@ -15,7 +22,9 @@ OpenShare = Annotated[Finite, Field(gt=0.0, lt=1.0)]
 BelowOne = Annotated[Finite, Field(ge=0.0, lt=1.0)]
 PerMillion = Annotated[Finite, Field(gt=0.0, lt=1e6)]
 Factor = Annotated[Finite, Field(ge=1.0)]
-Count = Annotated[int, Field(strict=True, ge=1)]
+Count = Annotated[int, Field(strict=True, ge=1, le=MOST_COUNTED)]
+CopyCount = Annotated[int, Field(strict=True, ge=1, le=MOST_COPIES)]
+Steepness = Annotated[Finite, Field(gt=0.0, le=STEEPEST)]
 Flag = Annotated[bool, Field(strict=True)]
 Name = Annotated[str, Field(strict=True, min_length=1)]
 Evidence = Literal["measured", "quoted", "judged"]
@@ -50,14 +59,14 @@ class Capability(Table):
     dpmo: PerMillion | None = None
     item_yield: OpenShare | None = None
     ppm: PerMillion | None = None
-    bad: int | None = Field(None, strict=True, ge=0)
+    bad: int | None = Field(None, strict=True, ge=0, le=MOST_COUNTED)
     of: Count | None = None
     data: str | None = None
     column: str | None = None
     shift: Nonnegative | None = None
     k: BelowOne | None = None
     sides: Literal[1, 2] | None = None
-    sample: int | None = Field(None, strict=True, ge=2)
+    sample: int | None = Field(None, strict=True, ge=2, le=MOST_COUNTED)
 
 
 class Inspection(Table):
@@ -106,8 +115,8 @@ class Law(Table):
     """A continuous cost of improvement; exactly one of price, per_year, per_item (for quotes: in every point)."""
 
     law: Literal["power", "exponential", "decade", "quotes"]
-    exponent: Positive | None = None
-    rate: Positive | None = None
+    exponent: Steepness | None = None
+    rate: Steepness | None = None
     price: Nonnegative | None = None
     per_year: Nonnegative | None = None
     per_item: Nonnegative | None = None
@@ -125,8 +134,8 @@ class Law(Table):
 class Copies(Table):
     """Redundancy: `installed` items of which `needed` must be good, with a common-cause share."""
 
-    installed: Count
-    needed: Count
+    installed: CopyCount
+    needed: CopyCount
     common_cause: Share = 0.0
 
 

@@ -56,8 +56,10 @@ def read_scenario(path: str | Path) -> Scenario:
     text = read_text(path, path.name)
     try:
         data = tomllib.loads(text)
-    except tomllib.TOMLDecodeError as error:
+    except ValueError as error:  # Also for a whole number of thousands of digits.
         raise InputError([_syntax_fault(path.name, text, str(error))]) from None
+    except RecursionError:
+        raise InputError([Fault(path.name, "", "brackets nested without end", "close them")]) from None
     with bulk():
         return _read(data, _Reading(Places(path.name), path.parent))
 

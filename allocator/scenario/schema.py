@@ -9,7 +9,7 @@ from typing import Any
 
 from pydantic import TypeAdapter
 
-from allocator.scenario.model import Alternative, Step, Table
+from allocator.scenario.model import LARGEST, MOST_COUNTED, Alternative, Step, Table
 
 REMARKS = ("source", "evidence", "note")
 PLAIN_WORDS = {
@@ -83,7 +83,7 @@ def _spec_of(options: list[dict[str, Any]]) -> Spec:
     kinds = tuple(option.get("type", "string") for option in options)
     choices = tuple(str(choice) for option in options for choice in option.get("enum", ()))
     keys = tuple(key for option in options for key in option.get("properties", {}))
-    tops = [option.get("maximum", option.get("exclusiveMaximum")) for option in options]
+    tops = [option.get("exclusiveMaximum", option.get("maximum")) for option in options]
     ordered = tuple(k for k in keys if k not in REMARKS) + tuple(k for k in keys if k in REMARKS)
     upper = next((top for top in tops if top is not None), None)
     return Spec(kinds, " or ".join(map(_words, options)), choices, ordered, upper)
@@ -101,10 +101,14 @@ def _words(option: dict[str, Any]) -> str:
 def _range(option: dict[str, Any]) -> str:
     low, above = option.get("minimum"), option.get("exclusiveMinimum")
     high, below = option.get("maximum"), option.get("exclusiveMaximum")
+    # The widest bounds of all only keep arithmetic from overflowing; they explain nothing.
+    low = None if low is None or low <= -LARGEST or above is not None else low
+    high = None if high is None or high >= MOST_COUNTED or below is not None else high
     if low is not None and high is not None:
-        return f" from {low:g} to {high:g}"
+        return f" from {low:,.9g} to {high:,.9g}"
     ends = [f"above {above:,.9g}"] if above is not None else []
     ends += [f"below {below:,.9g}"] if below is not None else []
+    ends += [f"up to {high:,.9g}"] if high is not None else []
     start = f", {low:g} or more" if low is not None else ""
     return start + (" " if ends and not start else " and " if ends else "") + " and ".join(ends)
 

@@ -58,11 +58,20 @@ def _refused(name: str, found: str, allowed: str) -> InputError:
     return InputError([Fault(name, "", found, allowed)])
 
 
-def read_cells(text: str) -> Cells:
-    """Return header and rows; the separator is the one that the header line has most of."""
+def read_cells(text: str, name: str) -> Cells:
+    """Return header and rows; the separator is the one that the header line has most of.
+
+    Raises
+    ------
+    InputError
+        When the text is no table.
+    """
     header = text.lstrip("\r\n").splitlines()[0]
     separator = max(SEPARATORS, key=header.count) if any(s in header for s in SEPARATORS) else ","
-    return list(csv.reader(io.StringIO(text, newline=""), delimiter=separator))
+    try:
+        return list(csv.reader(io.StringIO(text, newline=""), delimiter=separator))
+    except csv.Error as error:
+        raise _refused(name, f"a table that cannot be read ({error})", "save the sheet as CSV (UTF-8)") from None
 
 
 def read_table(path: Path, name: str, record: type[Step] | type[Alternative]) -> TableRead:
@@ -77,10 +86,7 @@ def read_table(path: Path, name: str, record: type[Step] | type[Alternative]) ->
     """
     if path.suffix.lower() in (".xlsx", ".xls", ".ods") or "#" in name:
         raise _refused(name, "a workbook", "save the sheet as CSV (UTF-8) and name that file")
-    try:
-        cells = read_cells(read_text(path, name))
-    except csv.Error as error:
-        raise _refused(name, f"a table that cannot be read ({error})", "save the sheet as CSV (UTF-8)") from None
+    cells = read_cells(read_text(path, name), name)
     table = TableRead(name)
     written = [(number, row) for number, row in enumerate(cells, start=1) if row and any(map(str.strip, row))]
     header, body = [cell.strip() for cell in written[0][1]], written[1:]

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import sys
 from collections.abc import Callable
 from decimal import Decimal
 from typing import Any
@@ -90,4 +91,7 @@ def _checked_loss(
 
 
 def _is_number(value: object) -> bool:
-    return isinstance(value, (int, float)) and not isinstance(value, bool)
+    """Booleans are none, and neither are whole numbers too long for arithmetic."""
+    if isinstance(value, bool) or not isinstance(value, (int, float)):
+        return False
+    return isinstance(value, float) or value.bit_length() < sys.float_info.max_exp
