@@ -165,7 +165,7 @@ def summarise(problem: Problem, best: Solved, binding: tuple[Binding, ...]) -> B
     """Return the best reachable yield of an answer with its total and what binds."""
     assert best.outcome is not None
     load = best.outcome.loads[problem.split]
-    return BestReachable(math.exp(-load), -math.expm1(-load), best.outcome.money.total, binding)
+    return BestReachable(problem.split, math.exp(-load), -math.expm1(-load), best.outcome.money.total, binding)
 
 
 def binding_steps(problem: Problem, best: Solved, budget: float | None) -> tuple[Binding, ...]:

@@ -147,8 +147,9 @@ class Binding:
 
 @dataclass(frozen=True)
 class BestReachable:
-    """The highest yield any choice can reach, its least cost, and what binds there."""
+    """The highest yield (`of` says which) any choice can reach, its least cost, and what binds there."""
 
+    of: str
     yield_: float
     loss: float
     total: float

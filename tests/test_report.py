@@ -110,7 +110,7 @@ def a_plan(**changes: Any) -> Plan:
         money=money(), dpu=0.0101, capital=90_000.0, purchases=(Bought("Laser cell", 250_000.0, 61_000.0),),
         steps=tuple(steps), today=today_line(), proof=Proof(290_469.0, 290_468.9, 3.4e-7, "price road", 0.012),
         price_of_defect_budget=-2.5e6, cost_of_next_nine=34_000.0,
-        best_reachable=BestReachable(0.9998, 2e-4, 510_000.0, (Binding("Weld", "at its cap"),)), binding=(),
+        best_reachable=BestReachable("final_yield", 0.9998, 2e-4, 510_000.0, (Binding("Weld", "at its cap"),)), binding=(),
         rules=(RULE, MISSED), rules_note="", assumed=("gates find all of their own defects",), cautions=(CAUTION,),
     )  # fmt: skip
     return replace(plan, **changes)
@@ -131,7 +131,7 @@ def nothing_possible() -> Plan:
 def some_nines(**changes: Any) -> Nines:
     first = NinesPoint("today", 1.6, 0.975, 0.025, 0.975, 0.025, 557_000.0, None, None, (), 0.0)
     last = NinesPoint("highest reachable", 11.7, 1.0, 2e-12, 1.0, 1.5e-12, 9e5, 3e5, math.inf, NAMES * 3, 1e-9)
-    highest = BestReachable(1.0, 2e-12, 9e5, (Binding(MARKUP, "at its cap"),))
+    highest = BestReachable("final_yield", 1.0, 2e-12, 9e5, (Binding(MARKUP, "at its cap"),))
     answered = Nines("Frame line", "EUR", "final_yield", 1.6, (first, last), highest, 0.99, 0.01, 2e5, (), (CAUTION,))
     return replace(answered, **changes)
 

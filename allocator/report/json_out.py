@@ -65,7 +65,7 @@ def _today_line(line: TodayLine) -> dict[str, Any]:
 
 
 def _best(best: BestReachable | None) -> dict[str, Any] | None:
-    return None if best is None else {"yield": best.yield_, "loss": best.loss, "total": best.total}
+    return None if best is None else {"of": best.of, "yield": best.yield_, "loss": best.loss, "total": best.total}
 
 
 def _cautions(cautions: Sequence[Caution]) -> list[dict[str, Any]]:

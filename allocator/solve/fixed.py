@@ -28,10 +28,13 @@ class FixedAnswer:
     price: dict[str, float] | None
 
 
-def solve_fixed(problem: Problem, rows: NDArray[np.int64]) -> FixedAnswer | None:
-    """Return the best levels for one way per step, None when these ways cannot keep the budgets and limits."""
+def solve_fixed(problem: Problem, rows: NDArray[np.int64], hopeless: float | None = None) -> FixedAnswer | None:
+    """Return the best levels for one way per step, None when these ways cannot keep the budgets and limits.
+
+    The search stops early, at a worse answer, once its bound passes `hopeless`.
+    """
     program = build_program(problem, rows)
-    point = minimise(program, problem.objective, _limits(problem))
+    point = minimise(program, problem.objective, _limits(problem), hopeless)
     if point is None:
         return None
     outcome = evaluate(problem.line, problem.options, _choice(problem, rows, program, point))

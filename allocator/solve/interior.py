@@ -19,7 +19,7 @@ Array = NDArray[np.float64]
 GAP = 1e-10
 """Relative gap aimed at."""
 ITERATIONS = 120
-CENTRING = 12.0
+CENTRING = 4.0
 """By how much the barrier weight grows per iteration."""
 INTERIOR = 1e-9
 """A budget with less room than this share of itself is taken as having none."""
@@ -72,7 +72,7 @@ def _size(limit: float) -> float:
     return max(abs(limit), 1e-300)
 
 
-def minimise(program: Program, objective: str, limits: dict[str, float], enough: float | None = None) -> Point | None:
+def minimise(program: Program, objective: str, limits: dict[str, float], hopeless: float | None = None) -> Point | None:
     """Return the least of one function of the program subject to limits on others, None when no point keeps them.
 
     Parameters
@@ -82,8 +82,8 @@ def minimise(program: Program, objective: str, limits: dict[str, float], enough:
         One of `program.functions`.
     limits : dict
         Upper limit by function name.
-    enough : float, optional
-        Stop as soon as the objective is below this.
+    hopeless : float, optional
+        Stop as soon as the bound passes this: whoever asks has something better already.
     """
     rising = {n: b for n, b in limits.items() if not program.functions[n].law.any()}
     falling = {n: b for n, b in limits.items() if n not in rising}
@@ -105,7 +105,7 @@ def minimise(program: Program, objective: str, limits: dict[str, float], enough:
                 value = program.value(objective, cheapest.v)
                 return _with_fixed(Point(cheapest.v, value, value, {}), fixed)
             start = cheapest.v
-    return _with_fixed(_solve(program, objective, {**rising, **falling}, start, enough), fixed)
+    return _with_fixed(_solve(program, objective, {**rising, **falling}, start, hopeless=hopeless), fixed)
 
 
 def _without_room(
@@ -172,7 +172,12 @@ def _start(program: Program, limits: dict[str, float]) -> Array:
 
 
 def _solve(
-    program: Program, objective: str, limits: dict[str, float], start: Array, enough: float | None = None
+    program: Program,
+    objective: str,
+    limits: dict[str, float],
+    start: Array,
+    enough: float | None = None,
+    hopeless: float | None = None,
 ) -> Point:
     """Run the primal-dual iteration from a strictly feasible start."""
     size = max(abs(program.value(objective, start)), 1e-300)
@@ -190,7 +195,9 @@ def _solve(
         bound = _bound(functions, x, prices, scaled.wall)
         if bound > best[0] or value < best[1]:
             best = _better(best, bound, value, x, multiplier)
-        if best[1] - best[0] <= GAP * max(abs(best[1]), 1e-300) or (enough is not None and value * size < enough):
+        decided = best[1] * size < (-np.inf if enough is None else enough)
+        decided = decided or best[0] * size > (np.inf if hopeless is None else hopeless)
+        if decided or best[1] - best[0] <= GAP * max(abs(best[1]), 1e-300):
             break
         weight = CENTRING * count / float(room @ multiplier)
         move = _newton(functions, program.exponent_slope * span, x, room, multiplier, weight)

@@ -49,7 +49,8 @@ class Search:
         """Solve for one way per step (once) and keep it if it is the best so far."""
         key = rows.tobytes()
         if key not in self.tried:
-            self.tried[key] = solve_fixed(self.problem, rows)
+            hopeless = None if self.best is None else self.value(self.best)
+            self.tried[key] = solve_fixed(self.problem, rows, hopeless)
         answer = self.tried[key]
         if answer is not None and (self.best is None or self.value(answer) < self.value(self.best)):
             self.best = answer

@@ -81,12 +81,18 @@ def _by_size(problem: Problem, starts: list[NDArray[np.int64]], enough: float | 
 
 
 def _every_choice(problem: Problem, by_step: list[NDArray[np.int64]], choices: int) -> Solved | None:
-    answers = [solve_fixed(problem, np.array(rows, dtype=np.int64)) for rows in itertools.product(*by_step)]
-    found = [a for a in answers if a is not None]
-    if not found:
+    best: FixedAnswer | None = None
+    bound = math.inf
+    for rows in itertools.product(*by_step):
+        value = None if best is None else best.outcome.value(problem.objective)
+        answer = solve_fixed(problem, np.array(rows, dtype=np.int64), hopeless=value)
+        if answer is None:
+            continue
+        bound = min(bound, answer.bound)
+        if value is None or answer.outcome.value(problem.objective) < value:
+            best = answer
+    if best is None:
         return None
-    best = min(found, key=lambda a: a.outcome.value(problem.objective))
-    bound = min(a.bound for a in found)
     method = "interior point" if choices == 1 else f"all {choices:,} choices, each by interior point"
     return _solved(problem, best, bound, method)
 
