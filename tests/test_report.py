@@ -88,7 +88,7 @@ def step_target(name: str, **changes: Any) -> StepTarget:
     step = StepTarget(
         step=name, supplier=None, today=level(3.9, None), target=level(), alternatives=(), law=None, budget_share=0.2,
         starts_per_year=50_251.3, scrap=1234.5, rework=0.0, inspection=0.0, improvement=0.0, capital=0.0, at_cap=False,
-        cap=None, floor=None, floor_binds=False, safety=False, first_pass_yield=1.0,
+        cap=None, floor=None, floor_distance=None, floor_binds=False, safety=False, first_pass_yield=1.0,
     )  # fmt: skip
     return replace(step, **changes)
 
@@ -101,7 +101,13 @@ CAUTION = Caution("small_sample", NAMES, "30 parts say little about a tail", "me
 def a_plan(**changes: Any) -> Plan:
     steps = [step_target(name) for name in NAMES]
     steps[0] = replace(
-        steps[0], alternatives=("Grinder [bold]B",), law="power", capital=90_000.0, floor="Cpk 1.33", floor_binds=True
+        steps[0],
+        alternatives=("Grinder [bold]B",),
+        law="power",
+        capital=90_000.0,
+        floor="Cpk 1.33",
+        floor_distance="at the floor",
+        floor_binds=True,
     )
     steps[1] = replace(steps[1], law="decade", at_cap=True, cap="up_to 4.4 sigma")
     plan = Plan(
@@ -223,7 +229,9 @@ def test_last_word_is_always_said(name: str) -> None:
 
 
 def test_safety_is_said_in_stronger_words() -> None:
-    plan = a_plan(steps=(step_target("Brake", safety=True, floor="Cpk 1.67"),))
+    plan = a_plan(
+        steps=(step_target("Brake", safety=True, floor="Cpk 1.67", floor_distance="0.10 Cpk above the floor"),)
+    )
     assert "people can be hurt where 'Brake' fails" in " ".join(render(plan).split())
     nines = some_nines(cautions=(replace(CAUTION, code="safety", steps=("Brake",)),))
     assert "people can be hurt where 'Brake' fails" in " ".join(render(nines).split())

@@ -85,7 +85,7 @@ def _write_out_of_reach(paper: Paper, plan: Plan) -> None:
         paper.say("No choice at all keeps the floors and the limits.")
     if plan.best_reachable is not None:
         best = blocks.best_in_words(plan.best_reachable, plan.currency)
-        paper.say(f"The best reachable {words.yield_name(plan.split)} is {best}.")
+        paper.say(f"The best reachable {words.yield_name(plan.best_reachable.of)} is {best}.")
     if plan.binding:
         paper.heading("What holds it out of reach")
         blocks.write_binding(paper, plan.binding)
