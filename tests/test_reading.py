@@ -417,11 +417,13 @@ KEYS = [
 
 
 @given(CAPABILITIES, st.sampled_from(KEYS), POSITIVE)
+@example({"bad": 0, "of": 1}, {"bad", "of"}, 0.015625)
+@example({"dpmo": 1e-310}, {"dpmo"}, 1.0)
 @example({"cp": 1e3, "cpk": 1e-16}, {"cp", "cpk"}, 1.0)
 @example({"lsl": 0.0, "usl": 1.0, "mean": 5e-324, "std": 1.0}, {"lsl", "usl", "mean", "std"}, 1.0)
 def test_what_the_rules_let_pass_can_be_resolved(figures: dict[str, Any], keys: set[str], opportunities: float) -> None:
     capability = Capability.model_validate({key: value for key, value in figures.items() if key in keys})
-    if not form_remarks(capability):
+    if not form_remarks(capability, opportunities):
         level = resolve(capability, opportunities)
         assert 0.0 <= level.k < 1.0
         assert math.isfinite(level.sigma_level)

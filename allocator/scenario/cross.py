@@ -61,10 +61,10 @@ def _repeated(kind: str, names: Sequence[str], within: Owner = ()) -> list[Findi
 def _step_findings(i: int, step: Step, scenario: Scenario) -> Iterator[Finding]:
     owner = ("step", i)
     yield from cost_key_findings(i, step)
-    unsound = form_remarks(step.capability)
+    unsound = form_remarks(step.capability, step.opportunities)
     yield from _under("capability", owner, unsound)
     if step.improve is not None:
-        remarks = law_remarks(step.improve)
+        remarks = law_remarks(step.improve, step.opportunities)
         yield from _under("improve", owner, remarks)
         if not remarks and not unsound:
             yield from _under("improve", owner, start_remarks(step, step.improve, scenario.default.shift))
@@ -104,7 +104,7 @@ def _alternatives_findings(i: int, step: Step, scenario: Scenario, sound: bool) 
     for j, alternative in enumerate(step.alternative):
         owner = ("alternative", i, j)
         if alternative.capability is not None:
-            remarks = form_remarks(alternative.capability)
+            remarks = form_remarks(alternative.capability, step.opportunities)
             if not remarks and sound:
                 remarks = start_remarks_of(alternative.capability, step, scenario.default.shift)
             yield from _under("capability", owner, remarks)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from functools import cache
 
@@ -31,17 +32,19 @@ FAMILIES: dict[str, frozenset[str]] = {
 ORDER = [key for family in FAMILIES.values() for key in sorted(family, key="lsl usl mean std bad of".find)]
 BESIDE = ("shift", "k", "sides", "sample")
 ROUNDING = 1e-12
+LEAST_CHANCE, MOST_EXPONENT = 1e-300, 36.0
+"""A defect probability p is told from 0 above the first, from 1 while −ln(1 − p) is below the second."""
 
 
-def form_remarks(capability: Capability) -> list[Remark]:
-    """Return what is wrong with a capability taken by itself."""
+def form_remarks(capability: Capability, opportunities: float) -> list[Remark]:
+    """Return what is wrong with a capability of items with so many opportunities, taken by itself."""
     fields = frozenset(capability.model_fields_set)
     wrong = _key_remarks(fields)
     if wrong:
         return list(wrong)
     if capability.sides is not None:
-        return _side_remarks(capability) + _figure_remarks(capability, fields)
-    return _figure_remarks(capability, fields)
+        return _side_remarks(capability) + _figure_remarks(capability, fields, opportunities)
+    return _figure_remarks(capability, fields, opportunities)
 
 
 @cache
@@ -113,7 +116,7 @@ def _side_remarks(capability: Capability) -> list[Remark]:
     return [("sides", "sides = 1 beside two limits", "leave out the limit that does not bind, or sides")]
 
 
-def _figure_remarks(capability: Capability, keys: frozenset[str]) -> list[Remark]:
+def _figure_remarks(capability: Capability, keys: frozenset[str], opportunities: float) -> list[Remark]:
     if "cpk" in keys:
         return _index_remarks("cp", capability.cp, "cpk", capability.cpk)
     if "ppk" in keys:
@@ -121,8 +124,8 @@ def _figure_remarks(capability: Capability, keys: frozenset[str]) -> list[Remark
     if "std" in keys:
         return _limit_remarks(capability)
     if "bad" in keys:
-        return _count_remarks(capability)
-    return []
+        return _count_remarks(capability) or _chance_remarks(capability, opportunities)
+    return [] if keys & {"cp", "sigma_level"} else _chance_remarks(capability, opportunities)
 
 
 def _index_remarks(whole_key: str, whole: float | None, near_key: str, near: float | None) -> list[Remark]:
@@ -159,6 +162,29 @@ def _limit_remarks(capability: Capability) -> list[Remark]:
     if lsl is not None and mean <= lsl:
         return [(key, f"mean {mean:g} with lsl {lsl:g}", "the mean must lie above the lower limit")]
     return []
+
+
+def _chance_remarks(capability: Capability, opportunities: float) -> list[Remark]:
+    """Refuse what leaves a defect probability per opportunity that rounds to 0 or 1: no sigma level stands for it."""
+    rate = capability.defect_rate if capability.dpmo is None else capability.dpmo * 1e-6
+    if rate is not None:
+        exponent = rate
+    elif capability.yield_ is not None:
+        return []
+    else:
+        exponent = -math.log1p(-_bad_share(capability)) / opportunities
+    if LEAST_CHANCE < exponent < MOST_EXPONENT:
+        return []
+    found = f"a defect probability per opportunity of {-math.expm1(-exponent):g} ({opportunities:g} opportunities per item)"
+    return [("", found, "it must lie between 0 and 1: check the figure, and opportunities")]
+
+
+def _bad_share(capability: Capability) -> float:
+    if capability.item_yield is not None:
+        return 1.0 - capability.item_yield
+    if capability.ppm is not None:
+        return capability.ppm * 1e-6
+    return (capability.bad or 0.5) / (capability.of or 1)
 
 
 def _count_remarks(capability: Capability) -> list[Remark]:

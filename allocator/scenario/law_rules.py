@@ -14,21 +14,23 @@ PARAMETER = {"power": "exponent", "exponential": "rate"}
 ONE_SCALE = "give exactly one of price, per_year, per_item"
 
 
-def law_remarks(law: Law) -> list[Remark]:
+def law_remarks(law: Law, opportunities: float) -> list[Remark]:
     """Return what is wrong with the keys of a law, taken by itself."""
     remarks = _parameter_remarks(law)
-    remarks += _quote_remarks(law) if law.law == "quotes" else _scale_remarks(law)
+    remarks += _quote_remarks(law, opportunities) if law.law == "quotes" else _scale_remarks(law)
     for key, level in (("at", law.at), ("up_to", law.up_to)):
         if isinstance(level, Capability):
-            remarks += quoted_remarks(key, level)
+            remarks += quoted_remarks(key, level, opportunities)
     return remarks
 
 
-def quoted_remarks(key: str, level: Capability) -> list[Remark]:
+def quoted_remarks(key: str, level: Capability, opportunities: float) -> list[Remark]:
     """Return what is wrong with a level quoted inside a law."""
     if level.data is not None:
         return [(f"{key}.data", "a file of measurements", "quote the level itself, as { cpk = 1.67 } or { dpmo = 20 }")]
-    return [(f"{key}.{below}".rstrip("."), found, allowed) for below, found, allowed in form_remarks(level)]
+    return [
+        (f"{key}.{below}".rstrip("."), found, allowed) for below, found, allowed in form_remarks(level, opportunities)
+    ]
 
 
 def _parameter_remarks(law: Law) -> list[Remark]:
@@ -57,7 +59,7 @@ def _scale_remarks(law: Law) -> list[Remark]:
     return remarks
 
 
-def _quote_remarks(law: Law) -> list[Remark]:
+def _quote_remarks(law: Law, opportunities: float) -> list[Remark]:
     remarks: list[Remark] = []
     if law.at is not None:
         remarks.append(("at", "a table", "leave it out: law 'quotes' takes its levels from its points"))
@@ -66,7 +68,7 @@ def _quote_remarks(law: Law) -> list[Remark]:
         remarks.append(("points", "nothing", "give at least one, as points = [{ cpk = 1.67, price = 80_000 }]"))
     kinds = [_scales(point) for point in law.points]
     for number, (point, scales) in enumerate(zip(law.points, kinds, strict=True), start=1):
-        remarks += quoted_remarks(f"points.{number}", point)
+        remarks += quoted_remarks(f"points.{number}", point, opportunities)
         if len(scales) != 1:
             found = " and ".join(scales) or "no price, per_year or per_item"
             remarks.append((f"points.{number}", found, ONE_SCALE))
