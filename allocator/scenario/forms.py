@@ -175,7 +175,8 @@ def _chance_remarks(capability: Capability, opportunities: float) -> list[Remark
         exponent = -math.log1p(-_bad_share(capability)) / opportunities
     if LEAST_CHANCE < exponent < MOST_EXPONENT:
         return []
-    found = f"a defect probability per opportunity of {-math.expm1(-exponent):g} ({opportunities:g} opportunities per item)"
+    chance = -math.expm1(-exponent)
+    found = f"a defect probability per opportunity of {chance:g} ({opportunities:g} opportunities per item)"
     return [("", found, "it must lie between 0 and 1: check the figure, and opportunities")]
 
 
