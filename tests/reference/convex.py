@@ -18,7 +18,8 @@ from tests.reference.combination import Combination
 
 RELATIVE_GAP = 2e-9
 """Of the objective; simplex works to about 1e-10."""
-CAPITAL_SLACK = 1e-9
+CAPITAL_SLACK = 2e-10
+"""Of the capital left for laws; simplex keeps its rows to 1e-10."""
 ROUNDS = 60
 NODES = 400
 FIRST_TANGENTS = 24
@@ -41,7 +42,12 @@ class Task:
         """Is the capital limit met, exactly?"""
         if self.capital_limit is None:
             return True
-        return self.problem.capital(x) <= self.capital_limit + CAPITAL_SLACK * max(1.0, abs(self.capital_limit))
+        return self.problem.capital(x) <= self.capital_limit + CAPITAL_SLACK * self.capital_unit()
+
+    def capital_unit(self) -> float:
+        """The capital left for laws: near the best reachable yield, a billionth of the limit may be worth a lot."""
+        assert self.capital_limit is not None
+        return max(self.capital_limit - self.problem.capital_fixed, 1e-9 * max(1.0, abs(self.capital_limit)))
 
 
 @dataclass
@@ -232,7 +238,7 @@ class Programme:
             row[: len(self.low)] = p.yield_slope[name] * self.high / budget
             self._add(row, 1 - p.yield_start[name] / budget)
         if task.capital_limit is not None:
-            unit = max(1.0, abs(task.capital_limit))
+            unit = task.capital_unit()
             row = self._blank()
             row[len(self.low) : 2 * len(self.low)] = p.capital_rate * self.size_y / unit
             self._add(row, (task.capital_limit - p.capital_fixed) / unit)

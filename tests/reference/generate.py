@@ -73,7 +73,7 @@ def _bare_line(rng: random.Random, hard: bool) -> dict:
     for i, step in enumerate(scenario["step"]):
         p = math.exp(rng.uniform(math.log(1.5e-3), math.log(0.15))) / (step.get("opportunities", 1) * q[i])
         if hard and rng.random() < 0.6:
-            p, step["opportunities"] = rng.uniform(0.1, 0.55), 1
+            p, step["opportunities"] = rng.uniform(0.1, 0.44), 1
         shift = scenario.get("default", {}).get("shift", 0.0)
         step["capability"] = capabilities.today(rng, p, step.get("opportunities", 1), shift)
     _costs(rng, scenario)
