@@ -61,7 +61,9 @@ def _feeds(problem: Problem, i: int) -> str | None:
 def given_as(capability: Capability) -> str:
     """Return a capability as the user wrote it, keys and figures only."""
     stated = capability.model_dump(exclude_none=True, by_alias=True, exclude=set(REMARKS))
-    return ", ".join(f"{key} = {value}" for key, value in stated.items())
+    return ", ".join(
+        f"{key} = {value:g}" if isinstance(value, float) else f"{key} = {value}" for key, value in stated.items()
+    )
 
 
 def _law_words(problem: Problem, step: Step, i: int) -> str | None:
