@@ -37,6 +37,8 @@ REACH = 1e-7
 """Best reachable loss."""
 NOT_CONVEX = 3e-3
 """The same under a capital limit with laws that are not convex: what the program was seen to miss, not a promise."""
+SOFT = 1e-3
+"""The cost of the best reachable under a capital limit, where the last part in 10⁹ of the yield still costs money."""
 MIXED_GAP = 1e-4
 """Largest gap promised for lines of this size."""
 
@@ -182,7 +184,8 @@ def test_best_reachable(seed: int) -> None:
     assert best.loss <= loss * (1 + promised) + 1e-15
     if best.loss <= loss * (1 + REACH) + 1e-15:
         least, most = float(row["best_from"]), float(row["best_to"])
-        assert least - MIXED_GAP * max(1.0, abs(least)) <= best.total <= most + MIXED_GAP * max(1.0, abs(most))
+        soft = SOFT if "limits" in scenario_of(seed) else MIXED_GAP
+        assert least - soft * max(1.0, abs(least)) <= best.total <= most + soft * max(1.0, abs(most))
 
 
 @pytest.mark.parametrize("seed", LIVE)
