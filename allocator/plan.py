@@ -25,8 +25,8 @@ from allocator.ways import Ways
 
 AT_CAP = 1e-5
 """A step whose defects are within this share of its cap's is at the cap."""
-JUST_REACHABLE = 2e-10
-"""Room given to the best reachable budget when its least cost is asked for, against rounding."""
+JUST_REACHABLE = 1e-9
+"""Room given to the best reachable budget when its least cost is asked for: yields that close are the same yield."""
 BINDING_SLACK = 1e-6
 """A budget used to within this share of itself binds."""
 
@@ -48,7 +48,7 @@ def make_plan(
     of : str, optional
         The yield whose budget is split: "final_yield", "rolled_yield" or "shipped_yield".
     targets : dict, optional
-        Losses 1 − yield by yield name, in place of the scenario's own.
+        Losses 1 − yield by yield name; each takes the place of the scenario's own target, the others stay.
     spend, capital : float, optional [currency/year, currency]
         Ask for the best split yield for a yearly total, or for a capital, instead of the least cost.
 
@@ -155,7 +155,7 @@ def _other_limit_blocks(problem: Problem, blocked: Solved) -> Plan:
     other = replace(problem, split=name, budgets={k: v for k, v in problem.budgets.items() if k == name})
     best = best_reachable(other)
     binding = binding_steps(other, best, problem.budgets[name])
-    plan = describe(best, "cheapest", replace(problem, split=name))
+    plan = describe(best, "cheapest", problem)
     return _with_cautions(
         replace(plan, reached=False, binding=binding, best_reachable=summarise(other, best, binding)), problem
     )

@@ -21,8 +21,8 @@ GAP = 1e-10
 ITERATIONS = 120
 CENTRING = 4.0
 """By how much the barrier weight grows per iteration."""
-INTERIOR = 1e-9
-"""A budget with less room than this share of itself is taken as having none."""
+INTERIOR = 1e-12
+"""A budget with less room than this share of itself, which is the rounding of its figures, is taken as having none."""
 
 
 @dataclass(frozen=True)
