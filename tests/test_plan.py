@@ -100,7 +100,7 @@ def test_no_target_is_the_economic_optimum_and_cheaper_than_any_target() -> None
     assert total_of(optimum) <= total_of(plan_of(shop(), targets={"final_yield": 0.5})) * (1 + SAME)
 
 
-@quick(15)
+@quick(8)
 @given(lines(most=4, law=laws(), offers=alternatives(gates=True)), st.floats(0.05, 0.95))
 def test_a_tighter_target_is_never_cheaper(scenario: Drawn, share: float) -> None:
     loose = plan_of(scenario, targets={"final_yield": 0.1})
@@ -326,7 +326,7 @@ def test_the_price_is_the_slope_of_the_total(loss: float) -> None:
     assert plan.price_of_defect_budget == pytest.approx(central_price(shop(), plan, loss)[0], rel=PRICE)
 
 
-@quick(12)
+@quick(8)
 @given(lines(most=4, law=laws(("decade", "exponential")), offers=alternatives()), st.floats(0.3, 0.9))
 def test_the_price_is_the_slope_of_the_total_on_random_lines(scenario: Drawn, tighter: float) -> None:
     loss = tighter * loss_of(plan_of(scenario))

@@ -182,7 +182,7 @@ def test_without_a_target_or_a_budget_left_there_are_no_rules() -> None:
     assert "false rejects" in plan.rules_note
 
 
-@quick(25)
+@quick(15)
 @given(lines(most=4, law=laws(), offers=alternatives(gates=True)), st.floats(0.2, 0.95), st.booleans())
 def test_no_rule_that_keeps_everything_is_cheaper_than_the_plan(scenario: Drawn, share: float, limited: bool) -> None:
     free = make_plan(scenario_from_dict(scenario))
