@@ -74,7 +74,9 @@ def _by_price(problem: Problem, rows: NDArray[np.int64], hopeless: float | None)
     outcome = evaluate(line, problem.options, Choice(rows, z))
     if not keeps_limits(problem, outcome):
         return None
-    prices = dict(zip(problem.budgets, cleared.prices.tolist(), strict=True)) if len(moving) else None
+    if not len(moving):
+        return FixedAnswer(outcome, outcome.money.total, None)
+    prices = dict(zip(problem.budgets, cleared.prices.tolist(), strict=True))
     return FixedAnswer(outcome, min(cleared.bound + aside, outcome.money.total), prices)
 
 
