@@ -7,7 +7,7 @@ from dataclasses import dataclass, replace
 
 from allocator.cautions import cautions_of_input, what_is_assumed
 from allocator.plan import best_reachable, binding_steps, price_of_budget, rows_in, summarise
-from allocator.problem import Problem, pose
+from allocator.problem import Problem, pose, within
 from allocator.results import BestReachable, Nines, NinesPoint, Yields
 from allocator.scenario.model import Scenario
 from allocator.solve.road import Solved, solve
@@ -147,7 +147,7 @@ def _answer(
 ) -> Solved | None:
     """Return the cheapest plan of one stop, from what is known where it is known."""
     assert optimum.outcome is not None
-    if optimum.outcome.loads[problem.split] <= stop.budget:
+    if within(optimum.outcome.loads[problem.split], stop.budget):
         return optimum
     if stop.label == "highest reachable":
         return best

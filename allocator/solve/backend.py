@@ -56,37 +56,59 @@ def solve_rows(rows: Rows, integer: bool, relative_gap: float = 0.0, seconds: fl
     SolverError
         When HiGHS stops without values (a time limit before the first solution, say).
     """
-    import cvxpy as cp  # here, because it takes a second that continuous problems must not pay for
-
     chosen = rows.binary if integer else np.zeros(len(rows.cost), dtype=bool)
+    options: dict[str, Any] = {"time_limit": seconds, "output_flag": False}
+    options |= {"primal_feasibility_tolerance": FEASIBILITY, "dual_feasibility_tolerance": FEASIBILITY}
+    if integer:
+        options |= {"mip_rel_gap": relative_gap, "mip_feasibility_tolerance": FEASIBILITY, "mip_abs_gap": 0.0}
+    solved = _ask(rows, chosen, options)
+    if solved.status == "unknown":
+        # Now and then presolve loses its way on a sound programme; without it the answer comes.
+        solved = _ask(rows, chosen, options | {"presolve": "off"})
+    if solved.status == "infeasible":
+        return None
+    if solved.x is None:
+        raise SolverError(f"HiGHS stopped without values (status {solved.status}, {seconds:.0f} s allowed)")
+    if integer:
+        return Answer(solved.x, solved.dual_bound, None, None)
+    assert solved.upper_price is not None
+    assert solved.equal_price is not None
+    bound = _safe_bound(rows, solved.upper_price, solved.equal_price)
+    return Answer(solved.x, bound, solved.upper_price, solved.equal_price)
+
+
+@dataclass(frozen=True)
+class _Solved:
+    """What came back: a status, and where there are any, values, prices and the dual bound."""
+
+    status: str
+    x: Array | None = None
+    upper_price: Array | None = None
+    equal_price: Array | None = None
+    dual_bound: float = -np.inf
+
+
+def _ask(rows: Rows, chosen: NDArray[np.bool_], options: dict[str, Any]) -> _Solved:
+    import cvxpy as cp  # here, because it takes a second that the price road must not pay for
+
     x = cp.Variable(len(rows.cost))
     if chosen.any():
         x = cp.Variable(len(rows.cost), boolean=(np.flatnonzero(chosen),))
     upper, equal = cp.Constant(rows.upper), cp.Constant(rows.equal)
     constraints = [upper @ x <= rows.upper_limit, equal @ x == rows.equal_value, x >= rows.low, x <= rows.high]
     problem = cp.Problem(cp.Minimize(rows.cost @ x), constraints)
-    options = {
-        "primal_feasibility_tolerance": FEASIBILITY,
-        "dual_feasibility_tolerance": FEASIBILITY,
-        "time_limit": seconds,
-        "output_flag": False,
-    }
-    if integer:
-        options |= {"mip_rel_gap": relative_gap, "mip_feasibility_tolerance": FEASIBILITY, "mip_abs_gap": 0.0}
     try:
         with _silent_stdout():
             problem.solve(solver=cp.HIGHS, **options)  # type: ignore[no-untyped-call]
-    except cp.error.SolverError as failure:
-        raise SolverError(f"HiGHS stopped without an answer: {failure}") from failure
+    except (cp.error.SolverError, ValueError):
+        # cvxpy answers a status it does not know with either of the two.
+        return _Solved("unknown")
     if problem.status in cp.settings.INF_OR_UNB:
-        return None
-    if x.value is None:
-        raise SolverError(f"HiGHS stopped without values (status {problem.status}, {seconds:.0f} s allowed)")
-    if integer:
-        evidence: Any = problem.solver_stats.extra_stats
-        return Answer(x.value, float(evidence.mip_dual_bound), None, None)
-    upper_price, equal_price = constraints[0].dual_value, constraints[1].dual_value
-    return Answer(x.value, _safe_bound(rows, upper_price, equal_price), upper_price, equal_price)
+        return _Solved("infeasible")
+    evidence: Any = problem.solver_stats.extra_stats
+    if chosen.any():
+        return _Solved(str(problem.status), x.value, dual_bound=float(evidence.mip_dual_bound))
+    return _Solved(str(problem.status), x.value, constraints[0].dual_value, constraints[1].dual_value)
 
 
 @contextmanager

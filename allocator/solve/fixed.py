@@ -9,8 +9,11 @@ from numpy.typing import NDArray
 
 from allocator import curves as cv
 from allocator.choice import Choice, Outcome, evaluate, keeps_limits
+from allocator.flow import GATE_FIELDS, Gates, inspection_cost
 from allocator.problem import CAPITAL, COST, Problem
-from allocator.solve.interior import Point, minimise
+from allocator.solve.answers import Market
+from allocator.solve.interior import GAP, Point, minimise
+from allocator.solve.price import build_duty, clear
 from allocator.solve.program import Program, build_program
 
 Array = NDArray[np.float64]
@@ -33,6 +36,9 @@ def solve_fixed(problem: Problem, rows: NDArray[np.int64], hopeless: float | Non
 
     The search stops early, at a worse answer, once its bound passes `hopeless`.
     """
+    by_price = _by_price(problem, rows, hopeless)
+    if by_price is not None:
+        return by_price
     program = build_program(problem, rows)
     point = minimise(program, problem.objective, _limits(problem), hopeless)
     if point is None:
@@ -43,6 +49,43 @@ def solve_fixed(problem: Problem, rows: NDArray[np.int64], hopeless: float | Non
     return FixedAnswer(
         outcome, min(point.bound, outcome.value(problem.objective)), point.prices if program.size else None
     )
+
+
+def _by_price(problem: Problem, rows: NDArray[np.int64], hopeless: float | None) -> FixedAnswer | None:
+    """Return the answer of the price road, where budgets alone couple the steps and it closes the gap; else None."""
+    if problem.objective != COST or problem.capital is not None or problem.spend is not None:
+        return None
+    ways, line = problem.options.ways, problem.line
+    gates = Gates(*(getattr(ways.gates, name)[rows] for name in GATE_FIELDS))
+    curves = ways.curves.take(rows)
+    market = Market(curves, ways.z_low[rows], ways.z_high[rows], [ways.lines[i] for i in rows])
+    aside = _money_aside(problem, rows, gates)
+    cleared = clear(
+        market, build_duty(line, gates, problem.budgets), curves, GAP, hopeless=(hopeless or np.inf) - aside
+    )
+    if cleared is None or cleared.gap > 10.0 * GAP:
+        return None
+    z = ways.z_low[rows].copy()
+    moving = np.flatnonzero(ways.moves[rows])
+    if len(moving):
+        z[moving] = np.clip(
+            cv.sigma(curves.take(moving), cleared.delta[moving]), ways.z_low[rows[moving]], ways.z_high[rows[moving]]
+        )
+    outcome = evaluate(line, problem.options, Choice(rows, z))
+    if not keeps_limits(problem, outcome):
+        return None
+    if not len(moving):
+        return FixedAnswer(outcome, outcome.money.total, None)
+    prices = dict(zip(problem.budgets, cleared.prices.tolist(), strict=True))
+    return FixedAnswer(outcome, min(cleared.bound + aside, outcome.money.total), prices)
+
+
+def _money_aside(problem: Problem, rows: NDArray[np.int64], gates: Gates) -> float:
+    """Return the yearly money that no level changes: alternatives, purchases, inspection."""
+    options, line = problem.options, problem.line
+    bought = options.ways.uses[rows].any(axis=0)
+    fixed = options.ways.fixed_cost[rows].sum() + options.purchase_cost[bought].sum()
+    return float(fixed + np.sum(inspection_cost(line, gates)))
 
 
 def _limits(problem: Problem) -> dict[str, float]:
