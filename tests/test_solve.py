@@ -293,9 +293,10 @@ def by_every_choice(problem: Problem) -> float | None:
 
 @pytest.fixture
 def no_enumeration(monkeypatch: pytest.MonkeyPatch) -> None:
-    """Every question goes to the master, however small."""
+    """Every question goes to the master, however small, and even where the price alone would settle it."""
     monkeypatch.setattr(road, "SMALL_MOVING", 0)
     monkeypatch.setattr(road, "SMALL_STILL", 0)
+    monkeypatch.setattr(road, "serves", lambda problem: False)
 
 
 def offered(*, gates: bool = False, law: bool = True, price: float = 3_000.0) -> Drawn:

@@ -58,11 +58,18 @@ def price_menu(menu: Menu, slope: Array, weight: Array, price: float) -> Priced:
     """Return all answers at λ = `price`, with scrap's slope and the load weight per step [shape (n_steps,)]."""
     per_way = (slope + price * weight)[menu.step]
     answers = menu.market.answer(per_way)
-    value = menu.fixed + answers.cost + per_way * answers.delta
+    value = menu.fixed + answers.cost + per_way * answers.delta + _still_to_gain(menu.market, answers, per_way)
     least = np.minimum.reduceat(value, menu.first)
     places = np.where(value <= least[menu.step], np.arange(len(value)), len(value))
     best = np.minimum.reduceat(places, menu.first)
     return Priced(answers, value, best, float(weight @ answers.delta[best]), price)
+
+
+def _still_to_gain(market: Market, answers: Answers, per_way: Array) -> Array:
+    """Return what answers that have not settled to the last digit may still gain (0 or less), so that values bound."""
+    left = answers.slope + per_way
+    gain = np.minimum(left * (market.low - answers.delta), left * (market.high - answers.delta))
+    return np.asarray(np.minimum(gain, 0.0))
 
 
 def balance_menu(menu: Menu, slope: Array, weight: Array, free: float, start: float) -> tuple[Priced, Priced | None]:
@@ -96,12 +103,7 @@ def _narrow(menu: Menu, slope: Array, weight: Array, free: float, under: Priced,
     for turn in range(PRICE_STEPS):
         if under.price - over.price <= CLOSE * under.price or free - under.load <= CLOSE * free:
             break
-        if np.array_equal(under.best, over.best) and not menu.market.still:
-            guess = _secant(under, over, free)
-        elif turn % 3 == 2:
-            guess = 0.5 * (under.price + over.price)
-        else:
-            guess = _secant(under, over, free)
+        guess = 0.5 * (under.price + over.price) if turn % 3 == 2 else _secant(under, over, free)
         middle = price_menu(menu, slope, weight, min(max(guess, over.price), under.price))
         if middle.load <= free:
             under = middle
@@ -118,8 +120,8 @@ def _secant(under: Priced, over: Priced, free: float) -> float:
     return over.price + min(max(share, 0.02), 0.98) * (under.price - over.price)
 
 
-def fill_budget(menu: Menu, weight: Array, free: float, priced: Priced, allowed: float) -> Index:
-    """Return each step's way: the best at the price, but for a few that together fit the budget best.
+def fill_budget(menu: Menu, weight: Array, free: float, priced: Priced, allowed: float) -> tuple[Index | None, float]:
+    """Return each step's way, the best at the price but for a few that together fit best, and the bound's lift.
 
     Parameters
     ----------
@@ -127,67 +129,86 @@ def fill_budget(menu: Menu, weight: Array, free: float, priced: Priced, allowed:
         At the balancing price; its best ways may overrun the budget or leave room.
     allowed : float [currency/year]
         Combinations that lift the bound by more than this are not worth looking at.
+
+    Returns
+    -------
+    rows : int array, shape (n_steps,), or None where no combination fits
+    lift : float [currency/year]
+        What every choice that fits must cost above the priced bound; 0 where not all combinations could be looked at,
+        or levels that move could make room.
     """
     base, delta = priced.best, priced.answers.delta
     extra = priced.value - priced.value[base][menu.step]
     change = weight[menu.step] * (delta - delta[base][menu.step])
     room = free - priced.load
-    others = (extra <= allowed) & (np.arange(len(extra)) != base[menu.step])
-    steps = menu.step[others]
-    if len(steps) == 0:
-        return base
-    nearest = np.full(len(base), np.inf)
-    np.minimum.at(nearest, steps, extra[others])
-    core = np.argsort(nearest, kind="stable")[:CORE_STEPS]
-    core = core[np.isfinite(nearest[core])]
-    options = [np.flatnonzero(others & (menu.step == i)) for i in core] if len(core) < 200 else []
-    chosen = _merge(options, extra, change, priced.price, room, allowed)
-    if chosen is None:
-        return base
+    candidates = np.flatnonzero((extra <= allowed) & (np.arange(len(extra)) != base[menu.step]))
+    core, options, complete = _core(menu, candidates, extra, len(base))
+    merged = _merge(options, extra, change, priced.price, room, allowed)
+    if merged is None:
+        return None, 0.0
+    chosen, lift, whole = merged
     rows = base.copy()
-    for i, row in zip(core, chosen, strict=True):
-        rows[i] = row if row >= 0 else rows[i]
-    return rows
+    for i, row in zip(core.tolist(), chosen, strict=True):
+        if row >= 0:
+            rows[i] = row
+    exact = complete and whole and menu.market.still and not len(menu.market.pieces.rows)
+    return rows, min(lift, allowed) if exact else 0.0
+
+
+def _core(menu: Menu, candidates: Index, extra: Array, n_steps: int) -> tuple[Index, list[Index], bool]:
+    """Return the steps worth combining, their candidate ways, and whether these are all there are."""
+    nearest = np.full(n_steps, np.inf)
+    np.minimum.at(nearest, menu.step[candidates], extra[candidates])
+    near = np.flatnonzero(np.isfinite(nearest))
+    core = near[np.argsort(nearest[near], kind="stable")[:CORE_STEPS]]
+    place = np.full(n_steps, -1)
+    place[core] = np.arange(len(core))
+    options: list[list[int]] = [[] for _ in core]
+    for way in candidates[place[menu.step[candidates]] >= 0].tolist():
+        options[place[menu.step[way]]].append(way)
+    return core, [np.array(ways, dtype=np.int64) for ways in options], len(near) <= CORE_STEPS
 
 
 def _merge(
     options: list[Index], extra: Array, change: Array, price: float, room: float, allowed: float
-) -> list[int] | None:
-    """Return the way taken in each core step (−1 for its best), least in value among those that fit; None if none fit.
+) -> tuple[list[int], float, bool] | None:
+    """Return the way taken in each core step (−1 for its best), what that adds, and whether the lists were whole.
 
     A list entry is (change of load, added value); one with no more load and no higher final value stands for another.
+    None when nothing fits.
     """
-    load, added = np.zeros(1), np.zeros(1)
+    load, added, whole = np.zeros(1), np.zeros(1), True
     history: list[tuple[Index, Index]] = []
-    fall = np.array([min(float(change[rows].min(initial=0.0)), 0.0) for rows in options])
-    later = np.concatenate([np.cumsum(fall[::-1])[::-1][1:], [0.0]]) if len(options) else fall
+    fall = [min(float(change[rows].min(initial=0.0)), 0.0) for rows in options]
+    later = np.concatenate([np.cumsum(fall[::-1])[::-1][1:], [0.0]]) if options else np.zeros(0)
     for place, rows in enumerate(options):
         picks = np.concatenate([[-1], rows])
-        steps_load = np.concatenate([[0.0], change[rows]])
-        steps_added = np.concatenate([[0.0], extra[rows]])
-        all_load = (load[:, None] + steps_load).ravel()
-        all_added = (added[:, None] + steps_added).ravel()
-        keep = _undominated(all_load, all_added, price, room - later[place], allowed)
+        all_load = (load[:, None] + np.concatenate([[0.0], change[rows]])).ravel()
+        all_added = (added[:, None] + np.concatenate([[0.0], extra[rows]])).ravel()
+        keep, cut = _undominated(all_load, all_added, price, room - later[place], allowed)
+        whole = whole and not cut
         history.append((keep // len(picks), picks[keep % len(picks)]))
         load, added = all_load[keep], all_added[keep]
     fits = np.flatnonzero(load <= room)
     if len(fits) == 0:
         return None
-    at = int(fits[np.argmin(added[fits] - price * load[fits])])
+    final = added[fits] + price * (room - load[fits])
+    at = int(fits[np.argmin(final)])
     chosen: list[int] = []
     for parents, taken in reversed(history):
         chosen.append(int(taken[at]))
         at = int(parents[at])
-    return chosen[::-1]
+    return chosen[::-1], float(final.min()), whole
 
 
-def _undominated(load: Array, added: Array, price: float, room: float, allowed: float) -> Index:
+def _undominated(load: Array, added: Array, price: float, room: float, allowed: float) -> tuple[Index, bool]:
+    """Return the entries worth keeping, and whether some had to be cut for length."""
     final = added - price * load
     keep = np.flatnonzero((added <= allowed) & (load <= room))
     order = keep[np.lexsort((final[keep], load[keep]))]
-    least = np.minimum.accumulate(final[order])
+    least = np.minimum.accumulate(final[order]) if len(order) else np.zeros(0)
     first = np.concatenate([[True], least[1:] < least[:-1]]) if len(order) else np.zeros(0, dtype=bool)
     kept = order[first]
-    if len(kept) > LONGEST_LIST:
-        kept = kept[np.argsort(added[kept], kind="stable")[:LONGEST_LIST]]
-    return np.asarray(kept, dtype=np.int64)
+    if len(kept) <= LONGEST_LIST:
+        return np.asarray(kept, dtype=np.int64), False
+    return np.asarray(kept[np.argsort(added[kept], kind="stable")[:LONGEST_LIST]], dtype=np.int64), True

@@ -193,7 +193,8 @@ def _branch(search: Search, master: Master, excluded: NDArray[np.bool_], gap: fl
         search.bound = search.value(search.best)
         return False
     bound, before = answer.bound * master.objective_scale, (search.bound, search.best)
-    safety = 1e-9 * abs(bound)
+    # The tree's own tolerances add up with the size of the programme.
+    safety = (1e-9 + 2e-10 * len(search.problem.options.ways)) * abs(bound)
     assert search.best is not None
     search.bound = max(search.bound, min(bound - safety, search.value(search.best)))
     chosen = _rounded(search.problem, master, answer.x)

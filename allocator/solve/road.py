@@ -14,6 +14,7 @@ from allocator.choice import Outcome
 from allocator.problem import CAPITAL, COST, Problem, within
 from allocator.solve.fixed import FixedAnswer, solve_fixed
 from allocator.solve.mixed import solve_mixed
+from allocator.solve.mixprice import ByPrice, serves, solve_by_price
 from allocator.solve.reduce import first_choices, ways_by_step, without_dominated
 
 SMALL_MOVING, SMALL_STILL = 40, 3000
@@ -21,9 +22,14 @@ SMALL_MOVING, SMALL_STILL = 40, 3000
 GAP = 1e-7
 """Gap aimed at; the promise is 1e-6 continuous and 1e-4 mixed up to 200 steps of 6 ways."""
 GAP_LARGE = 2e-5
+GAP_PRICED = 1e-6
+"""Gap at which the price road's answer with choices is good enough; else the remainder is settled."""
 LARGE = 600
 """Ways above which the wider aim applies."""
 SECONDS = 60.0
+LONGEST_MASTER = 4000
+"""Steps beyond which the price road's answer stands with its printed gap: the master would take minutes."""
+PRICE_METHOD = "one price for all steps"
 
 
 @dataclass(frozen=True)
@@ -65,19 +71,45 @@ def solve(problem: Problem, starts: list[NDArray[np.int64]] | None = None) -> So
 
 
 def _by_size(problem: Problem, starts: list[NDArray[np.int64]], enough: float | None = None) -> Solved | None:
-    """Solve choice by choice or by branch and bound; None when no choice that keeps the limits is known."""
+    """Solve choice by choice, by price, or by branch and bound; None when no choice that keeps the limits is known."""
     by_step = ways_by_step(problem)
     choices = math.prod(len(mine) for mine in by_step)
     moving = bool(problem.options.ways.moves.any())
     if choices <= (SMALL_MOVING if moving else SMALL_STILL):
         return _every_choice(problem, by_step, choices)
     gap = GAP if len(problem.options.ways) <= LARGE else GAP_LARGE
+    if serves(problem):
+        priced = solve_by_price(problem, GAP)
+        if priced is not None:
+            solved = _solved(problem, priced.best, priced.bound, PRICE_METHOD)
+            if solved.gap <= GAP_PRICED or problem.line.n_steps > LONGEST_MASTER:
+                return solved
+            return _settle_remainder(problem, priced, solved, GAP_PRICED)
+    return _branch_and_bound(problem, starts, gap, enough)
+
+
+def _branch_and_bound(
+    problem: Problem, starts: list[NDArray[np.int64]], gap: float, enough: float | None
+) -> Solved | None:
     search = solve_mixed(problem, starts or first_choices(problem), gap, SECONDS, enough)
     if search.best is None and starts:
         search = solve_mixed(problem, first_choices(problem), gap, SECONDS, enough)
     if search.best is None:
         return None
     return _solved(problem, search.best, search.bound, "cutting planes and branch and bound")
+
+
+def _settle_remainder(problem: Problem, priced: ByPrice, solved: Solved, gap: float) -> Solved:
+    """Branch and bound over the ways that the price could not exclude; what is excluded is in no better plan."""
+    kept = np.flatnonzero(~priced.excluded)
+    small = replace(problem, options=replace(problem.options, ways=problem.options.ways.take(kept)))
+    rows = np.searchsorted(kept, priced.best.outcome.choice.rows).astype(np.int64)
+    search = solve_mixed(small, [rows], gap, SECONDS)
+    assert search.best is not None
+    bound = max(min(search.bound, search.value(search.best)), priced.bound)
+    method = f"{PRICE_METHOD}, branch and bound over the {len(kept):,} ways left"
+    settled = _solved(small, search.best, bound, method)
+    return settled if settled.gap < solved.gap else solved
 
 
 def _every_choice(problem: Problem, by_step: list[NDArray[np.int64]], choices: int) -> Solved | None:

@@ -1,0 +1,148 @@
+"""Equipment by price: passes of pricing, filling the budget and exact evaluation, for lines of any length.
+
+It serves where one budget couples the steps, their gates are not a choice and nothing is bought together; the bound is
+the priced Lagrangian at the tangent of scrap, lifted where the remainder could be settled whole.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+from allocator.flow import GATE_FIELDS, Gates
+from allocator.problem import COST, Problem, within
+from allocator.solve.answers import Market
+from allocator.solve.choose import Index, Menu, Priced, balance_menu, fill_budget, price_menu
+from allocator.solve.fixed import FixedAnswer, solve_fixed
+from allocator.solve.price import Duty, build_duty
+
+Array = NDArray[np.float64]
+PASSES = 12
+CHOICE_GATE = tuple(name for name in GATE_FIELDS if name != "per_item")
+"""What a gate does; its price per item does not touch the flow."""
+
+
+@dataclass
+class _Found:
+    """The best answer and bound so far."""
+
+    best: FixedAnswer | None = None
+    bound: float = -np.inf
+    extra: Array = field(default_factory=lambda: np.zeros(0))
+    """What each way adds to `extra_bound`, the bound of the last pass, at the least."""
+    extra_bound: float = -np.inf
+
+    def gap(self) -> float:
+        if self.best is None:
+            return float("inf")
+        total = self.best.outcome.money.total
+        return (total - self.bound) / max(abs(total), 1.0)
+
+
+def serves(problem: Problem) -> bool:
+    """Return whether the price alone can settle this question: no limit on money, no gate and no purchase to choose."""
+    if problem.objective != COST or problem.capital is not None or problem.spend is not None:
+        return False
+    ways = problem.options.ways
+    if ways.uses.any():
+        return False
+    first = first_ways(problem)
+    columns = [getattr(ways.gates, name) for name in CHOICE_GATE]
+    return all(bool(np.array_equal(column, column[first][ways.step])) for column in columns)
+
+
+def first_ways(problem: Problem) -> Index:
+    """Return the row of each step's first way; the table is in the steps' order."""
+    return np.searchsorted(problem.options.ways.step, np.arange(problem.line.n_steps)).astype(np.int64)
+
+
+@dataclass(frozen=True)
+class ByPrice:
+    """The best answer, its bound, and the ways that no better plan can take (bool, shape (n_ways,))."""
+
+    best: FixedAnswer
+    bound: float
+    excluded: NDArray[np.bool_]
+
+
+def solve_by_price(problem: Problem, gap: float) -> ByPrice | None:
+    """Return the best answer with its bound, None where no choice that keeps the limits was found.
+
+    Parameters
+    ----------
+    problem : Problem
+        One that `serves`.
+    gap : float
+        Relative gap at which to stop.
+    """
+    ways, line = problem.options.ways, problem.line
+    first = first_ways(problem)
+    gates = Gates(*(getattr(ways.gates, name)[first] for name in GATE_FIELDS))
+    fixed = ways.fixed_cost + (line.shipped * line.per_finished)[ways.step] * ways.gates.per_item
+    market = Market(ways.curves, ways.z_low, ways.z_high, list(ways.lines))
+    menu = Menu(market, first, ways.step, fixed)
+    budgets = {problem.split: problem.budgets[problem.split]} if problem.split in problem.budgets else {}
+    duty = build_duty(line, gates, budgets)
+    here, price, found = np.minimum.reduceat(market.low, first), 1.0, _Found()
+    for _ in range(PASSES):
+        before = found.best
+        rows, price = _one_pass(problem, menu, duty, here, price, found)
+        if rows is not None:
+            _offer(problem, rows, found)
+        if found.gap() <= gap or (found.best is before and before is not None):
+            break
+        if found.best is not None:
+            here = found.best.outcome.flow.intensity
+    if found.best is None:
+        return None
+    total = found.best.outcome.money.total
+    excluded = found.extra > total - found.extra_bound + 1e-9 * abs(total)
+    excluded[found.best.outcome.choice.rows] = False
+    return ByPrice(found.best, found.bound, excluded)
+
+
+def _offer(problem: Problem, rows: Index, found: _Found) -> None:
+    hopeless = None if found.best is None else found.best.outcome.money.total
+    answer = solve_fixed(problem, rows, hopeless)
+    if answer is not None and (hopeless is None or answer.outcome.money.total < hopeless):
+        found.best = answer
+
+
+def _one_pass(
+    problem: Problem, menu: Menu, duty: Duty, here: Array, price: float, found: _Found
+) -> tuple[Index | None, float]:
+    """Price the menu at the tangent in `here`, lift the bound, and return the choice that fills the budget."""
+    money, slope = duty.money(here)
+    rest = money - float(slope @ here)
+    if not duty.loads:
+        priced = price_menu(menu, slope, slope, 0.0)
+        _note(menu, found, priced, rest + _least(menu, priced))
+        return priced.best, 0.0
+    weight, used, budget = duty.loads[0]
+    free = budget - used
+    under, over = balance_menu(menu, slope, weight, free, price)
+    sides = [side for side in (under, over) if side is not None]
+    bounds = [rest + _least(menu, side) - side.price * free for side in sides]
+    tightest = int(np.argmax(bounds))
+    _note(menu, found, sides[tightest], bounds[tightest])
+    if over is None:
+        return under.best, 0.0
+    if not within(under.load, free):
+        return None, under.price
+    if found.best is None:
+        _offer(problem, under.best, found)
+    allowed = np.inf if found.best is None else max(found.best.outcome.money.total - bounds[tightest], 0.0)
+    rows, lift = fill_budget(menu, weight, free, sides[tightest], allowed)
+    found.bound = max(found.bound, bounds[tightest] + lift)
+    return (under.best if rows is None else rows), under.price
+
+
+def _note(menu: Menu, found: _Found, priced: Priced, bound: float) -> None:
+    found.bound = max(found.bound, bound)
+    found.extra, found.extra_bound = priced.value - priced.value[priced.best][menu.step], bound
+
+
+def _least(menu: Menu, priced: Priced) -> float:
+    return float(np.sum(priced.value[priced.best]))
