@@ -112,14 +112,27 @@ def sigma_from_log_defects(log_p: ArrayLike, k: ArrayLike = 0.0, shift: ArrayLik
     low = np.where(two, np.maximum(low, 0.0), low)
     high = np.maximum((drift - ndtri_exp(target - np.log(2.0))) / (1.0 - offset), low)
     z = np.where(two, high, low)
+    z, target, offset, drift, low, high, two = np.atleast_1d(z, target, offset, drift, low, high, two)
+    z[two] = _inverted(*(x[two] for x in (z, target, offset, drift, low, high)))
+    return z.reshape(limits.shape)[()]
+
+
+def _inverted(z: Array, target: Array, offset: Array, drift: Array, low: Array, high: Array) -> Array:
+    """Return the levels with two limits by Newton from z, all arrays of one shape (n,).
+
+    A level that has settled is left alone, so that a result does not depend on what else is in the array.
+    """
+    moving = np.arange(len(z))
     for _ in range(NEWTON_STEPS):
-        value, slope, _ = log_slopes(z, offset, drift, limits)
-        moved = np.where(two, np.clip(z - (value - target) / slope, low, high), low)
-        settled = np.all(np.abs(moved - z) <= 1e-13 * np.maximum(np.abs(z), 1.0))
-        z = moved
-        if settled:
+        value, slope, _ = log_slopes(z[moving], offset[moving], drift[moving], 2)
+        stepped = z[moving] - (value - target[moving]) / slope
+        moved = np.clip(stepped, low[moving], high[moving])
+        far = np.abs(moved - z[moving]) > 1e-13 * np.maximum(np.abs(z[moving]), 1.0)
+        z[moving] = moved
+        moving = moving[far]
+        if len(moving) == 0:
             break
-    return z[()]
+    return z
 
 
 def log_good(log_p: ArrayLike) -> Any:

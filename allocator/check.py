@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import math
 
+import numpy as np
+
 from allocator.cautions import cautions_of_input, what_is_assumed
+from allocator.picks import combinations
 from allocator.problem import Problem, pose
 from allocator.results import Check, Understood
 from allocator.scenario.model import Capability, Inspection, Law, Scenario, Step
 from allocator.standing import levels_today
-from allocator.ways import combinations
 
 REMARKS = ("source", "evidence", "note")
 
@@ -23,7 +25,9 @@ def check_scenario(scenario: Scenario) -> Check:
         As read by `read_scenario`, which refuses what is wrong.
     """
     problem = pose(scenario)
-    levels = levels_today(problem)
+    levels, ways = levels_today(problem), problem.options.ways
+    highest, unchanged = ways.highest_unchanged(len(scenario.step)), np.flatnonzero(ways.text.unchanged)
+    caps = {int(ways.step[w]): ways.text[w].cap for w in unchanged}
     return Check(
         title=scenario.title,
         currency=scenario.currency,
@@ -40,9 +44,9 @@ def check_scenario(scenario: Scenario) -> Check:
                 given=given_as(step.capability),
                 lost_when_scrapped=float(problem.line.lost[i]),
                 net_cost_added=float(problem.line.net_cost[i]),
-                ways=sum(1 for _ in combinations(step)),
-                improves=_law_words(problem, step, i),
-                inspection=_inspection_words(problem.options.today[i].inspection),
+                ways=len(combinations(step)),
+                improves=_law_words(step, float(highest[i]), caps.get(i)),
+                inspection=_inspection_words(problem.options.today.inspection[i]),
             )
             for i, step in enumerate(scenario.step)
         ),
@@ -66,13 +70,11 @@ def given_as(capability: Capability) -> str:
     )
 
 
-def _law_words(problem: Problem, step: Step, i: int) -> str | None:
+def _law_words(step: Step, highest: float, words: str | None) -> str | None:
     law = step.improve
     if law is None:
         return None
-    ways = problem.options.ways
-    mine = [w for w in range(len(ways)) if ways.step[w] == i and not ways.text[w].alternatives]
-    cap = f"; up to sigma level {max(ways.z_high[w] for w in mine):.3g} ({ways.text[mine[-1]].cap})" if mine else ""
+    cap = f"; up to sigma level {highest:.3g} ({words})" if words else ""
     return f"{law.law}{_parameter(law)}{cap}"
 
 

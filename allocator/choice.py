@@ -8,11 +8,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from allocator import curves as cv
-from allocator.capability import log_good
-from allocator.flow import GATE_FIELDS, Flow, Gates, Line, gate_values, loads, money, run
+from allocator.flow import GATE_FIELDS, Flow, Gates, Line, loads, money, run
 from allocator.problem import CAPITAL, COST, Problem, within
 from allocator.results import Money
-from allocator.state import State
+from allocator.states import States
 from allocator.ways import Options, law_cost
 
 Array = NDArray[np.float64]
@@ -77,12 +76,6 @@ def keeps_limits(problem: Problem, outcome: Outcome) -> bool:
     return met
 
 
-def flow_of_states(line: Line, states: tuple[State, ...]) -> Flow:
+def flow_of_states(line: Line, states: States) -> Flow:
     """Return the flow of a line whose steps stand in the given states (today's, say), nothing bought."""
-    delta = np.array([-s.opportunities * _log_good(s.log_p) for s in states])
-    gates = np.array([gate_values(s.inspection, s.rework) for s in states])
-    return run(line, delta, Gates(*gates.T))
-
-
-def _log_good(log_p: float) -> float:
-    return float(log_good(log_p))
+    return run(line, states.intensity(), states.gates())

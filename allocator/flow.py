@@ -8,6 +8,7 @@ gates from i to the end.
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass
 
 import numpy as np
@@ -77,11 +78,14 @@ class Gates:
 
 GATE_FIELDS = ("finds", "earlier", "rejects", "lost", "reworked", "rework_cost", "per_item")
 
+PERFECT, NO_REWORK = Inspection(), Rework()
+"""What a gate is without a stated inspection or rework."""
+
 
 def gate_values(inspection: Inspection | None, rework: Rework | None) -> tuple[float, ...]:
     """Return one gate's figures in the order of `GATE_FIELDS`; without an inspection it finds all its own defects."""
-    seen = inspection or Inspection()
-    mended = rework or Rework()
+    seen = inspection or PERFECT
+    mended = rework or NO_REWORK
     share = seen.share_inspected
     return (
         seen.finds * share,
@@ -92,6 +96,21 @@ def gate_values(inspection: Inspection | None, rework: Rework | None) -> tuple[f
         mended.cost,
         seen.per_item * share,
     )
+
+
+def gate_table(inspections: Iterable[Inspection | None], reworks: Iterable[Rework | None]) -> Gates:
+    """Return the gates of many steps, figures of a table that several share worked out once."""
+    known: dict[tuple[int, int], int] = {}
+    figures: list[tuple[float, ...]] = []
+    place = []
+    for inspection, rework in zip(inspections, reworks, strict=True):
+        key = (id(inspection), id(rework))
+        if key not in known:
+            known[key] = len(figures)
+            figures.append(gate_values(inspection, rework))
+        place.append(known[key])
+    table = np.array(figures, dtype=float).reshape(len(figures), len(GATE_FIELDS))
+    return Gates(*table[place].T)
 
 
 def build_line(scenario: Scenario) -> Line:

@@ -4,27 +4,21 @@ from __future__ import annotations
 
 import math
 from dataclasses import replace
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from allocator.cautions import cautions_of_plan, what_is_assumed
-from allocator.choice import Outcome
 from allocator.errors import RangeError
-from allocator.flow import first_pass, rework_cost, scrap_lost_at, yields
-from allocator.flow import inspection_cost as inspection_by_step
+from allocator.flow import yields
 from allocator.problem import CAPITAL, COST, Problem, pose
-from allocator.results import BestReachable, Binding, Bought, Level, Plan, Proof, StepTarget
+from allocator.results import BestReachable, Binding, Bought, Plan, Proof
 from allocator.rules import simpler_rules
-from allocator.scenario.model import Scenario, Step
+from allocator.scenario.model import Scenario
 from allocator.solve.road import Solved, solve
-from allocator.standing import level_at, levels_today, line_today, load_parts, load_shares, shipped_known
-from allocator.state import State, floor_sigma, floor_words
-from allocator.ways import Ways
+from allocator.standing import defects_per_unit, line_today, load_parts, shipped_known
+from allocator.targets import AT_CAP, step_targets
 
-AT_CAP = 1e-5
-"""A step whose defects are within this share of its cap's is at the cap."""
 JUST_REACHABLE = 1e-9
 """Room given to the best reachable budget when its least cost is asked for: yields that close are the same yield."""
 BINDING_SLACK = 1e-6
@@ -100,13 +94,7 @@ def cheapest_at(problem: Problem, best: Solved) -> Solved:
 def rows_in(problem: Problem, solved: Solved) -> NDArray[np.int64]:
     """Return an answer's choice as rows of the full table of ways."""
     assert solved.outcome is not None
-    small, full = solved.problem.options.ways, problem.options.ways
-    key = {_way_key(full, w): w for w in range(len(full))}
-    return np.array([key[_way_key(small, int(w))] for w in solved.outcome.choice.rows], dtype=np.int64)
-
-
-def _way_key(ways: Ways, w: int) -> tuple[object, ...]:
-    return int(ways.step[w]), ways.text[w].alternatives, float(ways.z_low[w]), float(ways.z_high[w])
+    return problem.options.ways.find(solved.problem.options.ways, solved.outcome.choice.rows)
 
 
 def _best_for_the_money(problem: Problem, spend: float | None, capital: float | None) -> Plan:
@@ -177,16 +165,17 @@ def binding_steps(problem: Problem, best: Solved, budget: float | None) -> tuple
     load = best.outcome.loads[problem.split]
     wanted = budget if budget is not None else -math.log1p(-0.1 * -math.expm1(-load))
     parts = load_parts(problem.line, best.outcome.flow, problem.split)
+    least = best.problem.options.ways.least_by_step(problem.line.n_steps)
     binding: list[Binding] = []
     for i in np.argsort(-parts, kind="stable"):
         if load <= wanted or parts[i] <= 0.0:
             break
         load -= float(parts[i])
-        binding.append(Binding(problem.scenario.step[i].name, _what_holds(problem, best, int(i))))
+        binding.append(Binding(problem.scenario.step[i].name, _what_holds(problem, best, int(i), float(least[i]))))
     return tuple(binding)
 
 
-def _what_holds(problem: Problem, best: Solved, i: int) -> str:
+def _what_holds(problem: Problem, best: Solved, i: int, least: float) -> str:
     assert best.outcome is not None
     ways, row, step = best.problem.options.ways, int(best.outcome.choice.rows[i]), problem.scenario.step[i]
     text = ways.text[row]
@@ -194,7 +183,6 @@ def _what_holds(problem: Problem, best: Solved, i: int) -> str:
     chosen = f" with {', '.join(text.alternatives)}" if text.alternatives else ""
     if step.fixed:
         return f"fixed by the scenario at {at}"
-    least = float(np.min(ways.delta_low[ways.step == i]))
     could_do_better = best.outcome.flow.intensity[i] > least * (1.0 + AT_CAP)
     if problem.capital is not None and could_do_better:
         return f"at {at}{chosen}; the capital limit allows no more"
@@ -206,7 +194,8 @@ def describe(solved: Solved, question: str, problem: Problem) -> Plan:
     """Return an evaluated answer in the words and units that people and programs read."""
     outcome = solved.outcome
     assert outcome is not None
-    scenario, options = problem.scenario, problem.options
+    scenario, options, ways = problem.scenario, problem.options, solved.problem.options.ways
+    states = ways.states.take(outcome.choice.rows)
     return Plan(
         title=scenario.title,
         currency=scenario.currency,
@@ -216,16 +205,16 @@ def describe(solved: Solved, question: str, problem: Problem) -> Plan:
         split=problem.split,
         targets={name: math.exp(-budget) for name, budget in problem.budgets.items()},
         target_losses={name: -math.expm1(-budget) for name, budget in problem.budgets.items()},
-        yields=yields(problem.line, outcome.flow, shipped_known(problem, _states(solved))),
+        yields=yields(problem.line, outcome.flow, shipped_known(problem, states)),
         money=outcome.money,
-        dpu=float(sum(level.dpu for level in _target_levels(solved))),
+        dpu=defects_per_unit(states, outcome.choice.z, problem.line.per_finished),
         capital=outcome.capital,
         purchases=tuple(
             Bought(name, float(options.purchase_price[p]), float(options.purchase_cost[p]))
             for p, name in enumerate(options.purchase_names)
             if outcome.bought[p]
         ),
-        steps=_step_targets(solved, problem),
+        steps=step_targets(problem, ways, outcome),
         today=line_today(problem),
         proof=_proof(solved),
         price_of_defect_budget=price_of_budget(solved, problem),
@@ -282,80 +271,6 @@ def _with_cautions(plan: Plan, problem: Problem) -> Plan:
     return replace(plan, assumed=what_is_assumed(problem), cautions=cautions_of_plan(problem, plan))
 
 
-def _states(solved: Solved) -> tuple[State, ...]:
-    assert solved.outcome is not None
-    return tuple(solved.problem.options.ways.states[w] for w in solved.outcome.choice.rows)
-
-
-def _target_levels(solved: Solved) -> list[Level]:
-    assert solved.outcome is not None
-    q, z = solved.problem.line.per_finished, solved.outcome.choice.z
-    return [level_at(state, float(z[i]), float(q[i])) for i, state in enumerate(_states(solved))]
-
-
-def _step_targets(solved: Solved, problem: Problem) -> tuple[StepTarget, ...]:
-    outcome = solved.outcome
-    assert outcome is not None
-    line, flow = problem.line, outcome.flow
-    starts = line.shipped * line.per_finished * np.exp(flow.exponent)
-    columns = {
-        "budget_share": load_shares(line, flow, problem.split),
-        "starts_per_year": starts,
-        "scrap": scrap_lost_at(line, flow),
-        "rework": rework_cost(line, flow),
-        "inspection": inspection_by_step(line, flow.gates),
-        "improvement": outcome.improvement,
-        "capital": outcome.capital_by_step,
-        "first_pass_yield": first_pass(flow),
-    }
-    today, target = levels_today(problem), _target_levels(solved)
-    return tuple(
-        StepTarget(
-            step=step.name,
-            supplier=step.supplier,
-            today=today[i],
-            target=target[i],
-            safety=step.safety,
-            **_choice_words(solved, outcome, i),
-            **_floor_words(step, _states(solved)[i], target[i]),
-            **{name: float(values[i]) for name, values in columns.items()},  # type: ignore[arg-type]
-        )
-        for i, step in enumerate(problem.scenario.step)
-    )
-
-
-def _choice_words(solved: Solved, outcome: Outcome, i: int) -> dict[str, Any]:
-    ways, row, z = solved.problem.options.ways, int(outcome.choice.rows[i]), float(outcome.choice.z[i])
-    text = ways.text[row]
-    same = [w for w in np.flatnonzero(ways.step == i) if ways.text[w].alternatives == text.alternatives]
-    least = float(np.min(ways.delta_low[same]))
-    moves = least < float(np.max(ways.delta_high[same]))
-    at_cap = bool(moves and outcome.flow.intensity[i] <= least * (1.0 + AT_CAP))
-    raised = z > ways.curves.start[row] * (1.0 + 1e-6)
-    return {
-        "alternatives": text.alternatives,
-        "law": text.law if raised else None,
-        "at_cap": at_cap,
-        "cap": text.cap if at_cap else None,
-    }
-
-
-def _floor_words(step: Step, state: State, level: Level) -> dict[str, Any]:
-    floor = step.at_least
-    if floor is None:
-        return {"floor": None, "floor_distance": None, "floor_binds": False}
-    least = floor_sigma(floor, state)
-    if floor.cpk is not None:
-        distance = f"{max(level.cpk - floor.cpk, 0.0):.2f} Cpk above the floor"
-    elif floor.sigma_level is not None:
-        distance = f"{max(level.sigma_level - floor.sigma_level, 0.0):.2f} sigma above the floor"
-    else:
-        assert floor.dpmo is not None
-        distance = f"{max(floor.dpmo - level.dpmo, 0.0):.4g} dpmo below the most allowed"
-    binds = level.sigma_level <= least * (1.0 + 1e-6)
-    return {"floor": floor_words(floor), "floor_distance": "at the floor" if binds else distance, "floor_binds": binds}
-
-
 def _no_plan(problem: Problem, binding: tuple[Binding, ...]) -> Plan:
     """Return the answer when no choice at all keeps the floors and limits."""
     plan = Plan(
@@ -364,7 +279,7 @@ def _no_plan(problem: Problem, binding: tuple[Binding, ...]) -> Plan:
         targets={name: math.exp(-budget) for name, budget in problem.budgets.items()},
         target_losses={name: -math.expm1(-budget) for name, budget in problem.budgets.items()},
         yields=None, money=None, dpu=None, capital=None, purchases=(), steps=(), today=line_today(problem), proof=None,
-        price_of_defect_budget=None, cost_of_next_nine=None, best_reachable=None, binding=binding, rules=(), rules_note="",
-        assumed=(), cautions=(),
+        price_of_defect_budget=None, cost_of_next_nine=None, best_reachable=None, binding=binding, rules=(),
+        rules_note="", assumed=(), cautions=(),
     )  # fmt: skip
     return _with_cautions(plan, problem)

@@ -1,9 +1,8 @@
-"""How far, and at what price, does a step's law of improvement take one of its states."""
+"""How far do the steps' laws of improvement take their states."""
 
 from __future__ import annotations
 
-import math
-from collections.abc import Iterator
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -12,170 +11,197 @@ from numpy.typing import NDArray
 from allocator import curves as cv
 from allocator import laws
 from allocator.curves import Curves
-from allocator.money import capital_recovery
-from allocator.scenario.model import Law, Scenario, Step
-from allocator.state import State, sigma_meant
-from allocator.stretch import Stretch, convex_stretches
+from allocator.scales import LawsInUse
+from allocator.scenario.model import Capability, Step
+from allocator.states import States, floor_sigmas, sigmas_meant
+from allocator.stretch import Stretch, convex_stretches, known_convex
 
 Array = NDArray[np.float64]
+Indices = NDArray[np.int64]
+Flags = NDArray[np.bool_]
 SLACK = 1e-12
 """Relative slack on levels: a floor written as the present level is kept by it."""
+NO_LAW, FIXED, QUOTED, STATED, TENTH = range(5)
+CAP_WORDS = (
+    "no law of improvement",
+    "fixed by the scenario",
+    "the best level quoted",
+    "up_to (sigma level {:.4g})",
+    "one tenth of its starting defects (no up_to is given)",
+)
+"""What ends a way, by code; the level that `up_to` states goes into the braces."""
 
 
 @dataclass(frozen=True)
-class LawInUse:
-    """A law with its scale worked out: kind, parameter, yearly cost and capital per unit of shape."""
+class Caps:
+    """How far each state's law reaches and what stops it (see `CAP_WORDS`), arrays of shape (n_states,)."""
 
-    law: Law
-    kind: int
-    parameter: float
-    scale: float
-    capital: float
-    knots: tuple[tuple[float, float], ...]
-    """For quotes: (sigma level, yearly cost) of every quote, in the order written."""
+    high: Array
+    code: Indices
+
+    def words(self, i: int) -> str:
+        return CAP_WORDS[self.code[i]].format(self.high[i])
 
 
 @dataclass(frozen=True)
-class Reach:
-    """A stretch of levels that one state reaches, with the law that pays for it."""
+class Reaches:
+    """The stretches of levels that states reach, in the order of the states.
 
-    stretch: Stretch
-    kind: int = cv.NONE
-    parameter: float = 0.0
-    scale: float = 0.0
-    capital_per_cost: float = 0.0
-    law: str | None = None
-    cap: str = "no law of improvement"
+    Parameters
+    ----------
+    state : array of int, shape (n_stretches,)
+    low, high : shape (n_stretches,) [σ]
+    lines : dict
+        The straight pieces that stand for the law, by stretch.
+    improves : bool, shape (n_states,)
+        Where a law pays for better levels.
+    caps : Caps
+    notes : tuple
+        What was noticed on the way.
+    """
 
-
-def reaches(
-    step: Step, state: State, today: State, law: LawInUse | None, floor: float, notes: list[str]
-) -> Iterator[Reach]:
-    start = state.level.sigma_level
-    low = start if floor <= start + SLACK * abs(start) else floor
-    high, cap = (start, "no law of improvement") if law is None else _cap(step, state, law, notes)
-    if step.fixed:
-        cap = "fixed by the scenario"
-    if low > high + SLACK * abs(high):
-        return
-    if law is None or high <= start:
-        yield Reach(Stretch(start, start, None), cap=cap)
-        return
-    ratio = law.capital / law.scale if law.scale else 0.0
-    curve = _one_curve(state, law)
-    if law.kind == cv.LINES:
-        stretches = [_quoted_stretch(step, state, today, law, min(low, high), high, curve, notes)]
-    else:
-        stretches = convex_stretches(curve, min(low, high), high)
-    for stretch in stretches:
-        yield Reach(stretch, law.kind, law.parameter, law.scale, ratio, law.law.law, cap)
+    state: Indices
+    low: Array
+    high: Array
+    lines: dict[int, tuple[Array, Array]]
+    improves: Flags
+    caps: Caps
+    notes: tuple[str, ...]
 
 
-def _cap(step: Step, state: State, law: LawInUse, notes: list[str]) -> tuple[float, str]:
-    """Return how far the law reaches in this state, and what stops it."""
-    start = state.level.sigma_level
-    high, words = math.inf, ""
-    if law.kind == cv.LINES:
-        high, words = max(z for z, _ in law.knots), "the best level quoted"
-    if law.law.up_to is not None:
-        stated = sigma_meant(law.law.up_to, state)
-        if stated < high:
-            high, words = stated, f"up_to (sigma level {stated:.4g})"
-    elif law.kind != cv.LINES:
-        high, words = (
-            state.sigma_at(state.log_p - laws.LOG_TEN),
-            "one tenth of its starting defects (no up_to is given)",
+def reaches(steps: Sequence[Step], states: States, owner: Indices, in_use: LawsInUse, today: Array) -> Reaches:
+    """Return what the states reach; a state that cannot keep its step's floor reaches nothing.
+
+    Parameters
+    ----------
+    steps : sequence of Step
+    states : States
+    owner : array of int, shape (n_states,)
+        The step of each state.
+    in_use : LawsInUse
+    today : shape (n_steps,) [σ]
+        Sigma level of every step as it stands.
+    """
+    start, law = states.levels.sigma_level, in_use.kind[owner]
+    caps = _caps([step.improve.up_to if step.improve else None for step in steps], states, owner, in_use)
+    improves = (law != cv.NONE) & (caps.high > start)
+    notes = _beyond_the_cap(steps, start, owner, caps, np.flatnonzero((law != cv.NONE) & ~improves))
+    floor = floor_sigmas([step.at_least for step in steps], states, owner)
+    low = np.where(floor <= start + SLACK * np.abs(start), start, floor)
+    high = np.where(improves, caps.high, start)
+    keeps = low <= high + SLACK * np.abs(high)
+    low = np.where(improves, np.minimum(low, high), start)
+    curves = states.curves(law, in_use.parameter[owner], in_use.scale[owner])
+    pieces = {}
+    for i in _in_pieces(curves, low, high, keeps & improves).tolist():
+        one = curves.take([i])
+        if law[i] == cv.LINES:
+            step = owner[i].item()
+            stretch, above = _quoted_stretch(one, today[step].item(), in_use.knots[step], low[i].item(), high[i].item())
+            pieces[i] = [stretch]
+            notes += [(i, f"'{steps[step].name}': {words}") for words in above]
+        else:
+            pieces[i] = convex_stretches(one, low[i].item(), high[i].item())
+    fixed = np.array([step.fixed for step in steps], dtype=bool)
+    caps = Caps(caps.high, np.where(fixed[owner], FIXED, caps.code))
+    told = tuple(note for _, note in sorted(notes, key=lambda note: note[0]))
+    return _laid_out(low, high, keeps, pieces, improves, caps, told)
+
+
+def _laid_out(
+    low: Array,
+    high: Array,
+    keeps: Flags,
+    pieces: dict[int, list[Stretch]],
+    improves: Flags,
+    caps: Caps,
+    notes: tuple[str, ...],
+) -> Reaches:
+    """Put stretches in a row: none where a floor is not kept, several where a law comes in pieces, else one."""
+    counts = keeps.astype(np.int64)
+    for i, stretches in pieces.items():
+        counts[i] = len(stretches)
+    first = np.cumsum(counts) - counts
+    state = np.repeat(np.arange(len(counts)), counts)
+    z_low, z_high, lines = low[state], high[state], {}
+    for i, stretches in pieces.items():
+        for row, stretch in enumerate(stretches, first[i].item()):
+            z_low[row], z_high[row] = stretch.low, stretch.high
+            if stretch.lines is not None:
+                lines[row] = stretch.lines
+    return Reaches(state, z_low, z_high, lines, improves, caps, notes)
+
+
+def _in_pieces(curves: Curves, low: Array, high: Array, reached: Flags) -> Indices:
+    """Return the states whose law has to be looked at on its own: quotes, and what theory does not call convex."""
+    unsure = np.flatnonzero(reached & (curves.kind != cv.LINES) & (low != high))
+    convex = known_convex(curves.take(unsure), low[unsure])
+    return np.union1d(np.flatnonzero(reached & (curves.kind == cv.LINES)), unsure[~convex])
+
+
+def _caps(up_to: Sequence[float | Capability | None], states: States, owner: Indices, in_use: LawsInUse) -> Caps:
+    """Return how far the law of each state's step reaches, its own level where there is no law."""
+    law, start = in_use.kind[owner], states.levels.sigma_level
+    quoted = law == cv.LINES
+    high, code = np.where(law == cv.NONE, start, np.inf), np.where(law == cv.NONE, NO_LAW, QUOTED)
+    if in_use.knots:
+        best = np.full(len(in_use.kind), np.inf)
+        for step, (levels, _) in in_use.knots.items():
+            best[step] = levels.max()
+        high[quoted] = best[owner[quoted]]
+    stated = _stated_caps(up_to, states, owner)
+    lower = stated < high
+    high, code = np.where(lower, stated, high), np.where(lower, STATED, code)
+    open_ended = np.flatnonzero((law != cv.NONE) & ~quoted & np.isnan(stated))
+    if len(open_ended):
+        here = states.take(open_ended)
+        high[open_ended] = here.sigma_at(here.log_p_at(here.levels.sigma_level) - laws.LOG_TEN)
+        code[open_ended] = TENTH
+    return Caps(high, code)
+
+
+def _stated_caps(up_to: Sequence[float | Capability | None], states: States, owner: Indices) -> Array:
+    """Return the sigma level that `up_to` means in each state, nan where it is not given."""
+    of_step = np.array([np.nan if isinstance(cap, Capability) or cap is None else cap for cap in up_to], dtype=float)
+    stated = of_step[owner]
+    named = {i: cap for i, cap in enumerate(up_to) if isinstance(cap, Capability)}
+    if named:
+        is_named = np.zeros(len(up_to), dtype=bool)
+        is_named[list(named)] = True
+        rows = np.flatnonzero(is_named[owner])
+        stated[rows] = sigmas_meant([named[i] for i in owner[rows].tolist()], states.take(rows))
+    return stated
+
+
+def _beyond_the_cap(
+    steps: Sequence[Step], start: Array, owner: Indices, caps: Caps, rows: Indices
+) -> list[tuple[int, str]]:
+    """Say for some states that their law ends below them, each with the state's own place."""
+    return [
+        (
+            i,
+            f"'{steps[owner[i]].name}': {caps.words(i)} does not lie above the level at hand ({start[i]:.4g}): "
+            "no improvement there",
         )
-    if high <= start:
-        notes.append(f"'{step.name}': {words} does not lie above the level at hand ({start:.4g}): no improvement there")
-        return start, words
-    return high, words
-
-
-def _one_curve(state: State, law: LawInUse) -> Curves:
-    """Return the curve of one state under a law, as a table of one row."""
-    level = state.level
-    return Curves(
-        k=np.array([level.k]),
-        shift=np.array([level.shift]),
-        sides=np.array([level.sides]),
-        opportunities=np.array([state.opportunities]),
-        installed=np.array([state.installed]),
-        needed=np.array([state.needed]),
-        common_cause=np.array([state.common_cause]),
-        start=np.array([level.sigma_level]),
-        kind=np.array([law.kind]),
-        parameter=np.array([law.parameter]),
-        scale=np.array([law.scale]),
-    )
-
-
-def law_in_use(scenario: Scenario, step: Step, today: State, items: float) -> LawInUse:
-    law = step.improve
-    assert law is not None
-    kind = {"power": cv.POWER, "exponential": cv.EXPONENTIAL, "decade": cv.DECADE, "quotes": cv.LINES}[law.law]
-    parameter = law.exponent or law.rate or 0.0
-    knots: tuple[tuple[float, float], ...] = ()
-    if kind == cv.LINES:
-        priced = any(point.price is not None for point in law.points)
-        yearly, capital = _per_unit_of_scale(
-            scenario, law, priced, items, any(p.per_item is not None for p in law.points)
-        )
-        knots = tuple((sigma_meant(p, today), yearly * _amount(p.price, p.per_year, p.per_item)) for p in law.points)
-        return LawInUse(law, kind, parameter, yearly, capital, knots)
-    stated = _amount(law.price, law.per_year, law.per_item)
-    if law.at is not None:
-        stated /= _shape_at(law, kind, parameter, today)
-    yearly, capital = _per_unit_of_scale(scenario, law, law.price is not None, items, law.per_item is not None)
-    return LawInUse(law, kind, parameter, stated * yearly, stated * capital, knots)
-
-
-def _amount(*stated: float | None) -> float:
-    return next((x for x in stated if x is not None), 0.0)
-
-
-def _per_unit_of_scale(scenario: Scenario, law: Law, priced: bool, items: float, per_item: bool) -> tuple[float, float]:
-    """Return yearly cost and capital of one unit on the law's scale (price, per_year or per_item)."""
-    if priced:
-        years, rate = horizon(scenario, law.life_years)
-        return capital_recovery(rate, years), 1.0
-    return (items, 0.0) if per_item else (1.0, 0.0)
-
-
-def _shape_at(law: Law, kind: int, parameter: float, today: State) -> float:
-    """Return the law's shape at its `at` level, so that getting there from today costs the stated amount."""
-    assert law.at is not None
-    there, here = sigma_meant(law.at, today), today.level.sigma_level
-    if kind == cv.POWER:
-        return float(laws.power(there, here, parameter))
-    if kind == cv.EXPONENTIAL:
-        return float(laws.exponential(there, here, parameter))
-    return float(laws.decade(today.log_p_at(there), today.log_p))
+        for i in rows.tolist()
+    ]
 
 
 def _quoted_stretch(
-    step: Step, state: State, today: State, law: LawInUse, low: float, high: float, curve: Curves, notes: list[str]
-) -> Stretch:
-    """Return the envelope of the quotes in this state's own intensity, from its level (or floor) to the cap."""
-    z = np.array([today.level.sigma_level, *(z for z, _ in law.knots)])
-    cost = np.array([0.0, *(c for _, c in law.knots)])
+    curve: Curves, today: float, knots: tuple[Array, Array], low: float, high: float
+) -> tuple[Stretch, list[str]]:
+    """Return the envelope of the quotes in a state's own intensity, and in words which quotes lie above it."""
+    z, cost = np.append(today, knots[0]), np.append(0.0, knots[1])
     many = curve.take(np.zeros(len(z), dtype=int))
     delta, costs, kept = laws.lower_envelope(cv.intensity(many, z), cost)
-    for quote in np.flatnonzero(~kept):
-        if quote > 0:
-            notes.append(f"'{step.name}': quote {quote} (sigma level {z[quote]:.4g}) lies above the others' envelope")
+    above = [
+        f"quote {quote} (sigma level {z[quote]:.4g}) lies above the others' envelope"
+        for quote in np.flatnonzero(~kept)
+        if quote > 0
+    ]
     ends = cv.intensity(curve.take(np.zeros(2, dtype=int)), np.array([high, low]))
     start = cv.intensity(curve, curve.start)[0]
     inside = (delta > ends[0]) & (delta < ends[1])
-    knots = np.unique(np.concatenate([ends, delta[inside]]))
-    above_start = np.interp(knots, delta, costs) - np.interp(start, delta, costs)
-    return Stretch(low, high, (knots, np.maximum(above_start, 0.0)))
-
-
-def horizon(scenario: Scenario, life_years: float | None) -> tuple[float, float]:
-    """Return life [year] and discount rate [1/year] of something paid once."""
-    years = life_years if life_years is not None else scenario.demand.years
-    rate = scenario.demand.discount_rate
-    assert years is not None, "checked when read"
-    assert rate is not None, "checked when read"
-    return years, rate
+    levels = np.unique(np.concatenate([ends, delta[inside]]))
+    above_start = np.interp(levels, delta, costs) - np.interp(start, delta, costs)
+    return Stretch(low, high, (levels, np.maximum(above_start, 0.0))), above

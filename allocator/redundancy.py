@@ -64,6 +64,7 @@ def one_copy(total: ArrayLike, installed: ArrayLike, needed: ArrayLike, common_c
     low, high = np.full(total.shape, -690.0), np.zeros(total.shape)
     wanted = np.log(np.maximum(total, 1e-300))
     log_p = np.clip(wanted, low, -1e-9)
+    settled = np.zeros(total.shape, dtype=bool)
     for _ in range(NEWTON_STEPS):
         p = np.exp(log_p)
         fails = failure(p, n, m, beta)
@@ -71,8 +72,11 @@ def one_copy(total: ArrayLike, installed: ArrayLike, needed: ArrayLike, common_c
         with np.errstate(divide="ignore", invalid="ignore"):
             moved = log_p - (np.log(fails) - wanted) * fails / (failure_slopes(p, n, m, beta)[0] * p)
         moved = np.where((moved > low) & (moved < high), moved, 0.5 * (low + high))
-        settled = np.all(np.abs(moved - log_p) <= 1e-14 * np.abs(moved))
-        log_p = moved
-        if settled:
+        # A level that has settled is left alone, so that a result does not depend on what else is in the array.
+        log_p, settled = (
+            np.where(settled, log_p, moved),
+            settled | (np.abs(moved - log_p) <= 1e-14 * np.abs(moved)),
+        )
+        if settled.all():
             break
     return log_p[()]

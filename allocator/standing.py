@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import math
-
 import numpy as np
 from numpy.typing import NDArray
 
@@ -11,35 +9,48 @@ from allocator.capability import index_after_shift, log_good, study_index
 from allocator.choice import flow_of_states
 from allocator.flow import OVERFLOW, Flow, Line, gradient, money, yields
 from allocator.problem import Problem
-from allocator.results import Level, TodayLine
-from allocator.state import State, has_cp
+from allocator.results import Level, TodayLine, records
+from allocator.states import States
 
+Array = NDArray[np.float64]
 LOTS = (100, 1_000, 10_000)
 
 
-def level_at(state: State, z: float, items_per_unit: float) -> Level:
-    """Return the level of a step in a state at sigma level z, with its indices and defect figures."""
-    log_p = state.log_p_at(z)
-    delta = -state.opportunities * float(log_good(log_p))
-    k, shift = state.level.k, state.level.shift
-    return Level(
-        sigma_level=z,
-        shift=shift,
-        k=k,
-        sides=state.level.sides,
-        cp=z / 3.0 if has_cp(state) else None,
-        cpk=float(study_index(z, k)),
-        cpk_after_shift=float(index_after_shift(z, k, shift)),
-        dpmo=1e6 * math.exp(log_p),
-        ppm=-1e6 * math.expm1(-delta),
-        dpu=items_per_unit * state.opportunities * math.exp(log_p),
-    )
+def levels_at(states: States, z: Array, items_per_unit: Array) -> tuple[Level, ...]:
+    """Return the level of every step in its state at sigma level z, with its indices and defect figures.
+
+    Parameters
+    ----------
+    states : States
+        One per step.
+    z, items_per_unit : shape (n_steps,) [σ, items per finished unit]
+    """
+    levels, log_p = states.levels, states.log_p_at(z)
+    whole = np.where(states.has_cp, z / 3.0, np.nan).tolist()
+    columns = {
+        "sigma_level": z.tolist(),
+        "shift": levels.shift.tolist(),
+        "k": levels.k.tolist(),
+        "sides": levels.sides.tolist(),
+        "cp": [cp if two else None for cp, two in zip(whole, states.has_cp.tolist(), strict=True)],
+        "cpk": study_index(z, levels.k).tolist(),
+        "cpk_after_shift": index_after_shift(z, levels.k, levels.shift).tolist(),
+        "dpmo": (1e6 * np.exp(log_p)).tolist(),
+        "ppm": (-1e6 * np.expm1(states.opportunities * log_good(log_p))).tolist(),
+        "dpu": (items_per_unit * states.opportunities * np.exp(log_p)).tolist(),
+    }
+    return records(Level, columns)
 
 
 def levels_today(problem: Problem) -> tuple[Level, ...]:
     """Return today's level of every step."""
-    q = problem.line.per_finished
-    return tuple(level_at(s, s.level.sigma_level, float(q[i])) for i, s in enumerate(problem.options.today))
+    today = problem.options.today
+    return levels_at(today, today.levels.sigma_level, problem.line.per_finished)
+
+
+def defects_per_unit(states: States, z: Array, items_per_unit: Array) -> float:
+    """Return the expected defects per finished unit, Σ q·n·p, with every step in its state at sigma level z."""
+    return float(sum((items_per_unit * states.opportunities * np.exp(states.log_p_at(z))).tolist()))
 
 
 def flow_today(problem: Problem) -> Flow:
@@ -47,17 +58,17 @@ def flow_today(problem: Problem) -> Flow:
     return flow_of_states(problem.line, problem.options.today)
 
 
-def shipped_known(problem: Problem, states: tuple[State, ...]) -> bool:
+def shipped_known(problem: Problem, states: States) -> bool:
     """Return whether escapes are known: some gate of the line states an inspection, or they are what is asked."""
     asked = problem.split == "shipped_yield" or "shipped_yield" in problem.budgets
-    return asked or any(state.inspection is not None for state in states)
+    return asked or any(inspection is not None for inspection in states.inspection)
 
 
 def line_today(problem: Problem) -> TodayLine:
     """Return where the line stands; its money is left out where the flow overflows, with the reason."""
-    flow = flow_today(problem)
+    flow, today = flow_today(problem), problem.options.today
     over = float(np.max(flow.exponent))
-    seen = yields(problem.line, flow, shipped_known(problem, problem.options.today))
+    seen = yields(problem.line, flow, shipped_known(problem, today))
     reason = None
     if over > OVERFLOW:
         reason = (
@@ -68,7 +79,7 @@ def line_today(problem: Problem) -> TodayLine:
         yields=seen,
         money=money(problem.line, flow, 0.0) if reason is None else None,
         money_reason=reason,
-        dpu=sum(level.dpu for level in levels_today(problem)),
+        dpu=defects_per_unit(today, today.levels.sigma_level, problem.line.per_finished),
         bad_per_lot=tuple((lot, lot * seen.rolled_loss) for lot in LOTS),
     )
 

@@ -1,16 +1,15 @@
-"""What does a combination of alternatives make of a step: capability, opportunities, copies and gate."""
+"""One way a step can stand: its capability, opportunities, copies and gate."""
 
 from __future__ import annotations
 
 import math
 import sys
-from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 from allocator import redundancy
 from allocator.capability import log_defects, sigma_from_log_defects
-from allocator.scenario.level import Level, resolve
-from allocator.scenario.model import Alternative, Capability, Floor, Inspection, Rework, Scenario, Step
+from allocator.scenario.level import Level
+from allocator.scenario.model import Floor, Inspection, Rework
 
 
 @dataclass(frozen=True)
@@ -45,84 +44,6 @@ class State:
         return float(sigma_from_log_defects(log_p, self.level.k, self.level.shift, self.level.sides))
 
 
-def state_today(scenario: Scenario, step: Step) -> State:
-    """Return the state of a step as it stands, the line's defaults filled in."""
-    default = scenario.default
-    return State(
-        level=resolve(step.capability, step.opportunities, None, default.shift),
-        opportunities=step.opportunities,
-        inspection=step.inspection if step.inspection is not None else default.inspection,
-        rework=step.rework if step.rework is not None else default.rework,
-    )
-
-
-def state_with(today: State, chosen: Sequence[Alternative]) -> State:
-    """Return the state with the chosen alternatives, applied key by key in the fixed order of the model.
-
-    Groups cannot set the same key twice (checked when read), so the order within a key does not matter.
-    """
-    level = today.level
-    for alternative in chosen:
-        if alternative.capability is not None:
-            level = resolve(alternative.capability, today.opportunities, level)
-    for alternative in chosen:
-        if alternative.k is not None:
-            level = replace(level, k=alternative.k)
-        if alternative.shift is not None:
-            level = replace(level, shift=alternative.shift)
-    state = replace(today, level=level)
-    for alternative in chosen:
-        if alternative.widen is not None:
-            w = alternative.widen
-            level = replace(level, sigma_level=w * level.sigma_level, k=level.k / w)
-    state = replace(state, level=level)
-    for alternative in chosen:
-        state = _with_structure(state, alternative)
-    return state
-
-
-def _with_structure(state: State, alternative: Alternative) -> State:
-    if alternative.opportunities is not None:
-        state = replace(state, opportunities=alternative.opportunities)
-    if alternative.copies is not None:
-        copies = alternative.copies
-        state = replace(state, installed=copies.installed, needed=copies.needed, common_cause=copies.common_cause)
-    if alternative.inspection is not None:
-        state = replace(state, inspection=alternative.inspection)
-    if alternative.rework is not None:
-        state = replace(state, rework=alternative.rework)
-    return state
-
-
-def sigma_meant(quoted: float | Capability, state: State) -> float:
-    """Return the sigma level, in this state, that a quoted level stands for (`up_to`, `at`, a quote).
-
-    A number is a sigma level. A capability with the state's own shift, offset and sides gives its z; any other counts
-    through its defect probability. A defect probability is that of the opportunity: of the set, with copies.
-    """
-    if not isinstance(quoted, Capability):
-        return float(quoted)
-    level = resolve(quoted, state.opportunities, state.level)
-    same_terms = (level.k, level.shift, level.sides) == (state.level.k, state.level.shift, state.level.sides)
-    if level.attribute:
-        return state.sigma_at(level.log_p)
-    if same_terms:
-        return level.sigma_level
-    return float(sigma_from_log_defects(level.log_p, state.level.k, state.level.shift, state.level.sides))
-
-
-def floor_sigma(floor: Floor | None, state: State) -> float:
-    """Return the least sigma level that keeps the floor in this state, −inf without a floor."""
-    if floor is None:
-        return -math.inf
-    if floor.sigma_level is not None:
-        return floor.sigma_level
-    if floor.cpk is not None:
-        return 3.0 * floor.cpk / (1.0 - state.level.k)
-    assert floor.dpmo is not None
-    return state.sigma_at(math.log(floor.dpmo * 1e-6))
-
-
 def floor_words(floor: Floor | None) -> str | None:
     """Return the floor as people write it."""
     if floor is None:
@@ -132,8 +53,3 @@ def floor_words(floor: Floor | None) -> str | None:
     if floor.sigma_level is not None:
         return f"sigma level at least {floor.sigma_level:g}"
     return f"at most {floor.dpmo:g} dpmo"
-
-
-def has_cp(state: State) -> bool:
-    """Cp compares two limits with the spread; one limit alone and counted defects have none."""
-    return state.level.sides == 2 and not state.level.attribute

@@ -40,7 +40,7 @@ def convex_stretches(curve: Curves, low: float, high: float) -> list[Stretch]:
         One row.
     low, high : float [σ]
     """
-    if low == high or _known_convex(curve, low):
+    if low == high or known_convex(curve, np.array([low]))[0]:
         return [Stretch(low, high, None)]
     levels = np.linspace(low, high, GRID)
     bend = _curvature(curve, levels)
@@ -56,14 +56,19 @@ def convex_stretches(curve: Curves, low: float, high: float) -> list[Stretch]:
     return stretches
 
 
-def _known_convex(curve: Curves, low: float) -> bool:
-    """Return whether theory already says so: decades always, one item past its drift and well below a fifth bad."""
-    if curve.kind[0] == cv.DECADE:
-        return True
-    if curve.installed[0] > 1 or low * (1.0 - curve.k[0]) < curve.shift[0]:
-        return False
-    needs_small_p = curve.kind[0] == cv.POWER and curve.parameter[0] < 1.0
-    return not needs_small_p or bool(cv.log_probability(curve, np.array([low]))[0] < np.log(SMALL_P))
+def known_convex(curves: Curves, low: Array) -> NDArray[np.bool_]:
+    """Return where theory already says so: decades always, one item past its drift and well below a fifth bad.
+
+    Parameters
+    ----------
+    curves : Curves
+    low : shape (n_rows,) [σ]
+        From where on each law is to be convex.
+    """
+    past_drift = ~curves.copied & (low * (1.0 - curves.k) >= curves.shift)
+    unsure = np.flatnonzero(past_drift & (curves.kind == cv.POWER) & (curves.parameter < 1.0))
+    past_drift[unsure] = cv.log_probability(curves.take(unsure), low[unsure]) < np.log(SMALL_P)
+    return np.asarray(past_drift | (curves.kind == cv.DECADE))
 
 
 def _curvature(curve: Curves, levels: Array) -> Array:

@@ -7,23 +7,27 @@ intensity is cut into shorter ones that carry their chord, so that every way is 
 
 from __future__ import annotations
 
-import itertools
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterator
 from dataclasses import dataclass
+from typing import Any, SupportsIndex
 
 import numpy as np
 from numpy.typing import NDArray
 
 from allocator import curves as cv
 from allocator.curves import Curves
-from allocator.flow import GATE_FIELDS, Gates, Line, gate_values
-from allocator.money import annual_cost
-from allocator.reach import horizon, law_in_use, reaches
-from allocator.scenario.model import Alternative, Costs, Purchase, Scenario, Step
-from allocator.state import State, floor_sigma, floor_words, state_today, state_with
-from allocator.stretch import Stretch
+from allocator.flow import GATE_FIELDS, Gates, Line
+from allocator.picks import Picks, all_picks, yearly_costs
+from allocator.reach import Caps, Reaches, reaches
+from allocator.scales import NAME, LawsInUse, laws_in_use
+from allocator.scenario.levels import column
+from allocator.scenario.model import Scenario
+from allocator.state import floor_words
+from allocator.states import States, states_today, states_with
 
 Array = NDArray[np.float64]
+Indices = NDArray[np.int64]
+Pieces = tuple[Array, Array]
 
 
 @dataclass(frozen=True)
@@ -33,6 +37,63 @@ class WayText:
     alternatives: tuple[str, ...]
     law: str | None
     cap: str
+
+
+@dataclass(frozen=True)
+class Texts:
+    """The words of many ways by index, made when they are asked for."""
+
+    picks: Picks
+    caps: Caps
+    pick: Indices
+    kind: Indices
+
+    def __len__(self) -> int:
+        return len(self.pick)
+
+    def __getitem__(self, w: SupportsIndex) -> WayText:
+        pick = self.pick[w].item()
+        return WayText(self.picks.names(pick), NAME.get(self.kind[w].item()), self.caps.words(pick))
+
+    def __iter__(self) -> Iterator[WayText]:
+        return (self[w] for w in range(len(self)))
+
+    @property
+    def unchanged(self) -> NDArray[np.bool_]:
+        """Where nothing is chosen."""
+        return np.asarray((self.picks.members[self.pick] < 0).all(axis=1))
+
+    def alternatives(self) -> list[tuple[str, ...]]:
+        """Return what every way chooses."""
+        names = [a.name for a in self.picks.alternatives]
+        return [tuple([names[m] for m in chosen if m >= 0]) for chosen in self.picks.members[self.pick].tolist()]
+
+    def take(self, rows: Any) -> Texts:
+        """Return the words of some ways."""
+        return Texts(self.picks, self.caps, self.pick[rows], self.kind[rows])
+
+
+@dataclass(frozen=True)
+class Lines:
+    """Straight pieces by way, None where the law is smooth; few ways have any."""
+
+    count: int
+    pieces: dict[int, Pieces]
+
+    def __len__(self) -> int:
+        return self.count
+
+    def __getitem__(self, w: SupportsIndex) -> Pieces | None:
+        return self.pieces.get(int(w))
+
+    def __iter__(self) -> Iterator[Pieces | None]:
+        return (self.pieces.get(w) for w in range(self.count))
+
+    def take(self, rows: Indices) -> Lines:
+        """Return the pieces of some ways."""
+        if not self.pieces:
+            return Lines(len(rows), {})
+        return Lines(len(rows), {i: self.pieces[w] for i, w in enumerate(rows.tolist()) if w in self.pieces})
 
 
 @dataclass(frozen=True)
@@ -56,12 +117,14 @@ class Ways:
         Capital behind one unit of the law's yearly cost.
     gates : Gates
     uses : bool, shape (n_ways, n_purchases)
-    lines : tuple
+    lines : Lines
         Straight pieces (δ rising, yearly cost falling) that stand for the law in the solver, None where it is smooth.
-    states, text : tuple
+    states : States
+    text : Texts
+        Read by index; `text.pick` tells which ways of a step choose the same alternatives.
     """
 
-    step: NDArray[np.int64]
+    step: Indices
     curves: Curves
     z_low: Array
     z_high: Array
@@ -72,9 +135,9 @@ class Ways:
     capital_per_cost: Array
     gates: Gates
     uses: NDArray[np.bool_]
-    lines: tuple[tuple[Array, Array] | None, ...]
-    states: tuple[State, ...]
-    text: tuple[WayText, ...]
+    lines: Lines
+    states: States
+    text: Texts
 
     def __len__(self) -> int:
         return len(self.step)
@@ -84,13 +147,39 @@ class Ways:
         """Where something continuous can move."""
         return self.delta_high > self.delta_low
 
-    def take(self, rows: NDArray[np.int64]) -> Ways:
+    def least_by_step(self, n_steps: int) -> Array:
+        """Return the least intensity that any way of each step reaches, shape (n_steps,)."""
+        least = np.full(n_steps, np.inf)
+        np.minimum.at(least, self.step, self.delta_low)
+        return least
+
+    def highest_unchanged(self, n_steps: int) -> Array:
+        """Return the highest level [σ] of each step with no alternative chosen, −inf if it has no such way."""
+        unchanged, highest = self.text.unchanged, np.full(n_steps, -np.inf)
+        np.maximum.at(highest, self.step[unchanged], self.z_high[unchanged])
+        return highest
+
+    def find(self, other: Ways, rows: Indices) -> Indices:
+        """Return where some ways of another table of the same options stand in this one, −1 for those it lacks."""
+        if other is self:
+            return rows
+        pick, z_low, z_high = other.text.pick[rows], other.z_low[rows], other.z_high[rows]
+        first = np.searchsorted(self.text.pick, pick, side="left")
+        count = np.searchsorted(self.text.pick, pick, side="right") - first
+        found = np.full(len(rows), -1, dtype=np.int64)
+        for piece in range(int(count.max(initial=0))):
+            at = np.minimum(first + piece, len(self) - 1)
+            same = (piece < count) & (self.z_low[at] == z_low) & (self.z_high[at] == z_high)
+            found[same] = at[same]
+        return found
+
+    def take(self, rows: Indices) -> Ways:
         """Return the table of some ways."""
         return Ways(
             self.step[rows], self.curves.take(rows), self.z_low[rows], self.z_high[rows], self.delta_low[rows],
             self.delta_high[rows], self.fixed_cost[rows], self.capital[rows], self.capital_per_cost[rows],
             Gates(*(getattr(self.gates, name)[rows] for name in GATE_FIELDS)), self.uses[rows],
-            tuple(self.lines[i] for i in rows), tuple(self.states[i] for i in rows), tuple(self.text[i] for i in rows),
+            self.lines.take(rows), self.states.take(rows), self.text.take(rows),
         )  # fmt: skip
 
 
@@ -107,129 +196,59 @@ class Options:
     purchase_price: Array
     purchase_cost: Array
     purchase_capital: Array
-    today: tuple[State, ...]
+    today: States
     no_way: tuple[tuple[str, str], ...]
     notes: tuple[str, ...]
 
 
-@dataclass
-class _Row:
-    """One way under construction."""
-
-    step: int
-    state: State
-    stretch: Stretch
-    kind: int
-    start: float
-    parameter: float
-    scale: float
-    fixed_cost: float
-    capital: float
-    capital_per_cost: float
-    uses: tuple[str, ...]
-    text: WayText
-
-
 def build_options(scenario: Scenario, line: Line) -> Options:
     """Return every way to run every step of a checked scenario."""
-    rows: list[_Row] = []
-    no_way: list[tuple[str, str]] = []
-    notes: list[str] = []
-    today = tuple(state_today(scenario, step) for step in scenario.step)
-    for index, step in enumerate(scenario.step):
-        items = line.per_finished[index] * line.shipped
-        found = list(_ways_of_step(scenario, step, index, today[index], items, notes))
-        rows.extend(found)
-        if not found:
-            no_way.append((step.name, f"no way to run it keeps its floor ({floor_words(step.at_least)})"))
-    names = tuple(purchase.name for purchase in scenario.purchase)
+    steps, items = scenario.step, line.per_finished * line.shipped
+    today, picks = states_today(scenario), all_picks(scenario.step)
+    states, in_use = states_with(today, picks), laws_in_use(scenario, today, items)
+    reached = reaches(steps, states, picks.step, in_use, today.levels.sigma_level)
+    ways = _table(scenario, items, picks, states.take(reached.state), in_use, reached)
+    found = np.bincount(ways.step, minlength=len(steps))
     return Options(
-        ways=_table(rows, names),
-        purchase_names=names,
-        purchase_price=np.array([p.price for p in scenario.purchase], dtype=float),
-        purchase_cost=np.array([yearly_cost(scenario, p) for p in scenario.purchase], dtype=float),
-        purchase_capital=np.array([p.price - p.trade_in for p in scenario.purchase], dtype=float),
+        ways=ways,
+        purchase_names=tuple(purchase.name for purchase in scenario.purchase),
+        purchase_price=column(scenario.purchase, "price"),
+        purchase_cost=yearly_costs(scenario, scenario.purchase),
+        purchase_capital=column(scenario.purchase, "price") - column(scenario.purchase, "trade_in"),
         today=today,
-        no_way=tuple(no_way),
-        notes=tuple(dict.fromkeys(notes)),
+        no_way=tuple(
+            (steps[i].name, f"no way to run it keeps its floor ({floor_words(steps[i].at_least)})")
+            for i in np.flatnonzero(found == 0)
+        ),
+        notes=tuple(dict.fromkeys(reached.notes)),
     )
 
 
-def yearly_cost(scenario: Scenario, costs: Costs) -> float:
-    """Return what a purchase or alternative costs per year, apart from what is charged per item [currency/year]."""
-    total = costs.per_year
-    if costs.price or costs.trade_in or costs.resale:
-        years, rate = horizon(scenario, costs.life_years)
-        total += annual_cost(costs.price, costs.trade_in, costs.resale, rate, years)
-    return total
-
-
-def combinations(step: Step) -> Iterator[tuple[Alternative, ...]]:
-    """Yield every choice of at most one alternative per group, nothing chosen first."""
-    groups: dict[str, list[Alternative | None]] = {}
-    for alternative in step.alternative:
-        groups.setdefault(alternative.group, [None]).append(alternative)
-    for combination in itertools.product(*groups.values()):
-        yield tuple(a for a in combination if a is not None)
-
-
-def _ways_of_step(
-    scenario: Scenario, step: Step, index: int, today: State, items: float, notes: list[str]
-) -> Iterator[_Row]:
-    law = law_in_use(scenario, step, today, items) if step.improve is not None else None
-    for chosen in combinations(step):
-        state = state_with(today, chosen)
-        fixed = sum(
-            yearly_cost(scenario, a) + a.per_item * items + a.price_allowance * scenario.demand.shipped_per_year
-            for a in chosen
-        )
-        capital = sum(a.price - a.trade_in for a in chosen)
-        uses = tuple(a.uses for a in chosen if a.uses is not None)
-        names = tuple(a.name for a in chosen)
-        floor = floor_sigma(step.at_least, state)
-        for reach in reaches(step, state, today, law, floor, notes):
-            yield _Row(
-                index, state, reach.stretch, reach.kind, state.level.sigma_level, reach.parameter, reach.scale,
-                fixed, capital, reach.capital_per_cost, uses, WayText(names, reach.law, reach.cap),
-            )  # fmt: skip
-
-
-def _table(rows: Sequence[_Row], purchases: tuple[str, ...]) -> Ways:
-    def column(values: list[float]) -> Array:
-        return np.array(values, dtype=float)
-
-    curves = Curves(
-        k=column([r.state.level.k for r in rows]),
-        shift=column([r.state.level.shift for r in rows]),
-        sides=np.array([r.state.level.sides for r in rows], dtype=np.int64),
-        opportunities=column([r.state.opportunities for r in rows]),
-        installed=np.array([r.state.installed for r in rows], dtype=np.int64),
-        needed=np.array([r.state.needed for r in rows], dtype=np.int64),
-        common_cause=column([r.state.common_cause for r in rows]),
-        start=column([r.start for r in rows]),
-        kind=np.array([r.kind for r in rows], dtype=np.int64),
-        parameter=column([r.parameter for r in rows]),
-        scale=column([r.scale for r in rows]),
-    )
-    z_low, z_high = column([r.stretch.low for r in rows]), column([r.stretch.high for r in rows])
-    gates = np.array([gate_values(r.state.inspection, r.state.rework) for r in rows], dtype=float).reshape(
-        len(rows), -1
+def _table(scenario: Scenario, items: Array, picks: Picks, states: States, in_use: LawsInUse, reached: Reaches) -> Ways:
+    """Return the table of ways: one row per stretch that a combination of alternatives reaches."""
+    pick, step, pays = reached.state, picks.step[reached.state], reached.improves[reached.state]
+    kind = np.where(pays, in_use.kind[step], cv.NONE)
+    curves = states.curves(kind, np.where(pays, in_use.parameter[step], 0.0), np.where(pays, in_use.scale[step], 0.0))
+    offers = picks.alternatives
+    per_item, allowance = column(offers, "per_item"), column(offers, "price_allowance")
+    yearly = (
+        yearly_costs(scenario, offers) + per_item * items[picks.owner] + allowance * scenario.demand.shipped_per_year
     )
     return Ways(
-        step=np.array([r.step for r in rows], dtype=np.int64),
+        step=step,
         curves=curves,
-        z_low=z_low,
-        z_high=z_high,
-        delta_low=cv.intensity(curves, z_high),
-        delta_high=cv.intensity(curves, z_low),
-        fixed_cost=column([r.fixed_cost for r in rows]),
-        capital=column([r.capital for r in rows]),
-        capital_per_cost=column([r.capital_per_cost for r in rows]),
-        gates=Gates(*gates.T),
-        uses=np.array([[name in r.uses for name in purchases] for r in rows], dtype=bool).reshape(len(rows), -1),
-        lines=tuple(r.stretch.lines for r in rows),
-        states=tuple(r.state for r in rows),
-        text=tuple(r.text for r in rows),
+        z_low=reached.low,
+        z_high=reached.high,
+        delta_low=cv.intensity(curves, reached.high),
+        delta_high=cv.intensity(curves, reached.low),
+        fixed_cost=picks.sums(yearly)[pick],
+        capital=picks.sums(column(offers, "price") - column(offers, "trade_in"))[pick],
+        capital_per_cost=np.where(pays, in_use.capital_per_cost[step], 0.0),
+        gates=states.gates(),
+        uses=picks.uses([purchase.name for purchase in scenario.purchase])[pick],
+        lines=Lines(len(pick), reached.lines),
+        states=states,
+        text=Texts(picks, reached.caps, pick, kind),
     )
 
 
@@ -242,8 +261,3 @@ def law_cost(ways: Ways, rows: NDArray[np.int64], z: Array) -> Array:
         assert lines is not None
         cost[i] = np.interp(cv.intensity(some.take([i]), z[[i]])[0], *lines)
     return cost
-
-
-def purchase_named(scenario: Scenario, name: str) -> Purchase:
-    """Return a shared purchase by its name."""
-    return next(p for p in scenario.purchase if p.name == name)

@@ -115,8 +115,8 @@ def a_plan(**changes: Any) -> Plan:
         split="final_yield", targets={"final_yield": 0.995}, target_losses={"final_yield": 0.005}, yields=yields(),
         money=money(), dpu=0.0101, capital=90_000.0, purchases=(Bought("Laser cell", 250_000.0, 61_000.0),),
         steps=tuple(steps), today=today_line(), proof=Proof(290_469.0, 290_468.9, 3.4e-7, "price road", 0.012),
-        price_of_defect_budget=-2.5e6, cost_of_next_nine=34_000.0,
-        best_reachable=BestReachable("final_yield", 0.9998, 2e-4, 510_000.0, (Binding("Weld", "at its cap"),)), binding=(),
+        price_of_defect_budget=-2.5e6, cost_of_next_nine=34_000.0, binding=(),
+        best_reachable=BestReachable("final_yield", 0.9998, 2e-4, 510_000.0, (Binding("Weld", "at its cap"),)),
         rules=(RULE, MISSED), rules_note="", assumed=("gates find all of their own defects",), cautions=(CAUTION,),
     )  # fmt: skip
     return replace(plan, **changes)

@@ -25,7 +25,7 @@ def what_is_assumed(problem: Problem) -> tuple[str, ...]:
 
 
 def _inspection(problem: Problem) -> list[str]:
-    assumed = [i for i, state in enumerate(problem.options.today) if state.inspection is None]
+    assumed = [i for i, inspection in enumerate(problem.options.today.inspection) if inspection is None]
     if not assumed:
         return []
     if len(assumed) == len(problem.options.today):
@@ -38,7 +38,7 @@ def _inspection(problem: Problem) -> list[str]:
 
 
 def _shift(problem: Problem) -> list[str]:
-    shifts = sorted({state.level.shift for state in problem.options.today})
+    shifts = sorted(set(problem.options.today.levels.shift.tolist()))
     if shifts == [0.0]:
         return ["No drift allowance is made (shift 0): short-term capability is taken to hold all year."]
     if len(shifts) == 1:

@@ -5,15 +5,19 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Iterator
 
+import numpy as np
+from numpy.typing import NDArray
 from pydantic import BaseModel
 
 from allocator.capability import study_index
 from allocator.problem import Problem, inspection_stated
 from allocator.results import Caution
 from allocator.scenario.level import LONG_TERM, given
-from allocator.scenario.model import Capability, Step, Table
-from allocator.state import sigma_meant
+from allocator.scenario.levels import column
+from allocator.scenario.model import Capability, Inspection, Step, Table
+from allocator.states import sigmas_meant
 
+Flags = NDArray[np.bool_]
 SMALL_SAMPLE = 50
 FEW_BAD = 5
 Z_95 = 1.6448536269514722
@@ -42,6 +46,11 @@ def _about(code: str, steps: list[str], reason: str, fix: str) -> Iterator[Cauti
 
 def _steps(problem: Problem, test: Callable[[Step, int], bool]) -> list[str]:
     return [step.name for i, step in enumerate(problem.scenario.step) if test(step, i)]
+
+
+def _named(problem: Problem, where: Flags) -> list[str]:
+    """Return the names of some steps, given as flags of shape (n_steps,)."""
+    return [problem.scenario.step[i].name for i in np.flatnonzero(where).tolist()]
 
 
 def _capabilities(step: Step) -> Iterator[Capability]:
@@ -75,8 +84,11 @@ def _long_term(problem: Problem) -> Iterator[Caution]:
 
 def _small_sample(problem: Problem) -> Iterator[Caution]:
     for i, step in enumerate(problem.scenario.step):
-        sample, level = step.capability.sample, problem.options.today[i].level
-        if sample is None or level.attribute or sample > SMALL_SAMPLE:
+        sample = step.capability.sample
+        if sample is None or sample > SMALL_SAMPLE:
+            continue
+        level = problem.options.today[i].level
+        if level.attribute:
             continue
         cpk = float(study_index(level.sigma_level, level.k))
         reason = f"Cpk {cpk:.2f} from {sample} parts is taken as exact; its 95 % lower limit is about {lower_cpk(cpk, sample):.2f}"
@@ -84,47 +96,46 @@ def _small_sample(problem: Problem) -> Iterator[Caution]:
 
 
 def _beyond_the_data(problem: Problem) -> Iterator[Caution]:
-    def extrapolated(step: Step, i: int) -> bool:
-        sample, state = step.capability.sample, problem.options.today[i]
-        return sample is not None and not state.level.attribute and math.exp(state.log_p) < 1.0 / (3.0 * sample)
-
+    today = problem.options.today
+    sample = column([step.capability for step in problem.scenario.step], "sample")
+    p = np.exp(today.log_p_at(today.levels.sigma_level))
     yield from _about(
-        "beyond_the_data", _steps(problem, extrapolated),
+        "beyond_the_data", _named(problem, ~today.levels.attribute & (p < 1.0 / (3.0 * sample))),
         "the defect rate lies below one in three times the sample: it is the normal model speaking, not the data",
         "treat these ppm as a model; confirm with counts before money is committed",
     )  # fmt: skip
 
 
 def _inspection(problem: Problem) -> Iterator[Caution]:
-    today = problem.options.today
+    stated = problem.options.today.inspection
     if not inspection_stated(problem.scenario):
         yield Caution(
             "inspection_assumed", (), "no step states an inspection, so every gate is assumed perfect and the shipped yield is unknown",
             "state `inspection = {finds = …}` where parts are checked; a check rarely finds more than a part of what is wrong",
         )  # fmt: skip
         return
-    bought = _steps(problem, lambda s, i: s.supplier is not None and today[i].inspection is None)
+    bought = _steps(problem, lambda s, i: s.supplier is not None and stated[i] is None)
     yield from _about(
         "bought_part_without_inspection", bought,
         "a bought part without a stated inspection is assumed to be checked perfectly before it is used",
         "state the incoming inspection, or finds = 0 where parts go straight to the line",
     )  # fmt: skip
-    own = _steps(problem, lambda s, i: s.supplier is None and today[i].inspection is None)
+    own = _steps(problem, lambda s, i: s.supplier is None and stated[i] is None)
     yield from _about(
         "gate_assumed_perfect", own, "no inspection is stated here while others state one: this gate is assumed to find all its own defects",
         "state what the check at this step finds",
     )  # fmt: skip
-    perfect = _steps(problem, lambda _, i: _finds_all(problem, i))
+    perfect = _steps(problem, lambda _, i: _finds_all(stated[i]))
     yield from _about(
         "inspection_stated_perfect", perfect, "an inspection that finds everything is rare: 100 % inspected is not 0 ppm",
         "enter the share found in an attribute study of the check",
     )  # fmt: skip
-    if all(s.inspection is None or s.inspection.rejects_good == 0.0 for s in today):
+    if all(seen is None or seen.rejects_good == 0.0 for seen in stated):
         yield Caution(
             "no_false_rejects", (), "no inspection rejects good items; real checks do, and the rejects cost starts and scrap",
             "enter `rejects_good` from a repeat test of rejected items",
         )  # fmt: skip
-    repeated = [s.name for i, s in enumerate(problem.scenario.step) if (g := today[i].inspection) and g.earlier > 0.0]
+    repeated = _steps(problem, lambda _, i: stated[i] is not None and stated[i].earlier > 0.0)
     if len(repeated) > 1:
         yield Caution(
             "repeated_inspection", tuple(repeated), "several gates look for the same hidden defects and are taken as independent; "
@@ -137,8 +148,7 @@ def _inspection(problem: Problem) -> Iterator[Caution]:
         )  # fmt: skip
 
 
-def _finds_all(problem: Problem, i: int) -> bool:
-    inspection = problem.options.today[i].inspection
+def _finds_all(inspection: Inspection | None) -> bool:
     return inspection is not None and inspection.finds * inspection.share_inspected == 1.0
 
 
@@ -159,7 +169,8 @@ def _near_tail(problem: Problem) -> Iterator[Caution]:
     def near(c: Capability) -> bool:
         return (c.cpk is not None and c.cp is None) or (c.ppk is not None and c.pp is None)
 
-    alone = _steps(problem, lambda s, i: near(s.capability) and problem.options.today[i].level.sides == 1)
+    sides = problem.options.today.levels.sides
+    alone = _steps(problem, lambda s, i: near(s.capability) and bool(sides[i] == 1))
     yield from _about(
         "near_tail_only", alone, "Cpk (Ppk) alone tells only the nearer tail; the far one is left out and recentring cannot be weighed",
         "give cp beside cpk, or the limits with mean and std",
@@ -185,19 +196,22 @@ def _laws(problem: Problem) -> Iterator[Caution]:
         "no_up_to", open_ended, "the law states no `up_to`; nothing is extrapolated past one tenth of the starting defects",
         "set up_to to the best level demonstrated or quoted",
     )  # fmt: skip
-    beyond = [step.name for i, step in enumerate(problem.scenario.step) if _at_out_of_reach(problem, step, i)]
     yield from _about(
-        "at_beyond_cap", beyond, "the level named in `at` lies beyond the law's cap, so the plan cannot go where the price was quoted",
+        "at_beyond_cap", _at_out_of_reach(problem), "the level named in `at` lies beyond the law's cap, so the plan cannot go where the price was quoted",
         "set up_to to that level or higher",
     )  # fmt: skip
 
 
-def _at_out_of_reach(problem: Problem, step: Step, i: int) -> bool:
-    if step.improve is None or step.improve.at is None:
-        return False
-    ways, today = problem.options.ways, problem.options.today[i]
-    mine = [w for w in range(len(ways)) if ways.step[w] == i and not ways.text[w].alternatives]
-    return bool(mine) and sigma_meant(step.improve.at, today) > max(ways.z_high[w] for w in mine) * (1.0 + 1e-9)
+def _at_out_of_reach(problem: Problem) -> list[str]:
+    """Return the steps whose law, with nothing else chosen, ends below the level that its price was stated for."""
+    steps, ways = problem.scenario.step, problem.options.ways
+    priced = {i: step.improve.at for i, step in enumerate(steps) if step.improve is not None and step.improve.at}
+    if not priced:
+        return []
+    highest, those = ways.highest_unchanged(len(steps)), np.array(list(priced), dtype=np.int64)
+    at = sigmas_meant(list(priced.values()), problem.options.today.take(those))
+    beyond = (highest[those] > -np.inf) & (at > highest[those] * (1.0 + 1e-9))
+    return [steps[i].name for i in those[beyond].tolist()]
 
 
 def _judged(problem: Problem) -> Iterator[Caution]:
@@ -211,14 +225,13 @@ def is_judged(table: BaseModel) -> bool:
     """Return whether a table, or any table inside it, is marked as judged."""
     if isinstance(table, Table) and table.evidence == "judged":
         return True
-    inside = (getattr(table, name) for name in type(table).model_fields)
-    return any(
-        is_judged(value)
-        if isinstance(value, BaseModel)
-        else any(is_judged(v) for v in value if isinstance(v, BaseModel))
-        for value in inside
-        if isinstance(value, BaseModel | tuple)
-    )
+    for value in table.__dict__.values():
+        if isinstance(value, BaseModel):
+            if is_judged(value):
+                return True
+        elif isinstance(value, tuple) and any(is_judged(v) for v in value if isinstance(v, BaseModel)):
+            return True
+    return False
 
 
 def _safety(problem: Problem) -> Iterator[Caution]:
@@ -237,9 +250,8 @@ def _widening(problem: Problem) -> Iterator[Caution]:
 
 
 def _rework(problem: Problem) -> Iterator[Caution]:
-    free = _steps(
-        problem, lambda _, i: bool((r := problem.options.today[i].rework) and r.share > 0.0 and r.cost == 0.0)
-    )
+    rework = problem.options.today.rework
+    free = _steps(problem, lambda _, i: bool((r := rework[i]) and r.share > 0.0 and r.cost == 0.0))
     yield from _about(
         "free_rework", free, "rework is entered as costing nothing; hidden rework is what a good final yield hides",
         "enter rework.cost: labour, parts and the second check",
@@ -247,7 +259,8 @@ def _rework(problem: Problem) -> Iterator[Caution]:
 
 
 def _shifts(problem: Problem) -> Iterator[Caution]:
-    measured = [s.level.shift for s in problem.options.today if not s.level.attribute]
+    levels = problem.options.today.levels
+    measured = levels.shift[~levels.attribute].tolist()
     if measured and max(measured) == 0.0 and not any(given(s.capability, LONG_TERM) for s in problem.scenario.step):
         yield Caution(
             "no_drift_allowance", (), "all measured capabilities are taken to hold all year (shift 0)",
@@ -261,10 +274,8 @@ def _shifts(problem: Problem) -> Iterator[Caution]:
 
 
 def _three_sigma(problem: Problem) -> Iterator[Caution]:
-    weak = _steps(
-        problem,
-        lambda _, i: study_index(problem.options.today[i].level.sigma_level, problem.options.today[i].level.k) <= 1.0,
-    )
+    levels = problem.options.today.levels
+    weak = _named(problem, study_index(levels.sigma_level, levels.k) <= 1.0)
     if len(weak) > 1:
         lost = 1.0 - (1.0 - 0.0026998) ** len(weak)
         yield Caution(
