@@ -1,0 +1,87 @@
+"""The commands of the main job: new, check, today, plan, nines."""
+
+from __future__ import annotations
+
+from typing import Annotated
+
+import typer
+
+from allocator.cli.app import OUT_OF_REACH, AsCsv, AsJson, File, app, form_of, load, show
+from allocator.cli.asked import Of, Which, losses_asked, name_of, named, refuse_unfit_money, split_of, yield_option
+from allocator.errors import Fault, InputError
+
+
+@app.command()
+def new(file: File) -> None:
+    """Write a small commented scenario to start from, as in: allocator new line.toml"""
+    if file.exists():
+        raise InputError([Fault(str(file), "", "a file of that name", "name a new file; nothing was overwritten")])
+    from allocator.scenario.starter import write_starter
+
+    write_starter(file)
+    typer.echo(f"Wrote {file}. Next: allocator check {file}")
+
+
+@app.command()
+def check(file: File, as_json: AsJson = False, as_csv: AsCsv = False) -> None:
+    """Say whether a scenario is sound, what was understood and which cautions apply."""
+    form = form_of(as_json, as_csv)
+    from allocator import api
+
+    show(api.check_scenario(load(file)), form)
+
+
+@app.command()
+def today(file: File, as_json: AsJson = False, as_csv: AsCsv = False) -> None:
+    """Show where the line stands: its yields, its defects and where the money goes."""
+    form = form_of(as_json, as_csv)
+    from allocator import api
+
+    show(api.see_today(load(file)), form)
+
+
+@app.command()
+def plan(
+    file: File,
+    final_yield: Annotated[str | None, yield_option(Which.final)] = None,
+    rolled_yield: Annotated[str | None, yield_option(Which.rolled)] = None,
+    shipped_yield: Annotated[str | None, yield_option(Which.shipped)] = None,
+    nines: Annotated[float | None, typer.Option(help="Target in nines for the yield split: 3 is 0.999.")] = None,
+    ppm: Annotated[float | None, typer.Option(help="Target in defective units per million, same yield.")] = None,
+    of: Of = None,
+    spend: Annotated[float | None, typer.Option(help="The best yield for at most this total cost per year.")] = None,
+    capital: Annotated[float | None, typer.Option(help="The best yield for at most this much capital.")] = None,
+    as_json: AsJson = False,
+    as_csv: AsCsv = False,
+) -> None:
+    """Find the cheapest plan that meets the target, as in: allocator plan line.toml --nines 3"""
+    form = form_of(as_json, as_csv)
+    yields = {Which.final: final_yield, Which.rolled: rolled_yield, Which.shipped: shipped_yield}
+    losses = losses_asked({which: text for which, text in yields.items() if text is not None}, nines, ppm)
+    refuse_unfit_money(spend, capital)
+    from allocator import api
+
+    scenario = load(file)
+    targets = named(losses, of or split_of(scenario, losses))
+    answer = api.make_plan(scenario, of=name_of(of), targets=targets, spend=spend, capital=capital)
+    show(answer, form)
+    if not answer.reached:
+        raise typer.Exit(OUT_OF_REACH)
+
+
+@app.command()
+def nines(
+    file: File,
+    points: Annotated[int | None, typer.Option(min=2, help="Add an even grid of this many points.")] = None,
+    of: Of = None,
+    as_json: AsJson = False,
+    as_csv: AsCsv = False,
+) -> None:
+    """Price each extra nine, up to the highest yield within reach."""
+    form = form_of(as_json, as_csv)
+    from allocator import api
+
+    answer = api.price_nines(load(file), of=name_of(of), points=points)
+    show(answer, form)
+    if answer.highest is None:
+        raise typer.Exit(OUT_OF_REACH)

@@ -1,0 +1,30 @@
+"""What the commands answer with: plain frozen records, numbers only; they neither print nor plot."""
+
+from allocator.results.line import Caution, Level, Money, TodayLine, Yields
+from allocator.results.nines import Nines, NinesPoint
+from allocator.results.plan import BestReachable, Binding, Bought, Plan, Proof, RuleOutcome, StepTarget
+from allocator.results.table import as_table, records
+from allocator.results.today import Check, StepToday, Today, Understood
+
+__all__ = [
+    "BestReachable",
+    "Binding",
+    "Bought",
+    "Caution",
+    "Check",
+    "Level",
+    "Money",
+    "Nines",
+    "NinesPoint",
+    "Plan",
+    "Proof",
+    "RuleOutcome",
+    "StepTarget",
+    "StepToday",
+    "Today",
+    "TodayLine",
+    "Understood",
+    "Yields",
+    "as_table",
+    "records",
+]

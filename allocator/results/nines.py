@@ -1,0 +1,52 @@
+"""The answer about nines: what each costs, up to the highest within reach."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+from allocator.results.line import Caution
+from allocator.results.plan import BestReachable
+from allocator.results.table import as_table
+
+if TYPE_CHECKING:
+    import pandas
+
+
+@dataclass(frozen=True)
+class NinesPoint:
+    """One point of the price of nines."""
+
+    label: str
+    """'today', 'whole nine', 'target', 'highest reachable', 'grid' or 'economic optimum'."""
+    nines: float
+    target_yield: float
+    target_loss: float
+    yield_: float
+    loss: float
+    total: float
+    extra: float | None
+    price_of_defect_budget: float | None
+    changes: tuple[str, ...]
+    gap: float
+
+
+@dataclass(frozen=True)
+class Nines:
+    """Total cost and cost of each extra nine, up to the highest reachable."""
+
+    title: str
+    currency: str
+    split: str
+    today_nines: float
+    points: tuple[NinesPoint, ...]
+    highest: BestReachable | None
+    optimum_yield: float | None
+    optimum_loss: float | None
+    optimum_total: float | None
+    assumed: tuple[str, ...]
+    cautions: tuple[Caution, ...]
+
+    def table(self) -> pandas.DataFrame:
+        """Return the points as a table."""
+        return as_table(self.points)
