@@ -13,6 +13,7 @@ from allocator.scenario.model import Scenario
 from allocator.solve.road import Solved, solve
 from allocator.standing import line_today
 
+END = "highest reachable"
 SAME = 1e-9
 """Two losses within this share of each other are one point."""
 
@@ -92,7 +93,7 @@ def _loss(yields: Yields, split: str) -> float:
 
 def _stops(problem: Problem, today: float, highest: BestReachable, points: int | None) -> list[_Stop]:
     """Return the stops in rising yield, each loss once; nothing above the highest reachable."""
-    stops = [_Stop("today", today), _Stop("highest reachable", highest.loss)]
+    stops = [_Stop("today", today), _Stop(END, highest.loss)]
     budget = problem.budgets.get(problem.split)
     if budget is not None:
         stops.append(_Stop("target", -math.expm1(-budget)))
@@ -133,7 +134,8 @@ def _priced(problem: Problem, stops: list[_Stop], best: Solved, optimum: Solved)
                 loss=-math.expm1(-load),
                 total=total,
                 extra=total - priced[-1].total if priced else None,
-                price_of_defect_budget=price_of_budget(solved, asked),
+                # At the end nothing can be traded any more: every figure above the last slope would be a price.
+                price_of_defect_budget=None if solved is best else price_of_budget(solved, asked),
                 changes=_changes(problem, before, solved),
                 gap=solved.gap,
             )
@@ -149,7 +151,7 @@ def _answer(
     assert optimum.outcome is not None
     if within(optimum.outcome.loads[problem.split], stop.budget):
         return optimum
-    if stop.label == "highest reachable":
+    if stop.label == END:
         return best
     starts = [rows_in(problem, solved) for solved in (before, best) if solved is not None]
     return solve(asked, starts)

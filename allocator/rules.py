@@ -42,7 +42,7 @@ def simpler_rules(problem: Problem, plan: Outcome) -> tuple[tuple[RuleOutcome, .
     weight, fixed = _load_weights(problem, gates)
     free = budget - fixed
     if free <= 0.0:
-        return (), "false rejects alone use up the budget, so no rule can split the rest"
+        return (), "the false rejects of today's gates alone use up the budget, so no rule can split the rest"
     today = weight * np.array([-s.opportunities * float(log_good(s.log_p)) for s in problem.options.today])
     outcomes = []
     for name, source, split in RULES:

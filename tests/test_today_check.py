@@ -161,6 +161,11 @@ CAUSES: list[tuple[str, Drawn, Drawn]] = [
         plain_line(0.01, 0.01, inspection={"finds": 0.9, "earlier": 0.5}),
         looked_at(inspection={"finds": 0.9, "earlier": 0.5}),
     ),
+    (
+        "false_rejects",
+        looked_at(inspection={"finds": 0.9, "rejects_good": 0.0021}) | {"target": {"final_yield": 0.99}},
+        looked_at() | {"target": {"final_yield": 0.99}},
+    ),
     ("escapes_cost_nothing", looked_at() | {"target": {}}, looked_at() | {"target": {"shipped_yield": 0.9}}),
     (
         "long_term_with_shift",

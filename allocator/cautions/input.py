@@ -15,11 +15,14 @@ from allocator.results import Caution
 from allocator.scenario.level import LONG_TERM, given
 from allocator.scenario.levels import column
 from allocator.scenario.model import Capability, Inspection, Step, Table
+from allocator.standing import flow_today
 from allocator.states import sigmas_meant
 
 Flags = NDArray[np.bool_]
 SMALL_SAMPLE = 50
 FEW_BAD = 5
+LARGE_SHARE = 0.25
+"""False rejects that use this share of the budget are worth saying."""
 Z_95 = 1.6448536269514722
 """Normal 95 % point, for one-sided lower limits."""
 
@@ -284,6 +287,21 @@ def _three_sigma(problem: Problem) -> Iterator[Caution]:
         )  # fmt: skip
 
 
+def _false_rejects(problem: Problem) -> Iterator[Caution]:
+    """Good items thrown away count in the final yield: where they eat much of its budget, no capability buys it back."""
+    budget = problem.budgets.get("final_yield")
+    if budget is None:
+        return
+    used = problem.line.per_finished * flow_today(problem).gates.scrap_of_good
+    share = float(used.sum()) / budget
+    if share >= LARGE_SHARE:
+        yield from _about(
+            "false_rejects", _named(problem, used >= LARGE_SHARE * used.max()),
+            f"good items rejected by today's gates alone use {100.0 * share:.0f} % of the defect budget of the final yield",
+            "re-check what is rejected (rejects_lost), or offer a gate that rejects fewer good items",
+        )  # fmt: skip
+
+
 def _loose_ends(problem: Problem) -> Iterator[Caution]:
     nothing = _steps(problem, lambda s, _: not s.fixed and not s.alternative and s.improve is None)
     if len(nothing) == len(problem.scenario.step):
@@ -307,5 +325,6 @@ def _costs_nothing(name: str, step: Step) -> bool:
 
 LOOKS: tuple[Callable[[Problem], Iterator[Caution]], ...] = (
     _safety, _inspection, _long_term, _shifts, _small_sample, _beyond_the_data, _counts, _near_tail, _one_opportunity,
-    _three_sigma, _copies, _laws, _judged, _widening, _rework, _loose_ends,
+    _three_sigma, _copies, _laws, _judged, _widening, _rework, _false_rejects,
+    _loose_ends,
 )  # fmt: skip
