@@ -2,12 +2,7 @@
 
 from __future__ import annotations
 
-import csv
-import math
-from collections.abc import Iterable, Mapping
-from io import StringIO
-from operator import attrgetter
-
+from allocator.report.plain import record_table
 from allocator.results import Check, Nines, Plan, Today
 
 # Header name -> where the figure stands in the record; {money} becomes the scenario's currency.
@@ -97,38 +92,17 @@ _CHECK = {
 }
 
 
-def _cell(value: object) -> str:
-    if value is None or (isinstance(value, float) and not math.isfinite(value)):
-        return ""
-    if isinstance(value, bool):
-        return "true" if value else "false"
-    if isinstance(value, float):
-        return repr(float(value))
-    return "; ".join(value) if isinstance(value, tuple) else str(value)
-
-
-def _table(columns: Mapping[str, str], currency: str, records: Iterable[object]) -> str:
-    """Unknown figures are empty cells; several names in one cell are parted by '; '."""
-    sheet = StringIO()
-    writer = csv.writer(sheet, lineterminator="\n")
-    money = "_".join(currency.split()) or "money"
-    writer.writerow(name.format(money=money) for name in columns)
-    getters = [attrgetter(path) for path in columns.values()]
-    writer.writerows([_cell(get(record)) for get in getters] for record in records)
-    return sheet.getvalue()
-
-
 def plan_csv(plan: Plan) -> str:
-    return _table(_PLAN, plan.currency, plan.steps)
+    return record_table(_PLAN, plan.currency, plan.steps)
 
 
 def nines_csv(nines: Nines) -> str:
-    return _table(_NINES, nines.currency, nines.points)
+    return record_table(_NINES, nines.currency, nines.points)
 
 
 def today_csv(today: Today) -> str:
-    return _table(_TODAY, today.currency, today.steps)
+    return record_table(_TODAY, today.currency, today.steps)
 
 
 def check_csv(check: Check) -> str:
-    return _table(_CHECK, check.currency, check.steps)
+    return record_table(_CHECK, check.currency, check.steps)

@@ -2,74 +2,27 @@
 
 from __future__ import annotations
 
-import json
-import math
-from collections.abc import Sequence
 from typing import Any
 
-from allocator.report.blocks import MONEY_KINDS
-from allocator.report.words import YIELDS, nines_of
+from allocator.report.plain import best_json as _best
+from allocator.report.plain import cautions_json as _cautions
+from allocator.report.plain import cost_json as _cost
+from allocator.report.plain import pick as _pick
+from allocator.report.plain import today_line_json, yields_json
+from allocator.report.words import nines_of
 from allocator.results import (
-    BestReachable,
-    Caution,
     Check,
-    Money,
     Nines,
     NinesPoint,
     Plan,
     StepTarget,
     StepToday,
     Today,
-    TodayLine,
     Understood,
-    Yields,
 )
 
 LEVEL_KEYS = ("sigma_level", "shift", "k", "cp", "cpk", "cpk_after_shift", "dpmo", "ppm")
 FULL_LEVEL_KEYS = (*LEVEL_KEYS[:3], "sides", *LEVEL_KEYS[3:], "dpu")
-
-
-def to_json(content: dict[str, Any]) -> str:
-    return json.dumps(_finite(content), indent=2, allow_nan=False) + "\n"
-
-
-def _finite(value: Any) -> Any:
-    """The same content with None for NaN and the infinities, which JSON does not know."""
-    if isinstance(value, dict):
-        return {key: _finite(item) for key, item in value.items()}
-    if isinstance(value, list | tuple):
-        return [_finite(item) for item in value]
-    return None if isinstance(value, float) and not math.isfinite(value) else value
-
-
-def _pick(record: object, keys: Sequence[str]) -> dict[str, Any]:
-    return {key: getattr(record, key) for key in keys}
-
-
-def _yields(yields: Yields | None) -> dict[str, Any]:
-    """The three yields and, apart, their losses (1 - yield loses its digits where the yield is very good)."""
-    if yields is None:
-        return {**dict.fromkeys(YIELDS), "loss": dict.fromkeys(YIELDS)}
-    losses = (yields.rolled_loss, yields.final_loss, yields.shipped_loss)
-    return {**_pick(yields, YIELDS), "loss": dict(zip(YIELDS, losses, strict=True))}
-
-
-def _cost(money: Money | None) -> dict[str, Any] | None:
-    return None if money is None else _pick(money, ("total", *MONEY_KINDS))
-
-
-def _today_line(line: TodayLine) -> dict[str, Any]:
-    cost = {"annual_cost": _cost(line.money), "annual_cost_reason": line.money_reason}
-    lots = [{"lot": size, "bad": bad} for size, bad in line.bad_per_lot]
-    return {**_yields(line.yields), **cost, "dpu": line.dpu, "bad_per_lot": lots}
-
-
-def _best(best: BestReachable | None) -> dict[str, Any] | None:
-    return None if best is None else {"of": best.of, "yield": best.yield_, "loss": best.loss, "total": best.total}
-
-
-def _cautions(cautions: Sequence[Caution]) -> list[dict[str, Any]]:
-    return [_pick(caution, ("code", "steps", "reason", "fix")) for caution in cautions]
 
 
 def plan_json(plan: Plan) -> dict[str, Any]:
@@ -79,10 +32,10 @@ def plan_json(plan: Plan) -> dict[str, Any]:
         **_pick(plan, ("title", "currency", "question", "reached")),
         "split_yield": plan.split,
         "targets": plan.targets,
-        **_yields(plan.yields),
+        **yields_json(plan.yields),
         "annual_cost": _cost(plan.money),
         **_pick(plan, ("cost_per_unit", "dpu")),
-        "today": _today_line(plan.today),
+        "today": today_line_json(plan.today),
         "capital": plan.capital,
         "purchases": [_pick(bought, ("name", "price", "per_year_cost")) for bought in plan.purchases],
         **_proof(plan),
@@ -145,7 +98,7 @@ def _point(point: NinesPoint) -> dict[str, Any]:
 def today_json(today: Today) -> dict[str, Any]:
     return {
         **_pick(today, ("title", "currency", "shipped_per_year", "targets")),
-        **_today_line(today.line),
+        **today_line_json(today.line),
         "steps": [_step_today(step) for step in today.steps],
         "assumed": today.assumed,
         "cautions": _cautions(today.cautions),

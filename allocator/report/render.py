@@ -8,9 +8,10 @@ from typing import Any, Literal
 
 from allocator.report.check_text import check_text
 from allocator.report.csv_out import check_csv, nines_csv, plan_csv, today_csv
-from allocator.report.json_out import check_json, nines_json, plan_json, to_json, today_json
+from allocator.report.json_out import check_json, nines_json, plan_json, today_json
 from allocator.report.nines_text import nines_text
 from allocator.report.paper import LOG_WIDTH
+from allocator.report.plain import to_json
 from allocator.report.plan_text import plan_text
 from allocator.report.today_text import today_text
 from allocator.results import Check, Nines, Plan, Today
