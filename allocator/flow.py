@@ -10,12 +10,14 @@ from __future__ import annotations
 
 from collections.abc import Iterable
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
 
 from allocator.results import Money, Yields
 from allocator.scenario.model import Inspection, Rework, Scenario
+from allocator.tree import Tree
 
 Array = NDArray[np.float64]
 OVERFLOW = 700.0
@@ -52,6 +54,10 @@ class Line:
     @property
     def n_steps(self) -> int:
         return len(self.feeds)
+
+    @cached_property
+    def tree(self) -> Tree:
+        return Tree(self.feeds)
 
 
 @dataclass(frozen=True)
@@ -181,34 +187,22 @@ class Flow:
 
 def run(line: Line, intensity: Array, gates: Gates) -> Flow:
     """Return the exact flow for defect intensities `intensity` [per item], shape (n_steps,), and one gate per step."""
-    n = line.n_steps
-    own, finds, earlier = intensity.tolist(), gates.finds.tolist(), gates.earlier.tolist()
-    feeds, per_unit = line.feeds.tolist(), line.per_unit.tolist()
-    inherited, hidden = [0.0] * n, [0.0] * n
-    for i in range(n):
-        hidden[i] = (1.0 - finds[i]) * own[i] + (1.0 - earlier[i]) * inherited[i]
-        if feeds[i] >= 0:
-            inherited[feeds[i]] += per_unit[i] * hidden[i]
-    u = np.array(inherited)
-    found = gates.finds * intensity + gates.earlier * u
+    missed, kept = (1.0 - gates.finds) * intensity, 1.0 - gates.earlier
+    inherited = line.tree.gathered(line.tree.inflow(line.per_unit * missed), line.per_unit * kept)
+    found = gates.finds * intensity + gates.earlier * inherited
     scrap = (1.0 - gates.reworked) * found + gates.scrap_of_good
-    return Flow(intensity, u, found, np.array(hidden), scrap, towards_end(line, scrap), gates)
+    hidden = missed + kept * inherited
+    return Flow(intensity, inherited, found, hidden, scrap, towards_end(line, scrap), gates)
 
 
 def towards_end(line: Line, values: Array) -> Array:
     """Return for every step the sum of `values` over the gates from it to the end, shape (n_steps,)."""
-    sums, feeds = values.tolist(), line.feeds.tolist()
-    for i in range(line.n_steps - 2, -1, -1):
-        sums[i] += sums[feeds[i]]
-    return np.array(sums)
+    return line.tree.spread(values, np.ones(line.n_steps))
 
 
 def from_start(line: Line, values: Array) -> Array:
     """Return for every step the sum of `values` over itself and all the steps that lead to it, shape (n_steps,)."""
-    sums, feeds = values.tolist(), line.feeds.tolist()
-    for i in range(line.n_steps - 1):
-        sums[feeds[i]] += sums[i]
-    return np.array(sums)
+    return line.tree.gathered(values, np.ones(line.n_steps))
 
 
 def gradient(line: Line, gates: Gates, per_found: Array, per_escape: float) -> Array:
@@ -216,18 +210,11 @@ def gradient(line: Line, gates: Gates, per_found: Array, per_escape: float) -> A
 
     Every budget and the linearised money are of this form, so this is the price that each step's defects carry.
     """
-    n = line.n_steps
-    finds, earlier = gates.finds.tolist(), gates.earlier.tolist()
-    feeds, per_unit, weight = line.feeds.tolist(), line.per_unit.tolist(), per_found.tolist()
-    per_hidden, slope = [0.0] * n, [0.0] * n
-    per_hidden[-1] = per_escape
-    per_inherited = [0.0] * n
-    for i in range(n - 1, -1, -1):
-        if feeds[i] >= 0:
-            per_hidden[i] = per_unit[i] * per_inherited[feeds[i]]
-        slope[i] = finds[i] * weight[i] + (1.0 - finds[i]) * per_hidden[i]
-        per_inherited[i] = earlier[i] * weight[i] + (1.0 - earlier[i]) * per_hidden[i]
-    return np.array(slope)
+    fed = line.feeds[:-1]
+    found_next, missed_next = gates.earlier[fed] * per_found[fed], 1.0 - gates.earlier[fed]
+    at_once, passed_on = line.per_unit[:-1] * found_next, line.per_unit[:-1] * missed_next
+    per_hidden = line.tree.spread(np.append(at_once, per_escape), np.append(passed_on, 0.0))
+    return gates.finds * per_found + (1.0 - gates.finds) * per_hidden
 
 
 def loads(line: Line, flow: Flow) -> dict[str, float]:

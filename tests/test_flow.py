@@ -16,6 +16,7 @@ from allocator.flow import (
     Line,
     build_line,
     first_pass,
+    from_start,
     gate_values,
     gradient,
     loads,
@@ -25,6 +26,7 @@ from allocator.flow import (
     scrap_lost_at,
 )
 from allocator.scenario.read import scenario_from_dict
+from allocator.tree import SHORT
 from tests.reference.recount import recount
 
 EXACT = 1e-12
@@ -154,3 +156,60 @@ def test_a_hidden_defect_is_found_later_or_escapes() -> None:
     assert flow.escapes == pytest.approx(0.05 + 0.05)
     assert flow.exponent == pytest.approx([0.1 + 0.6 * 0.1, 0.6 * 0.1])
     assert loads(line, flow)["final_yield"] == pytest.approx(0.1 + 0.06 + 0.1)
+
+
+def by_steps(line: Line, intensity: np.ndarray, gates: Gates, weight: np.ndarray, per_escape: float) -> list[Any]:
+    """Inherited, hidden, exponents, sums from the start and the gradient, one step after another."""
+    n, feeds = line.n_steps, line.feeds.tolist()
+    inherited, hidden, exponent, gathered = np.zeros(n), np.zeros(n), np.zeros(n), weight.copy()
+    for i in range(n):
+        hidden[i] = (1.0 - gates.finds[i]) * intensity[i] + (1.0 - gates.earlier[i]) * inherited[i]
+        if feeds[i] >= 0:
+            inherited[feeds[i]] += line.per_unit[i] * hidden[i]
+            gathered[feeds[i]] += gathered[i]
+    found = gates.finds * intensity + gates.earlier * inherited
+    scrap = (1.0 - gates.reworked) * found - np.log1p(-gates.rejects * gates.lost)
+    slope, per_inherited = np.zeros(n), np.zeros(n)
+    for i in range(n - 1, -1, -1):
+        last = feeds[i] < 0
+        exponent[i] = scrap[i] + (0.0 if last else exponent[feeds[i]])
+        per_hidden = per_escape if last else line.per_unit[i] * per_inherited[feeds[i]]
+        slope[i] = gates.finds[i] * weight[i] + (1.0 - gates.finds[i]) * per_hidden
+        per_inherited[i] = gates.earlier[i] * weight[i] + (1.0 - gates.earlier[i]) * per_hidden
+    return [inherited, hidden, exponent, gathered, slope]
+
+
+TREES = {
+    "one step": lambda n, _: np.zeros(0, dtype=int),
+    "serial": lambda n, _: np.arange(1, n),
+    "all feed the last": lambda n, _: np.full(n - 1, n - 1),
+    "near by": lambda n, draw: np.minimum(np.arange(n - 1) + draw.integers(1, 5, n - 1), n - 1),
+    "anywhere": lambda n, draw: np.arange(n - 1) + 1 + (draw.random(n - 1) * np.arange(n - 1, 0, -1)).astype(int) % n,
+    "two long arms": lambda n, _: np.minimum(np.arange(n - 1) + 2, n - 1),
+    "comb": lambda n, _: np.where(np.arange(n - 1) % 2, np.arange(n - 1) + 2, np.arange(n - 1) + 1).clip(max=n - 1),
+}
+
+
+@pytest.mark.parametrize("size", [1, 2, 7, SHORT, SHORT + 1, 3_001])
+@pytest.mark.parametrize("shape", TREES)
+def test_long_trees_at_once_are_what_one_step_after_another_gives(shape: str, size: int) -> None:
+    """Figures over twelve decades, gates that find all, some and nothing; each figure to its own last digits."""
+    draw = np.random.default_rng(size)
+    n = 1 if shape == "one step" else size
+    feeds = np.append(TREES[shape](n, draw), -1).astype(np.int64)
+    assert np.all(feeds[:-1] > np.arange(n - 1))
+    per_unit = np.where(draw.random(n) < 0.02, 3.0, 1.0)
+    nothing = np.zeros(n)
+    line = Line(feeds, per_unit, np.ones(n), nothing, nothing, 1.0, 1.0)
+    finds, earlier = (draw.choice([0.0, 0.3, 0.999, 1.0], n) for _ in range(2))
+    gates = Gates(finds, 0.5 * earlier, 0.01 * draw.random(n), draw.random(n), draw.random(n), nothing, nothing)
+    intensity, weight = 10.0 ** draw.uniform(-15.0, -3.0, n), 10.0 ** draw.uniform(-6.0, 6.0, n)
+    flow = run(line, intensity, gates)
+    got = [flow.inherited, flow.hidden, flow.exponent, from_start(line, weight), gradient(line, gates, weight, 7.0)]
+    for name, mine, wanted in zip(
+        ("inherited", "hidden", "exponent", "from start", "gradient"),
+        got,
+        by_steps(line, intensity, gates, weight, 7.0),
+        strict=True,
+    ):
+        np.testing.assert_allclose(mine, wanted, rtol=1e-13, atol=0.0, err_msg=name)

@@ -1,0 +1,135 @@
+"""How do figures add up along the tree: from the steps that feed to the end, and back, in one sweep of many steps.
+
+Both directions are linear recurrences. The tree is cut into paths, so that from any step to the end only a few of them
+(at most log2 of the number of steps) are entered; paths that lie equally many cuts from the end are swept together, as
+one triangular system with two diagonals. Sums of figures that are 0 or more lose no digits that way, however small
+some of them are.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+Array = NDArray[np.float64]
+Indices = NDArray[np.int64]
+SHORT = 400
+"""Steps up to which a plain loop is as quick and needs no solver library."""
+
+
+@dataclass(frozen=True)
+class _Sweep:
+    """Paths equally far from the end: their steps in order, and for all but the first whether it goes on a path."""
+
+    steps: Indices
+    joined: Array
+    ends: Indices
+    """The steps that feed another path, or are the last of the line."""
+
+
+@dataclass(frozen=True)
+class Tree:
+    """An in-tree by `feeds`: the later step that each step feeds, −1 for the last; shape (n_steps,)."""
+
+    feeds: Indices
+    _sweeps: list[_Sweep] = field(default_factory=list, repr=False, compare=False)
+
+    def gathered(self, own: Array, passed: Array) -> Array:
+        """Return x with x_i = own_i + Σ passed_c·x_c over the steps c that feed i, shape (n_steps,)."""
+        if len(own) <= SHORT:
+            return self._gathered_one_by_one(own, passed)
+        found = own.astype(float)
+        for sweep in self.sweeps:
+            steps = sweep.steps
+            found[steps] = _forward(found[steps], sweep.joined * passed[steps[:-1]])
+            self.add_to_fed(found, sweep.ends, passed[sweep.ends] * found[sweep.ends])
+        return found
+
+    def spread(self, own: Array, taken: Array) -> Array:
+        """Return x with x_i = own_i + taken_i·x_f for the step f that i feeds, shape (n_steps,)."""
+        if len(own) <= SHORT:
+            return self._spread_one_by_one(own, taken)
+        found = own.astype(float)
+        for sweep in reversed(self.sweeps):
+            fed = self.feeds[sweep.ends]
+            later = np.flatnonzero(fed >= 0)
+            found[sweep.ends[later]] += taken[sweep.ends[later]] * found[fed[later]]
+            steps = sweep.steps
+            found[steps] = _forward(found[steps[::-1]], (sweep.joined * taken[steps[:-1]])[::-1])[::-1]
+        return found
+
+    def inflow(self, passed: Array) -> Array:
+        """Return the sum of `passed` over the steps that feed each step, shape (n_steps,)."""
+        return np.asarray(np.bincount(self.feeds[:-1], passed[:-1], minlength=len(passed)))
+
+    def add_to_fed(self, values: Array, steps: Indices, amounts: Array) -> None:
+        """Add amounts of some steps to the values of the steps that they feed."""
+        fed = self.feeds[steps]
+        later = np.flatnonzero(fed >= 0)
+        np.add.at(values, fed[later], amounts[later])
+
+    @property
+    def sweeps(self) -> list[_Sweep]:
+        """The paths, farthest from the end first; cut once and kept."""
+        if not self._sweeps:
+            self._sweeps.extend(_cut(self.feeds))
+        return self._sweeps
+
+    def _gathered_one_by_one(self, own: Array, passed: Array) -> Array:
+        sums, share, feeds = own.tolist(), passed.tolist(), self.feeds.tolist()
+        for i in range(len(sums) - 1):
+            sums[feeds[i]] += share[i] * sums[i]
+        return np.array(sums)
+
+    def _spread_one_by_one(self, own: Array, taken: Array) -> Array:
+        sums, share, feeds = own.tolist(), taken.tolist(), self.feeds.tolist()
+        for i in range(len(sums) - 2, -1, -1):
+            sums[i] += share[i] * sums[feeds[i]]
+        return np.array(sums)
+
+
+def _forward(right: Array, factor: Array) -> Array:
+    """Return x with x_0 = right_0 and x_j = right_j + factor_(j−1)·x_(j−1)."""
+    from scipy.linalg.lapack import dtbtrs  # here, because short lines need no solver library
+
+    band = np.ones((2, len(right)))
+    band[1, :-1] = -factor
+    found, failed = dtbtrs(band, right, uplo="L", diag="U")
+    assert failed == 0, "a unit diagonal cannot be singular"
+    return np.asarray(found)
+
+
+def _cut(feeds: Indices) -> list[_Sweep]:
+    """Cut the tree into paths: each step goes on with the largest of the subtrees that feed it."""
+    steps = np.arange(len(feeds))
+    if np.array_equal(feeds[:-1], steps[1:]):
+        return [_Sweep(steps, np.ones(len(feeds) - 1), steps[-1:])]
+    cuts, end = _paths(feeds.tolist())
+    order = np.lexsort((steps, end, -cuts))
+    first = np.flatnonzero(np.diff(cuts[order], prepend=-1))
+    sweeps = []
+    for members in np.split(order, first[1:]):
+        goes_on = end[members[1:]] == end[members[:-1]]
+        sweeps.append(_Sweep(members, goes_on.astype(float), members[np.append(~goes_on, True)]))
+    return sweeps
+
+
+def _paths(feeds: list[int]) -> tuple[Indices, Indices]:
+    """Return for every step how many cuts lie between it and the end, and the last step of its path."""
+    n = len(feeds)
+    size, largest = [1] * n, [-1] * n
+    for i in range(n - 1):
+        fed = feeds[i]
+        size[fed] += size[i]
+        if largest[fed] < 0 or size[i] > size[largest[fed]]:
+            largest[fed] = i
+    cuts, end = [0] * n, list(range(n))
+    for i in range(n - 2, -1, -1):
+        fed = feeds[i]
+        on_path = largest[fed] == i
+        cuts[i] = cuts[fed] + (not on_path)
+        if on_path:
+            end[i] = end[fed]
+    return np.array(cuts, dtype=np.int64), np.array(end, dtype=np.int64)
