@@ -12,10 +12,11 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from allocator.check import check_scenario
+    from allocator.compare import compare_scenarios
     from allocator.errors import AllocatorError, InputError
     from allocator.nines import price_nines
     from allocator.plan import make_plan
-    from allocator.results import Check, Nines, Plan, Today
+    from allocator.results import Check, Comparison, Nines, Plan, Today
     from allocator.scenario.model import Scenario
     from allocator.scenario.read import read_scenario, scenario_from_dict
     from allocator.today import see_today
@@ -23,12 +24,14 @@ if TYPE_CHECKING:
 _HOMES = {
     "AllocatorError": "errors",
     "Check": "results",
+    "Comparison": "results",
     "InputError": "errors",
     "Nines": "results",
     "Plan": "results",
     "Scenario": "scenario.model",
     "Today": "results",
     "check_scenario": "check",
+    "compare_scenarios": "compare",
     "make_plan": "plan",
     "price_nines": "nines",
     "read_scenario": "scenario.read",
@@ -39,12 +42,14 @@ _HOMES = {
 __all__ = [
     "AllocatorError",
     "Check",
+    "Comparison",
     "InputError",
     "Nines",
     "Plan",
     "Scenario",
     "Today",
     "check_scenario",
+    "compare_scenarios",
     "make_plan",
     "price_nines",
     "read_scenario",

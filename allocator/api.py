@@ -3,9 +3,17 @@
 from __future__ import annotations
 
 from allocator.check import check_scenario
+from allocator.compare import compare_scenarios
 from allocator.nines import price_nines
 from allocator.plan import make_plan
 from allocator.scenario.read import read_scenario
 from allocator.today import see_today
 
-__all__ = ["check_scenario", "make_plan", "price_nines", "read_scenario", "see_today"]
+__all__ = [
+    "check_scenario",
+    "compare_scenarios",
+    "make_plan",
+    "price_nines",
+    "read_scenario",
+    "see_today",
+]

@@ -7,6 +7,8 @@ from dataclasses import dataclass
 from typing import Any, Literal
 
 from allocator.report.check_text import check_text
+from allocator.report.compare_data import compare_csv, compare_json
+from allocator.report.compare_text import compare_text
 from allocator.report.csv_out import check_csv, nines_csv, plan_csv, today_csv
 from allocator.report.json_out import check_json, nines_json, plan_json, today_json
 from allocator.report.nines_text import nines_text
@@ -14,7 +16,7 @@ from allocator.report.paper import LOG_WIDTH
 from allocator.report.plain import to_json
 from allocator.report.plan_text import plan_text
 from allocator.report.today_text import today_text
-from allocator.results import Check, Nines, Plan, Today
+from allocator.results import Check, Comparison, Nines, Plan, Today
 
 Form = Literal["text", "json", "csv"]
 
@@ -31,6 +33,7 @@ _RENDERERS: dict[type, _Renderers] = {
     Nines: _Renderers(nines_text, nines_json, nines_csv),
     Today: _Renderers(today_text, today_json, today_csv),
     Check: _Renderers(check_text, check_json, check_csv),
+    Comparison: _Renderers(compare_text, compare_json, compare_csv),
 }
 
 

@@ -1,5 +1,6 @@
 """What the commands answer with: plain frozen records, numbers only; they neither print nor plot."""
 
+from allocator.results.compare import Compared, Comparison, StepAcross, TakenAcross
 from allocator.results.line import Caution, Level, Money, TodayLine, Yields
 from allocator.results.nines import Nines, NinesPoint
 from allocator.results.plan import BestReachable, Binding, Bought, Plan, Proof, RuleOutcome, StepTarget
@@ -12,6 +13,8 @@ __all__ = [
     "Bought",
     "Caution",
     "Check",
+    "Compared",
+    "Comparison",
     "Level",
     "Money",
     "Nines",
@@ -19,8 +22,10 @@ __all__ = [
     "Plan",
     "Proof",
     "RuleOutcome",
+    "StepAcross",
     "StepTarget",
     "StepToday",
+    "TakenAcross",
     "Today",
     "TodayLine",
     "Understood",

@@ -1,0 +1,26 @@
+"""The commands of those who answer for the money: compare."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+from allocator.cli.app import OUT_OF_REACH, AsCsv, AsJson, app, form_of, load, refused, show
+
+Files = Annotated[list[Path], typer.Argument(metavar="FILE FILE...", help="Scenario files.", show_default=False)]
+
+
+@app.command()
+def compare(files: Files, as_json: AsJson = False, as_csv: AsCsv = False) -> None:
+    """Set the plans of several scenarios side by side, as in: allocator compare now.toml other_supplier.toml"""
+    form = form_of(as_json, as_csv)
+    if len(files) < 2:
+        raise refused("FILE", str(files[0]), "name two scenario files or more")
+    from allocator import api
+
+    answer = api.compare_scenarios([load(file) for file in files])
+    show(answer, form)
+    if not all(case.plan.reached for case in answer.cases):
+        raise typer.Exit(OUT_OF_REACH)
