@@ -10,6 +10,8 @@ from __future__ import annotations
 import importlib
 from typing import TYPE_CHECKING, Any
 
+from allocator.shown import Speaker, speaks_for_results
+
 if TYPE_CHECKING:
     from allocator.check import check_scenario
     from allocator.compare import compare_scenarios
@@ -64,3 +66,13 @@ def __getattr__(name: str) -> Any:
     if name not in _HOMES:
         raise AttributeError(f"module 'allocator' has no attribute '{name}'")
     return getattr(importlib.import_module(f"allocator.{_HOMES[name]}"), name)
+
+
+def _speaker() -> Speaker:
+    """Results are shown in the words of the reports, which only those who look at one should wait for."""
+    from allocator.report import glance
+
+    return glance
+
+
+speaks_for_results(_speaker)

@@ -33,7 +33,7 @@ def check_scenario(scenario: Scenario) -> Check:
         currency=scenario.currency,
         shipped_per_year=problem.line.shipped,
         file=scenario.file,
-        steps=tuple(
+        rows=tuple(
             Understood(
                 step=step.name,
                 supplier=step.supplier,

@@ -50,7 +50,7 @@ def compare_scenarios(scenarios: Sequence[Scenario]) -> Comparison:
         cases=cases,
         cheapest=_cheapest(cases),
         taken=_taken(scenarios, plans),
-        steps=_steps(plans),
+        rows=_steps(plans),
         unlike=tuple(_unlike(scenarios, plans)),
     )
 
@@ -112,7 +112,7 @@ def _offers(scenario: Scenario) -> list[Thing]:
 
 def _chosen(plan: Plan) -> set[Thing]:
     things: set[Thing] = {(None, bought.name) for bought in plan.purchases}
-    for step in plan.steps:
+    for step in plan.rows:
         things |= {(step.step, name) for name in step.alternatives}
         things |= {(step.step, IMPROVE)} if step.law is not None else set()
     return things
@@ -123,7 +123,7 @@ def _once(things: Iterable[Thing]) -> list[Thing]:
 
 
 def _steps(plans: Sequence[Plan]) -> tuple[StepAcross, ...]:
-    by_name = [{step.step: step for step in plan.steps} for plan in plans]
+    by_name = [{step.step: step for step in plan.rows} for plan in plans]
     names = dict.fromkeys(name for steps in by_name for name in steps)
     rows = [(name, tuple(steps.get(name) for steps in by_name)) for name in names]
     return tuple(StepAcross(name, targets, _differs(targets)) for name, targets in rows)

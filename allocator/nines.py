@@ -62,7 +62,7 @@ def price_nines(
     problem = pose(scenario, of, targets)
     today = _loss(line_today(problem).yields, problem.split)
     answer = Nines(
-        title=scenario.title, currency=scenario.currency, split=problem.split, today_nines=nines_of(today), points=(),
+        title=scenario.title, currency=scenario.currency, split=problem.split, today_nines=nines_of(today), rows=(),
         highest=None, optimum_yield=None, optimum_loss=None, optimum_total=None, assumed=what_is_assumed(problem),
         cautions=cautions_of_input(problem),
     )  # fmt: skip
@@ -78,7 +78,7 @@ def price_nines(
     return replace(
         answer, highest=highest, optimum_yield=math.exp(-load), optimum_loss=-math.expm1(-load),
         optimum_total=optimum.outcome.money.total,
-        points=_priced(problem, _stops(problem, today, highest, points), best, optimum),
+        rows=_priced(problem, _stops(problem, today, highest, points), best, optimum),
     )  # fmt: skip
 
 

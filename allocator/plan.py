@@ -214,7 +214,7 @@ def describe(solved: Solved, question: str, problem: Problem) -> Plan:
             for p, name in enumerate(options.purchase_names)
             if outcome.bought[p]
         ),
-        steps=step_targets(problem, ways, outcome),
+        rows=step_targets(problem, ways, outcome),
         today=line_today(problem),
         proof=_proof(solved),
         price_of_defect_budget=price_of_budget(solved, problem),
@@ -278,7 +278,7 @@ def _no_plan(problem: Problem, binding: tuple[Binding, ...]) -> Plan:
         question="cheapest", reached=False, split=problem.split,
         targets={name: math.exp(-budget) for name, budget in problem.budgets.items()},
         target_losses={name: -math.expm1(-budget) for name, budget in problem.budgets.items()},
-        yields=None, money=None, dpu=None, capital=None, purchases=(), steps=(), today=line_today(problem), proof=None,
+        yields=None, money=None, dpu=None, capital=None, purchases=(), rows=(), today=line_today(problem), proof=None,
         price_of_defect_budget=None, cost_of_next_nine=None, best_reachable=None, binding=binding, rules=(),
         rules_note="", assumed=(), cautions=(),
     )  # fmt: skip

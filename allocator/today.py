@@ -28,7 +28,7 @@ def see_today(scenario: Scenario) -> Today:
         currency=scenario.currency,
         shipped_per_year=problem.line.shipped,
         line=line_today(problem),
-        steps=_steps(problem),
+        rows=_steps(problem),
         targets={name: math.exp(-budget) for name, budget in problem.budgets.items()},
         target_losses={name: -math.expm1(-budget) for name, budget in problem.budgets.items()},
         assumed=what_is_assumed(problem),

@@ -64,7 +64,7 @@ def plan_of(seed: int) -> Plan:
 
 
 def choice_of(plan: Plan) -> dict:
-    return {s.step: {"alternatives": list(s.alternatives), "z": s.target.sigma_level} for s in plan.steps}
+    return {s.step: {"alternatives": list(s.alternatives), "z": s.target.sigma_level} for s in plan.rows}
 
 
 def same(value: float | None, want: float | None, scale: float = 0.0) -> bool:
@@ -144,7 +144,7 @@ def figures(plan: Plan, want: dict) -> list[tuple[str, float | None, float | Non
     rows.append(("dpu", plan.dpu, want["expected_defects"], 0.0))
     paid = {bought.name: bought.per_year_cost for bought in plan.purchases}
     rows += [(p["name"], paid.get(p["name"], math.nan), p["per_year_cost"], scale) for p in want["purchases"]]
-    for step, counted in zip(plan.steps, want["steps"], strict=True):
+    for step, counted in zip(plan.rows, want["steps"], strict=True):
         for key in ("shift", "k", "cp", "cpk", "cpk_after_shift", "dpmo", "ppm"):
             rows.append((f"{step.step} {key}", getattr(step.target, key), counted[key], 1e-6 * (key in ("k", "shift"))))
         for key in ("budget_share", "starts_per_year", "first_pass_yield"):
@@ -225,7 +225,7 @@ def test_price_of_defect_budget(seed: int) -> None:
         return
     chosen = [
         next(w for w in ways_of(scenario, i) if {a["name"] for a in w.alternatives} == set(step.alternatives))
-        for i, step in enumerate(plan.steps)
+        for i, step in enumerate(plan.rows)
     ]
     problem = combine(scenario, chosen)
     if plan.price_of_defect_budget is None:

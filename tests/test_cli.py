@@ -168,7 +168,7 @@ def test_a_target_out_of_reach_exits_with_1_and_still_answers(api: Api, plan: An
 
 
 def test_nines_without_any_choice_exit_with_1(api: Api) -> None:
-    api.nines = some_nines(points=(), highest=None, optimum_total=None)
+    api.nines = some_nines(rows=(), highest=None, optimum_total=None)
     assert run("nines", "line.toml").exit_code == 1
 
 

@@ -50,7 +50,7 @@ def test_two_volumes_on_either_side_of_the_break_even() -> None:
     per_unit = many / (BREAK_EVEN * 1.01) - few / (BREAK_EVEN * 0.99)
     assert answer.cases[1].per_unit_over_first == pytest.approx(per_unit, rel=1e-9)
     assert answer.cheapest == answer.cases[1].label
-    assert answer.steps[0].differs
+    assert answer.rows[0].differs
 
 
 def test_each_column_is_the_plan_of_its_own_file() -> None:
@@ -59,7 +59,7 @@ def test_each_column_is_the_plan_of_its_own_file() -> None:
     for case, scenario in zip(answer.cases, scenarios, strict=True):
         alone = make_plan(scenario)
         assert case.plan.money == alone.money
-        assert case.plan.steps == alone.steps
+        assert case.plan.rows == alone.rows
     assert [case.label for case in answer.cases] == ["latch", "latch_bought"]
     assert answer.unlike == ()
 
@@ -68,14 +68,14 @@ def test_steps_of_one_file_only_are_shown_as_missing() -> None:
     longer = press(1000)
     longer["step"] = [{"name": "wash", "scrap_cost": 1.0, "capability": {"defect_rate": 0.01}}, *longer["step"]]
     answer = compared(press(1000), longer)
-    assert [(step.step, step.differs) for step in answer.steps] == [("form", False), ("wash", True)]
-    assert answer.steps[1].targets[0] is None
+    assert [(step.step, step.differs) for step in answer.rows] == [("form", False), ("wash", True)]
+    assert answer.rows[1].targets[0] is None
     assert "wash" in render(answer)
 
 
 def test_alike_scenarios_do_not_differ() -> None:
     answer = compared(press(1000), press(1000))
-    assert not any(step.differs for step in answer.steps)
+    assert not any(step.differs for step in answer.rows)
     assert answer.cases[1].total_over_first == 0.0
     assert [case.label for case in answer.cases] == ["1000 a year", "1000 a year (2)"]
     assert "No step differs" in render(answer)

@@ -51,39 +51,39 @@ def budget(point: NinesPoint) -> float:
 def test_points_at_today_every_whole_nine_the_target_and_the_end() -> None:
     """Today 1 − 0.98·0.97·0.99 (1.23 nines); the end is 1 − 0.9999³ (3.52 nines)."""
     answer = nines(shop(final_yield=0.992))
-    assert [point.label for point in answer.points] == [
+    assert [point.label for point in answer.rows] == [
         "today", "whole nine", "target", "whole nine", "highest reachable",
     ]  # fmt: skip
-    assert [point.nines for point in answer.points] == pytest.approx(
+    assert [point.nines for point in answer.rows] == pytest.approx(
         [nines_of(1 - 0.98 * 0.97 * 0.99), 2.0, nines_of(0.008), 3.0, nines_of(1 - 0.9999**3)], rel=1e-9
     )
-    assert answer.today_nines == answer.points[0].nines
+    assert answer.today_nines == answer.rows[0].nines
 
 
 def test_a_grid_is_added_between_today_and_the_end() -> None:
-    grid = [point.nines for point in priced().points if point.label == "grid"]
+    grid = [point.nines for point in priced().rows if point.label == "grid"]
     assert len(grid) == 80
     gaps = [after - before for before, after in pairwise(grid)]
     assert gaps == pytest.approx([gaps[0]] * 79, rel=1e-9)
 
 
 def test_a_target_at_a_whole_nine_is_one_point() -> None:
-    points = nines(shop(final_yield={"nines": 3})).points
+    points = nines(shop(final_yield={"nines": 3})).rows
     assert [point.nines for point in points].count(points[2].nines) == 1
     assert len(points) == 4
 
 
 def test_a_target_out_of_reach_is_no_point() -> None:
     answer = nines(shop(final_yield={"nines": 6}))
-    assert "target" not in {point.label for point in answer.points}
+    assert "target" not in {point.label for point in answer.rows}
 
 
 def test_nothing_lies_beyond_the_highest_reachable() -> None:
     answer = priced()
     assert answer.highest is not None
     assert answer.highest.loss == pytest.approx(1 - 0.9999**3, rel=1e-9)
-    assert all(point.target_loss >= answer.highest.loss * (1 - KEPT) for point in answer.points)
-    assert answer.points[-1].label == "highest reachable"
+    assert all(point.target_loss >= answer.highest.loss * (1 - KEPT) for point in answer.rows)
+    assert answer.rows[-1].label == "highest reachable"
     beyond = make_plan(scenario_from_dict(shop()), targets={"final_yield": answer.highest.loss * (1 - 1e-6)})
     assert not beyond.reached
     assert {held.step for held in answer.highest.binding} == {"s0", "s1", "s2"}
@@ -93,7 +93,7 @@ def test_nothing_lies_beyond_the_highest_reachable() -> None:
 
 
 def test_totals_rise_and_extras_are_their_differences() -> None:
-    points = priced().points
+    points = priced().rows
     assert points[0].extra is None
     for before, after in pairwise(points):
         assert after.total >= before.total * (1 - SAME)
@@ -102,7 +102,7 @@ def test_totals_rise_and_extras_are_their_differences() -> None:
 
 
 def test_a_point_is_the_plan_for_that_yield() -> None:
-    for point in nines(shop(final_yield=0.992)).points:
+    for point in nines(shop(final_yield=0.992)).rows:
         plan = make_plan(scenario_from_dict(shop()), targets={"final_yield": point.target_loss * (1 + 1e-12)})
         assert plan.reached
         assert plan.money is not None
@@ -113,7 +113,7 @@ def test_a_point_is_the_plan_for_that_yield() -> None:
 
 def test_nothing_binds_at_the_yield_of_the_optimum() -> None:
     """Here the optimum is to leave the line as it is, so today's yield comes for nothing."""
-    first = nines(shop()).points[0]
+    first = nines(shop()).rows[0]
     assert first.label == "today"
     assert first.price_of_defect_budget == 0.0
 
@@ -121,7 +121,7 @@ def test_nothing_binds_at_the_yield_of_the_optimum() -> None:
 def test_totals_follow_the_prices_where_the_same_is_bought() -> None:
     """Between close points the total falls by the price per unit of budget: trapezium in ln D of price·D."""
     compared = 0
-    for before, after in pairwise(priced().points):
+    for before, after in pairwise(priced().rows):
         prices = (before.price_of_defect_budget, after.price_of_defect_budget)
         if after.changes or not all(prices) or {before.label, after.label} & {"today", "highest reachable"}:
             continue
@@ -137,7 +137,7 @@ def test_totals_follow_the_prices_where_the_same_is_bought() -> None:
 
 def test_prices_bracket_the_fall_of_the_total_where_the_same_is_bought() -> None:
     """The total is convex in the budget as long as nothing else is bought."""
-    for before, after in pairwise(priced().points):
+    for before, after in pairwise(priced().rows):
         cheap, dear = before.price_of_defect_budget, after.price_of_defect_budget
         if after.changes or cheap is None or dear is None or after.label == "highest reachable":
             continue
@@ -147,7 +147,7 @@ def test_prices_bracket_the_fall_of_the_total_where_the_same_is_bought() -> None
 
 def test_what_is_bought_on_the_way_is_said_once() -> None:
     """The machine saves two thirds of what its law would cost for the first decade, so it comes with the first nine."""
-    changes = [change for point in priced().points for change in point.changes]
+    changes = [change for point in priced().rows for change in point.changes]
     assert changes == ["s2: take machine"]
 
 
@@ -157,7 +157,7 @@ def test_the_economic_optimum_is_below_all_points() -> None:
     assert plan.money is not None
     assert answer.optimum_total == pytest.approx(plan.money.total, rel=SAME)
     assert answer.optimum_total is not None
-    assert all(answer.optimum_total <= point.total * (1 + SAME) for point in answer.points)
+    assert all(answer.optimum_total <= point.total * (1 + SAME) for point in answer.rows)
 
 
 @quick(6)
@@ -166,12 +166,12 @@ def test_on_random_lines_totals_rise_from_the_optimum_to_the_end(scenario: Drawn
     answer = nines(scenario)
     assert answer.highest is not None
     assert answer.optimum_total is not None
-    unit = max(abs(point.total) for point in answer.points) + 1.0
-    assert all(after.total >= before.total - SAME * unit for before, after in pairwise(answer.points))
-    assert all(answer.optimum_total <= point.total + SAME * unit for point in answer.points)
-    assert all(point.loss <= point.target_loss * (1 + KEPT) + 1e-15 for point in answer.points)
-    assert all(point.target_loss >= answer.highest.loss * (1 - KEPT) for point in answer.points)
-    assert answer.points[-1].total == pytest.approx(answer.highest.total, abs=SAME * unit)
+    unit = max(abs(point.total) for point in answer.rows) + 1.0
+    assert all(after.total >= before.total - SAME * unit for before, after in pairwise(answer.rows))
+    assert all(answer.optimum_total <= point.total + SAME * unit for point in answer.rows)
+    assert all(point.loss <= point.target_loss * (1 + KEPT) + 1e-15 for point in answer.rows)
+    assert all(point.target_loss >= answer.highest.loss * (1 - KEPT) for point in answer.rows)
+    assert answer.rows[-1].total == pytest.approx(answer.highest.total, abs=SAME * unit)
 
 
 # ---------------------------------------------------------------- other yields, other limits
@@ -187,8 +187,8 @@ def test_the_nines_of_another_yield_keep_the_targets_of_the_others(of: str) -> N
     assert held.highest is not None
     wanted = make_plan(scenario_from_dict(scenario))
     assert wanted.money is not None
-    assert all(point.total >= wanted.money.total * (1 - SAME) for point in held.points)
-    assert held.points[0].total > free.points[0].total
+    assert all(point.total >= wanted.money.total * (1 - SAME) for point in held.rows)
+    assert held.rows[0].total > free.rows[0].total
 
 
 def test_a_capital_limit_ends_the_road_earlier() -> None:
@@ -202,7 +202,7 @@ def test_a_capital_limit_ends_the_road_earlier() -> None:
 
 def test_a_line_with_nothing_to_choose_has_one_point() -> None:
     answer = nines(plain_line(0.02, 0.01))
-    assert len(answer.points) == 1
+    assert len(answer.rows) == 1
     assert answer.highest is not None
     assert answer.highest.loss == pytest.approx(1 - 0.98 * 0.99)
-    assert answer.optimum_total == answer.points[0].total
+    assert answer.optimum_total == answer.rows[0].total

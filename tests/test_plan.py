@@ -157,8 +157,8 @@ def test_a_step_at_the_end_of_its_law_is_named_with_its_cap() -> None:
     assert not plan.reached
     assert [held.step for held in plan.binding] == ["s0"]
     assert "up_to" in plan.binding[0].reason
-    assert plan.steps[0].at_cap
-    assert plan.steps[0].target.dpmo == pytest.approx(3_000, rel=1e-9)
+    assert plan.rows[0].at_cap
+    assert plan.rows[0].target.dpmo == pytest.approx(3_000, rel=1e-9)
 
 
 @pytest.mark.parametrize("beside", [{}, {"more": plain_line(0.01, 0.01)["step"][1]}], ids=["alone", "beside another"])
@@ -166,7 +166,7 @@ def test_a_floor_above_every_cap_leaves_no_plan(beside: Drawn) -> None:
     step = {"name": "bore", "scrap_cost": 1.0, "capability": {"cp": 1.2}, "at_least": {"cpk": 1.67}, "fixed": True}
     plan = plan_of(with_target(plain_line(0.01) | {"step": [step, *beside.values()]}, final_yield=0.5))
     assert not plan.reached
-    assert (plan.yields, plan.money, plan.proof, plan.steps) == (None, None, None, ())
+    assert (plan.yields, plan.money, plan.proof, plan.rows) == (None, None, None, ())
     assert [held.step for held in plan.binding] == ["bore"]
     assert "Cpk at least 1.67" in plan.binding[0].reason
 
@@ -240,17 +240,17 @@ def test_a_safety_floor_is_kept_whatever_money_says(question: dict[str, float]) 
     scenario = plain_line(0.01, 0.01)
     scenario["step"][0] |= {"capability": {"cp": 1.2}, "improve": law}
     free = plan_of(scenario)
-    assert free.steps[0].target.cpk == pytest.approx(1.2, rel=1e-6)
+    assert free.rows[0].target.cpk == pytest.approx(1.2, rel=1e-6)
     scenario["step"][0] |= {"at_least": {"cpk": 1.5}, "safety": True}
     plan = plan_of(scenario, **question)
     assert plan.reached
-    assert plan.steps[0].safety
-    assert plan.steps[0].target.cpk >= 1.5 * (1 - KEPT)
-    assert plan.steps[0].floor_binds == (not question)
+    assert plan.rows[0].safety
+    assert plan.rows[0].target.cpk >= 1.5 * (1 - KEPT)
+    assert plan.rows[0].floor_binds == (not question)
     assert "safety" in {caution.code for caution in plan.cautions}
     # a power law of exponent 1: 40,000 over ten years for each doubling of the sigma level
     if not question:
-        assert plan.steps[0].improvement == pytest.approx(4_000.0 * (1.5 / 1.2 - 1), rel=1e-6)
+        assert plan.rows[0].improvement == pytest.approx(4_000.0 * (1.5 / 1.2 - 1), rel=1e-6)
 
 
 # ---------------------------------------------------------------- figures of a plan
@@ -264,12 +264,12 @@ def test_shares_and_sums_of_a_plan(scenario: Drawn, split: str) -> None:
     assert money is not None
     assert plan.proof is not None
     assert plan.proof.lower_bound is not None
-    assert sum(step.budget_share for step in plan.steps) == pytest.approx(1.0, rel=1e-9)
-    assert sum(step.scrap for step in plan.steps) == pytest.approx(money.scrap, rel=1e-9, abs=1e-9)
-    assert sum(step.rework for step in plan.steps) == pytest.approx(money.rework, rel=1e-9, abs=1e-9)
-    assert sum(step.improvement for step in plan.steps) == pytest.approx(money.improvement, rel=1e-9, abs=1e-9)
-    assert sum(step.capital for step in plan.steps) == pytest.approx(plan.capital, rel=1e-9, abs=1e-9)
-    assert plan.dpu == pytest.approx(sum(step.target.dpu for step in plan.steps))
+    assert sum(step.budget_share for step in plan.rows) == pytest.approx(1.0, rel=1e-9)
+    assert sum(step.scrap for step in plan.rows) == pytest.approx(money.scrap, rel=1e-9, abs=1e-9)
+    assert sum(step.rework for step in plan.rows) == pytest.approx(money.rework, rel=1e-9, abs=1e-9)
+    assert sum(step.improvement for step in plan.rows) == pytest.approx(money.improvement, rel=1e-9, abs=1e-9)
+    assert sum(step.capital for step in plan.rows) == pytest.approx(plan.capital, rel=1e-9, abs=1e-9)
+    assert plan.dpu == pytest.approx(sum(step.target.dpu for step in plan.rows))
     assert plan.proof.lower_bound <= money.total
     assert plan.cost_per_unit == money.total / 10_000
 
@@ -279,9 +279,9 @@ def test_a_step_at_its_cap_says_so_and_one_below_does_not() -> None:
     scenario = plain_line(0.01, 0.01)
     scenario["step"][0]["improve"], scenario["step"][1]["improve"] = cheap, dear
     plan = plan_of(with_target(scenario, final_yield=0.995))
-    assert [step.at_cap for step in plan.steps] == [True, False]
-    assert "up_to" in (plan.steps[0].cap or "")
-    assert plan.steps[1].cap is None
+    assert [step.at_cap for step in plan.rows] == [True, False]
+    assert "up_to" in (plan.rows[0].cap or "")
+    assert plan.rows[1].cap is None
     caution = next(c for c in plan.cautions if c.code == "at_cap")
     assert caution.steps == ("s0",)
 
@@ -294,11 +294,11 @@ def rows_chosen(problem: Problem, plan: Plan) -> np.ndarray:
     ways: Ways = problem.options.ways
 
     def fits(w: int, i: int) -> bool:
-        z, step = plan.steps[i].target.sigma_level, plan.steps[i]
+        z, step = plan.rows[i].target.sigma_level, plan.rows[i]
         inside = ways.z_low[w] * (1 - 1e-9) <= z <= ways.z_high[w] * (1 + 1e-9)
         return bool(ways.step[w] == i and ways.text[w].alternatives == step.alternatives and inside)
 
-    return np.array([next(w for w in range(len(ways)) if fits(w, i)) for i in range(len(plan.steps))])
+    return np.array([next(w for w in range(len(ways)) if fits(w, i)) for i in range(len(plan.rows))])
 
 
 def central_price(scenario: Drawn, plan: Plan, loss: float) -> tuple[float, float]:
@@ -332,7 +332,7 @@ def test_the_price_is_the_slope_of_the_total_on_random_lines(scenario: Drawn, ti
     loss = tighter * loss_of(plan_of(scenario))
     plan = plan_of(scenario, targets={"final_yield": loss})
     assume(plan.reached and plan.price_of_defect_budget)
-    assume(not any(step.at_cap for step in plan.steps))  # a step that reaches or leaves its cap bends the total
+    assume(not any(step.at_cap for step in plan.rows))  # a step that reaches or leaves its cap bends the total
     assert plan.price_of_defect_budget is not None
     wanted, noise = central_price(scenario, plan, loss)
     assert plan.price_of_defect_budget == pytest.approx(wanted, rel=PRICE, abs=noise)
@@ -347,7 +347,7 @@ def test_there_is_no_price_where_nothing_continuous_can_move() -> None:
     scenario = plain_line(0.02, 0.01)
     scenario["step"][0]["alternative"] = [{"name": "new", "capability": {"defect_rate": 0.001}, "price": 9e6}]
     plan = plan_of(scenario, targets={"final_yield": 0.0115})
-    assert plan.steps[0].alternatives == ("new",)
+    assert plan.rows[0].alternatives == ("new",)
     assert plan.price_of_defect_budget is None
 
 

@@ -65,7 +65,7 @@ def test_the_exact_product_splits_by_odds() -> None:
     """p_i/(1 − p_i) = k_i/λ; for a yield of 0.99: λ = 794.1208945, Σ −k ln p = 44.0220736."""
     answer = plan(decades(LOSS))
     assert answer.money is not None
-    p = [target.target.dpmo * 1e-6 for target in answer.steps]
+    p = [target.target.dpmo * 1e-6 for target in answer.rows]
     assert p == pytest.approx([0.00125767, 0.00251218, 0.00625688], rel=PRICE)
     assert answer.price_of_defect_budget == pytest.approx(794.1208945, rel=PRICE)
     assert answer.money.total - sum(WEIGHTS) * math.log(START) == pytest.approx(44.0220736, rel=PLAN)
@@ -77,14 +77,14 @@ def test_small_budgets_split_in_proportion() -> None:
     """Under Σp ≤ P the split is p_i = P·k_i/Σk at λ = Σk/P; for a loss as small as 1e-5 the product is that sum."""
     loss = 1e-5
     answer = plan(decades(loss))
-    p = [target.target.dpmo * 1e-6 for target in answer.steps]
+    p = [target.target.dpmo * 1e-6 for target in answer.rows]
     assert p == pytest.approx([loss * k / sum(WEIGHTS) for k in WEIGHTS], rel=PRICE + loss)
     assert answer.price_of_defect_budget == pytest.approx(sum(WEIGHTS) / loss, rel=PRICE + loss)
 
 
 def test_a_nine_has_a_constant_price() -> None:
     """Under Σp ≤ P a tenfold smaller P costs Σk·ln 10 = 18.42068, whatever P is; under the product, nearly so."""
-    points = price_nines(scenario_from_dict(decades(LOSS))).points
+    points = price_nines(scenario_from_dict(decades(LOSS))).rows
     whole = [point for point in points if abs(point.nines - round(point.nines)) < 1e-9]
     # From today's 0.6 nines to a defect probability of 1e-11 at every step, their caps.
     assert [round(point.nines) for point in whole] == list(range(1, 11))
@@ -107,7 +107,7 @@ def test_equal_costs_take_equal_shares() -> None:
         for i in range(4)
     ]
     answer = plan(line(*steps, target={"rolled_yield": 0.96}))
-    assert [target.budget_share for target in answer.steps] == pytest.approx([0.25] * 4, rel=PRICE)
+    assert [target.budget_share for target in answer.rows] == pytest.approx([0.25] * 4, rel=PRICE)
 
 
 def test_exponential_costs_are_stationary() -> None:
@@ -122,8 +122,8 @@ def test_exponential_costs_are_stationary() -> None:
     ]  # fmt: skip
     answer = plan(line(*steps, target={"rolled_yield": 0.999}))
     assert answer.price_of_defect_budget is not None
-    assert not any(target.at_cap for target in answer.steps), "stationary inside, not at an end"
-    for target, (b, m) in zip(answer.steps, figures, strict=True):
+    assert not any(target.at_cap for target in answer.rows), "stationary inside, not at an end"
+    for target, (b, m) in zip(answer.rows, figures, strict=True):
         x = target.target.sigma_level - 1.5
         hazard = float(mpmath.npdf(x) / mpmath.ncdf(x))
         assert b * m * math.exp(m * (x + 1.5)) == pytest.approx(answer.price_of_defect_budget * hazard, rel=PRICE)

@@ -91,7 +91,7 @@ def test_where_effort_costs_the_same_everywhere_minimum_effort_is_the_cheapest_p
     """
     answer = plan(priced(EFFORT_TODAY, EFFORT_GOAL, (1.0, 1.0, 1.0)))
     level = math.sqrt(EFFORT_GOAL / 0.90)
-    reached = [1.0 - target.target.dpmo * 1e-6 for target in answer.steps]
+    reached = [1.0 - target.target.dpmo * 1e-6 for target in answer.rows]
     assert reached == pytest.approx([0.90, level, level], abs=1e-6)  # the plan's promised gap
     by_rule = outcome(EFFORT_TODAY, EFFORT_GOAL, "raise the worst", (1.0, 1.0, 1.0))
     assert answer.money is not None

@@ -20,11 +20,11 @@ SAME = 1e-9
 """The same model by two ways of entering it."""
 
 QUANTITY: dict[str, Callable[[Today], float | None]] = {
-    "cp": lambda seen: seen.steps[0].level.cp,
-    "cpk": lambda seen: seen.steps[0].level.cpk,
-    "k": lambda seen: seen.steps[0].level.k,
-    "z": lambda seen: 3.0 * seen.steps[0].level.cpk,
-    "rejected": lambda seen: seen.steps[0].level.dpmo * 1e-6,
+    "cp": lambda seen: seen.rows[0].level.cp,
+    "cpk": lambda seen: seen.rows[0].level.cpk,
+    "k": lambda seen: seen.rows[0].level.k,
+    "z": lambda seen: 3.0 * seen.rows[0].level.cpk,
+    "rejected": lambda seen: seen.rows[0].level.dpmo * 1e-6,
     "good": lambda seen: seen.line.yields.rolled_yield,
 }
 STUDIES = rows("capability.csv")
@@ -44,20 +44,20 @@ def test_a_measured_study_gives_the_printed_figure(row: dict[str, Any]) -> None:
 
 @pytest.mark.parametrize("row", TABLE, ids=lambda row: f"cp={row['sigma_level'] / 3:.4g},sides={row['sides']:g}")
 def test_rejects_of_a_centred_process_are_those_of_the_table(row: dict[str, Any]) -> None:
-    level = today(line(step("part", {"cp": row["sigma_level"] / 3.0, "sides": int(row["sides"])}))).steps[0].level
+    level = today(line(step("part", {"cp": row["sigma_level"] / 3.0, "sides": int(row["sides"])}))).rows[0].level
     assert level.dpmo == pytest.approx(row["ppm"], rel=0, abs=row["last_digit"]), row["source"]
     assert level.ppm == pytest.approx(level.dpmo, rel=SAME), "one opportunity per item"
 
 
 @pytest.mark.parametrize("row", NIST, ids=lambda row: f"{row['ppm']:g}")
 def test_rejects_stand_for_the_spec_width_of_the_table(row: dict[str, Any]) -> None:
-    level = today(line(step("part", {"dpmo": row["ppm"], "sides": 2}))).steps[0].level
+    level = today(line(step("part", {"dpmo": row["ppm"], "sides": 2}))).rows[0].level
     assert level.sigma_level == pytest.approx(row["sigma_level"], rel=SIGMA_ROUNDING), row["source"]
 
 
 def test_the_offset_and_the_near_index_say_the_same() -> None:
     """NIST/SEMATECH e-Handbook, 6.1.6: Cpk = (1 − k)·Cp, so {cp, cpk} and the limits are one process."""
-    by_limits = today(line(step("study", {"lsl": 8, "usl": 20, "mean": 16, "std": 2}))).steps[0].level
-    by_indices = today(line(step("study", {"cp": 1.0, "cpk": 2.0 / 3.0}))).steps[0].level
+    by_limits = today(line(step("study", {"lsl": 8, "usl": 20, "mean": 16, "std": 2}))).rows[0].level
+    by_indices = today(line(step("study", {"cp": 1.0, "cpk": 2.0 / 3.0}))).rows[0].level
     assert by_indices.k == pytest.approx(by_limits.k, rel=SAME)
     assert by_indices.dpmo == pytest.approx(by_limits.dpmo, rel=SAME)

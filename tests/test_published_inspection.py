@@ -41,7 +41,7 @@ def test_rolled_yield_from_defects_per_unit() -> None:
     The first of its yields, printed 0.904834, is a misprint of 0.904837.
     """
     seen = today(line(*(spread(f"step {dpu}", dpu) for dpu in (0.10, 0.05, 0.008))))
-    assert [s.first_pass_yield for s in seen.steps] == pytest.approx([0.904837, 0.951229, 0.992032], abs=SIX_DIGITS)
+    assert [s.first_pass_yield for s in seen.rows] == pytest.approx([0.904837, 0.951229, 0.992032], abs=SIX_DIGITS)
     assert seen.line.yields.rolled_yield == pytest.approx(0.853850, abs=5e-7)
     assert seen.line.dpu == pytest.approx(0.158, rel=1e-12)
 
@@ -74,7 +74,7 @@ def test_a_board_of_500_components() -> None:
     assert seen.line.dpu == pytest.approx(500 * 1050e-6, rel=1e-12)
     assert seen.line.yields.rolled_yield == pytest.approx(0.60, abs=ABOUT)
     # p. 109: multiplying yields and summing DPU agree; DPU leaves out Σ n·p²/2, here 1.8e-4 at most.
-    multiplied = math.prod(s.first_pass_yield for s in seen.steps)
+    multiplied = math.prod(s.first_pass_yield for s in seen.rows)
     assert seen.line.yields.rolled_yield == pytest.approx(multiplied, rel=1e-12)
     assert -math.log(multiplied) == pytest.approx(seen.line.dpu, abs=500 * (300e-6**2 + 500e-6**2 + 2.5 * 100e-6**2))
 
@@ -123,9 +123,9 @@ def test_three_tests_in_a_row() -> None:
     seen = today(boards(0.60, THREE_TESTS))
     money = seen.line.money
     assert money is not None
-    assert [s.inspection for s in seen.steps[1:]] == pytest.approx([100_000, 300_000, 1_000_000])
+    assert [s.inspection for s in seen.rows[1:]] == pytest.approx([100_000, 300_000, 1_000_000])
     assert money.inspection == pytest.approx(1_400_000)
-    repaired = [s.rework / TESTS[s.step][1] for s in seen.steps[1:]]
+    repaired = [s.rework / TESTS[s.step][1] for s in seen.rows[1:]]
     assert repaired == pytest.approx([20_000, 15_000, 4_800])
     assert money.escapes / AT_CUSTOMER == pytest.approx(200)
     assert money.scrap == 0.0
@@ -154,7 +154,7 @@ def test_inspect_all_or_none(bad: float, decision: str) -> None:
     }  # fmt: skip
     unit = step("unit", with_defects(bad), inspection={"finds": 0.0}, alternative=[every_unit])
     answer = plan(line(unit, demand={"shipped_per_year": 1000}, target={"escape_cost": 25.0}))
-    assert bool(answer.steps[0].alternatives) == (decision == "inspect")
+    assert bool(answer.rows[0].alternatives) == (decision == "inspect")
     if bad == 0.03:
         assert answer.today.money is not None
         assert answer.money is not None

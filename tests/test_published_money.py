@@ -43,7 +43,7 @@ def test_a_price_costs_its_capital_recovery_per_year(row: dict[str, Any]) -> Non
     demand = {"shipped_per_year": 1, "years": row["years"], "discount_rate": row["rate"]}
     answer = plan(line(step("drill", TODAY, alternative=[machine]), demand=demand, target={"rolled_yield": 0.99}))
     allowed = 1000.0 * row["rounding"] * (1.0 + 1e-9)
-    assert answer.steps[0].improvement == pytest.approx(1000.0 * row["printed"], rel=0, abs=allowed), row["source"]
+    assert answer.rows[0].improvement == pytest.approx(1000.0 * row["printed"], rel=0, abs=allowed), row["source"]
     assert answer.capital == 1000.0
 
 
@@ -75,8 +75,8 @@ def test_unequal_lives_are_compared_by_the_year(case: Comparison, cheaper: float
         demand = {"shipped_per_year": 1, "years": 10, "discount_rate": rate}
         answer = plan(line(step("drill", TODAY, alternative=offered), demand=demand, target={"rolled_yield": 0.99}))
         assert answer.money is not None
-        assert answer.money.total == answer.steps[0].improvement
-        return answer.steps[0].alternatives[0], answer.steps[0].improvement
+        assert answer.money.total == answer.rows[0].improvement
+        return answer.rows[0].alternatives[0], answer.rows[0].improvement
 
     assert chosen(better) == (better["name"], pytest.approx(cheaper, abs=WHOLE_UNITS))
     assert chosen(worse) == (worse["name"], pytest.approx(dearer, abs=WHOLE_UNITS))

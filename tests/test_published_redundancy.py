@@ -49,7 +49,7 @@ def test_copies_fail_as_published(row: dict[str, Any]) -> None:
     copies = dict(zip(("installed", "needed", "common_cause"), arguments[1:], strict=True))
     installed = {"name": "copies", "copies": copies, "per_year": TAKEN}
     answer = plan(line(step("unit", {"defect_rate": row["one_fails"]}, alternative=[installed])))
-    assert answer.steps[0].alternatives == ("copies",)
+    assert answer.rows[0].alternatives == ("copies",)
     assert answer.yields is not None
     assert answer.yields.rolled_loss == printed, row["source"]
 
@@ -97,7 +97,7 @@ def test_the_four_stage_problem() -> None:
     reliability, cost, weight = (0.80, 0.70, 0.75, 0.85), (1.2, 2.3, 3.4, 4.5), (5, 4, 8, 7)
     scenario = stages(reliability, 9, lambda j, n: cost[j] * n, lambda j, n: weight[j] * n, 56.0)
     answer = plan(scenario, of="rolled_yield", spend=120.0 - sum(weight))
-    assert [target.alternatives for target in answer.steps] == [("5",), ("6",), ("5",), ("4",)]
+    assert [target.alternatives for target in answer.rows] == [("5",), ("6",), ("5",), ("4",)]
     assert answer.yields is not None
     assert answer.yields.rolled_yield == pytest.approx(0.99747, abs=5e-6)
     assert answer.capital == pytest.approx(54.8 - sum(cost), abs=DESIGN)
@@ -119,7 +119,7 @@ def test_the_five_stage_problem() -> None:
 
     scenario = stages(reliability, 6, lambda j, n: cost[j] * (n + math.exp(n / 4)), heavy, 175.0)
     answer = plan(scenario, of="rolled_yield", spend=200.0 - sum(heavy(j, 1) for j in range(5)))
-    copies = [int(target.alternatives[0]) for target in answer.steps]
+    copies = [int(target.alternatives[0]) for target in answer.rows]
     assert copies == [3, 2, 2, 3, 3]
     assert sum(p * n**2 for p, n in zip(third, copies, strict=True)) == 83
     assert answer.yields is not None

@@ -31,19 +31,19 @@ def name_of(row: dict[str, Any]) -> str:
 @pytest.mark.parametrize("row", rows("sigma_levels.csv"), ids=name_of)
 def test_a_sigma_level_has_the_ppm_of_the_table(row: dict[str, Any]) -> None:
     capability = {"sigma_level": row["sigma_level"], "shift": row["shift"], "sides": int(row["sides"])}
-    level = today(line(step("part", capability))).steps[0].level
+    level = today(line(step("part", capability))).rows[0].level
     assert level.dpmo == pytest.approx(row["ppm"], rel=0, abs=row["tolerance"]), row["source"]
 
 
 @pytest.mark.parametrize("row", rows("deep_tails.csv"), ids=name_of)
 def test_deep_tails_lose_no_digit(row: dict[str, Any]) -> None:
     seen = today(line(step("part", {"sigma_level": row["sigma_level"], "sides": 1})))
-    assert seen.steps[0].level.dpmo * 1e-6 == pytest.approx(row["tail"], rel=0, abs=row["tolerance"]), row["source"]
+    assert seen.rows[0].level.dpmo * 1e-6 == pytest.approx(row["tail"], rel=0, abs=row["tolerance"]), row["source"]
     with mpmath.workdps(50):
         exact = float(mpmath.ncdf(-mpmath.mpf(row["sigma_level"])))
-    assert seen.steps[0].level.dpmo * 1e-6 == pytest.approx(exact, rel=EXACT)
+    assert seen.rows[0].level.dpmo * 1e-6 == pytest.approx(exact, rel=EXACT)
     # The loss of the line's yield is the same number, not 1 less a number close to 1.
-    assert seen.line.yields.rolled_loss == pytest.approx(seen.steps[0].level.dpmo * 1e-6, rel=EXACT)
+    assert seen.line.yields.rolled_loss == pytest.approx(seen.rows[0].level.dpmo * 1e-6, rel=EXACT)
 
 
 @pytest.mark.parametrize("row", rows("rolled_yield_by_steps.csv"), ids=name_of)

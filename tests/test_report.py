@@ -114,7 +114,7 @@ def a_plan(**changes: Any) -> Plan:
         title="Frame line", currency="EUR", shipped_per_year=50_000.0, question="cheapest", reached=True,
         split="final_yield", targets={"final_yield": 0.995}, target_losses={"final_yield": 0.005}, yields=yields(),
         money=money(), dpu=0.0101, capital=90_000.0, purchases=(Bought("Laser cell", 250_000.0, 61_000.0),),
-        steps=tuple(steps), today=today_line(), proof=Proof(290_469.0, 290_468.9, 3.4e-7, "price road", 0.012),
+        rows=tuple(steps), today=today_line(), proof=Proof(290_469.0, 290_468.9, 3.4e-7, "price road", 0.012),
         price_of_defect_budget=-2.5e6, cost_of_next_nine=34_000.0, binding=(),
         best_reachable=BestReachable("final_yield", 0.9998, 2e-4, 510_000.0, (Binding("Weld", "at its cap"),)),
         rules=(RULE, MISSED), rules_note="", assumed=("gates find all of their own defects",), cautions=(CAUTION,),
@@ -129,7 +129,7 @@ def out_of_reach(**changes: Any) -> Plan:
 
 def nothing_possible() -> Plan:
     return out_of_reach(
-        yields=None, money=None, dpu=None, capital=None, purchases=(), steps=(), proof=None, best_reachable=None,
+        yields=None, money=None, dpu=None, capital=None, purchases=(), rows=(), proof=None, best_reachable=None,
         rules=(), rules_note="no plan to compare with",
     )  # fmt: skip
 
@@ -166,7 +166,7 @@ RESULTS = {
     "out of reach": out_of_reach(),
     "nothing possible": nothing_possible(),
     "nines": some_nines(),
-    "empty nines": some_nines(points=(), highest=None, optimum_total=None),
+    "empty nines": some_nines(rows=(), highest=None, optimum_total=None),
     "today": a_today(),
     "today, overflow": a_today(False),
     "check": a_check(),
@@ -206,7 +206,7 @@ def test_plan_opens_with_the_answer() -> None:
 
 
 def test_plan_without_changes_says_so() -> None:
-    assert "buy nothing and change nothing" in answer(a_plan(purchases=(), steps=(step_target("Weld"),)))
+    assert "buy nothing and change nothing" in answer(a_plan(purchases=(), rows=(step_target("Weld"),)))
 
 
 def test_out_of_reach_is_said_first_then_what_holds_it() -> None:
@@ -230,7 +230,7 @@ def test_last_word_is_always_said(name: str) -> None:
 
 def test_safety_is_said_in_stronger_words() -> None:
     plan = a_plan(
-        steps=(step_target("Brake", safety=True, floor="Cpk 1.67", floor_distance="0.10 Cpk above the floor"),)
+        rows=(step_target("Brake", safety=True, floor="Cpk 1.67", floor_distance="0.10 Cpk above the floor"),)
     )
     assert "people can be hurt where 'Brake' fails" in " ".join(render(plan).split())
     nines = some_nines(cautions=(replace(CAUTION, code="safety", steps=("Brake",)),))
@@ -245,7 +245,7 @@ def test_an_unknown_shipped_yield_is_explained() -> None:
 
 
 def test_long_tables_are_cut_and_counted() -> None:
-    plan = a_plan(steps=tuple(step_target(f"S{i}") for i in range(MOST_ROWS + 5)), cautions=())
+    plan = a_plan(rows=tuple(step_target(f"S{i}") for i in range(MOST_ROWS + 5)), cautions=())
     text = render(plan)
     assert f"S{MOST_ROWS - 1} " in text
     assert f"S{MOST_ROWS} " not in text

@@ -83,14 +83,14 @@ def latch() -> Plan:
 
 def test_latch_parts_stand_as_their_prices(latch: Plan) -> None:
     """Cost/p is nearly the same at every step, so parts per million go 1 : 2 : 5 as 2,000 : 4,000 : 10,000 do."""
-    ppm = [step.target.ppm for step in latch.steps]
+    ppm = [step.target.ppm for step in latch.rows]
     assert ppm == pytest.approx([1_000.0, 2_000.0, 5_000.0], rel=0.01)
     assert latch.yields is not None
     assert latch.yields.final_loss == pytest.approx(0.008, rel=1e-9)
 
 
 def test_latch_leaves_the_riveter(latch: Plan) -> None:
-    assert all(step.alternatives == () for step in latch.steps)
+    assert all(step.alternatives == () for step in latch.rows)
     assert latch.capital == 0.0
 
 
@@ -106,5 +106,5 @@ def test_latch_money_adds_up_by_hand(latch: Plan) -> None:
     """0.40 EUR per latch thrown away anywhere, and each step's decades at their yearly price."""
     assert latch.money is not None
     assert latch.money.scrap == pytest.approx(100_000 * 0.40 * (1 / 0.992 - 1), rel=1e-9)
-    for step, price in zip(latch.steps, (2_000.0, 4_000.0, 10_000.0), strict=True):
+    for step, price in zip(latch.rows, (2_000.0, 4_000.0, 10_000.0), strict=True):
         assert 10 ** (step.improvement / price) == pytest.approx(20_000 / step.target.dpmo, rel=1e-9)

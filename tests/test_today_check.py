@@ -31,15 +31,15 @@ EXACT = 1e-11
 def test_identities_of_today(scenario: Drawn) -> None:
     read = scenario_from_dict(scenario)
     today, check = see_today(read), check_scenario(read)
-    assert sum(step.defect_share for step in today.steps) == pytest.approx(1.0, rel=EXACT)
-    assert sum(step.money_share for step in today.steps) == pytest.approx(1.0, rel=EXACT)
+    assert sum(step.defect_share for step in today.rows) == pytest.approx(1.0, rel=EXACT)
+    assert sum(step.money_share for step in today.rows) == pytest.approx(1.0, rel=EXACT)
     assert today.line.dpu == pytest.approx(
-        sum(u.items_per_unit * u.opportunities * u.level.dpmo * 1e-6 for u in check.steps), rel=EXACT
+        sum(u.items_per_unit * u.opportunities * u.level.dpmo * 1e-6 for u in check.rows), rel=EXACT
     )
     money = today.line.money
     assert money is not None
     for kind in ("scrap", "rework", "inspection"):
-        assert sum(getattr(s, kind) for s in today.steps) == pytest.approx(getattr(money, kind), rel=EXACT, abs=1e-9)
+        assert sum(getattr(s, kind) for s in today.rows) == pytest.approx(getattr(money, kind), rel=EXACT, abs=1e-9)
     assert money.improvement == 0.0
     for lot, bad in today.line.bad_per_lot:
         assert bad == pytest.approx(lot * (1.0 - today.line.yields.rolled_yield), rel=1e-9)
@@ -50,7 +50,7 @@ def test_identities_of_today(scenario: Drawn) -> None:
 def test_first_pass_yields_multiply_to_the_rolled_yield(scenario: Drawn) -> None:
     """On a serial line whose gates find their own defects and reject no good item."""
     today = see_today(scenario_from_dict(scenario))
-    assert math.prod(step.first_pass_yield for step in today.steps) == pytest.approx(
+    assert math.prod(step.first_pass_yield for step in today.rows) == pytest.approx(
         today.line.yields.rolled_yield, rel=EXACT
     )
     assert today.line.yields.shipped_yield is None
@@ -60,7 +60,7 @@ def test_defects_and_money_are_lost_in_different_places() -> None:
     """Where most defects arise and where most money is thrown away: 2 % of a cheap item, 1 % of a dear one."""
     scenario = plain_line(0.02, 0.01)
     scenario["step"][1]["scrap_cost"] = 50.0
-    first, second = see_today(scenario_from_dict(scenario)).steps
+    first, second = see_today(scenario_from_dict(scenario)).rows
     assert first.defect_share == pytest.approx(2 / 3)
     assert second.money_share == pytest.approx(50 * 0.01 / 0.99 / (50 * 0.01 / 0.99 + 1 * 0.02 / 0.98 / 0.99))
 
@@ -108,7 +108,7 @@ def test_today_of_a_hopeless_line_is_sound_json(tmp_path: Path) -> None:
 @given(lines(most=6))
 def test_check_says_what_a_scrapped_item_costs(scenario: Drawn) -> None:
     """κ of the steps, times items per unit, is what a finished unit cost, less what its last gate gives back."""
-    steps = check_scenario(scenario_from_dict(scenario)).steps
+    steps = check_scenario(scenario_from_dict(scenario)).rows
     by_hand = sum(s.items_per_unit * s.net_cost_added for s in steps)
     assert by_hand == pytest.approx(steps[-1].lost_when_scrapped, rel=EXACT)
 

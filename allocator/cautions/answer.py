@@ -19,20 +19,20 @@ def cautions_of_plan(problem: Problem, plan: Plan) -> tuple[Caution, ...]:
 
 
 def _of_answer(problem: Problem, plan: Plan) -> Iterator[Caution]:
-    capped = tuple(s.step for s in plan.steps if s.at_cap)
+    capped = tuple(s.step for s in plan.rows if s.at_cap)
     if capped:
         yield Caution(
             "at_cap", capped, "the plan sits at the end of what was demonstrated or quoted: the true optimum may lie beyond",
             "ask for a quotation, or demonstrate a better level, and raise up_to",
         )  # fmt: skip
-    rests = tuple(s.step for i, s in enumerate(plan.steps) if _bought_on_judgement(problem, plan, i))
+    rests = tuple(s.step for i, s in enumerate(plan.rows) if _bought_on_judgement(problem, plan, i))
     if rests:
         yield Caution(
             "plan_rests_on_judgement", rests, "what the plan does here rests on judged figures",
             "get quotations or trials for these before money is committed",
         )  # fmt: skip
     unseen = tuple(
-        s.step for s in plan.steps if s.target.dpmo > 0.0 and _cannot_be_shown(s.target.ppm, s.starts_per_year)
+        s.step for s in plan.rows if s.target.dpmo > 0.0 and _cannot_be_shown(s.target.ppm, s.starts_per_year)
     )
     if unseen:
         yield Caution(
@@ -52,7 +52,7 @@ def _of_answer(problem: Problem, plan: Plan) -> Iterator[Caution]:
 
 
 def _bought_on_judgement(problem: Problem, plan: Plan, i: int) -> bool:
-    step, row = problem.scenario.step[i], plan.steps[i]
+    step, row = problem.scenario.step[i], plan.rows[i]
     if row.law is not None and step.improve is not None and is_judged(step.improve):
         return True
     return any(is_judged(a) for a in step.alternative if a.name in row.alternatives)

@@ -14,13 +14,13 @@ def check_text(check: Check, width: int = LOG_WIDTH) -> str:
     blocks.write_title(paper, check.title, check.shipped_per_year)
     paper.say(f"File: {check.file}")
     paper.say(f"Target: {words.targets_in_full(check.targets, check.target_losses, '') or 'none set'}")
-    _write_levels(paper, check.steps)
+    _write_levels(paper, check.rows)
     _write_flow(paper, check)
-    _write_choices(paper, check.steps)
+    _write_choices(paper, check.rows)
     blocks.write_assumed(paper, check.assumed)
     blocks.write_cautions(paper, check.cautions)
-    ways = sum(step.ways for step in check.steps)
-    paper.heading(f"sound: {len(check.steps):,} steps, {ways:,} ways in all, {len(check.cautions):,} cautions")
+    ways = sum(step.ways for step in check.rows)
+    paper.heading(f"sound: {len(check.rows):,} steps, {ways:,} ways in all, {len(check.cautions):,} cautions")
     return paper.text()
 
 
@@ -42,7 +42,7 @@ def _level_row(step: Understood) -> list[str]:
 def _write_flow(paper: Paper, check: Check) -> None:
     paper.heading(f"Flow and cost as understood (money in {words.clean(check.currency)} per item)")
     figures = ["items\nper unit", "opportu-\nnities", "lost when\nscrapped", "net cost\nadded", "ways"]
-    paper.table(columns(["step", "feeds"], figures), (_flow_row(step) for step in check.steps), len(check.steps))
+    paper.table(columns(["step", "feeds"], figures), (_flow_row(step) for step in check.rows), len(check.rows))
 
 
 def _flow_row(step: Understood) -> list[str]:

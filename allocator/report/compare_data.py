@@ -25,7 +25,7 @@ def compare_json(answer: Comparison) -> dict[str, Any]:
             for case in answer.cases
         ],
         "taken": [_taken(row, answer) for row in answer.taken],
-        "steps": [_step(step, answer) for step in answer.steps],
+        "steps": [_step(step, answer) for step in answer.rows],
     }  # fmt: skip
 
 
@@ -53,7 +53,7 @@ def _rows(answer: Comparison) -> Iterator[list[object]]:
         yield ["", name, *(_LINE[name](case) for case in answer.cases)]
     for row in answer.taken:
         yield [row.step, row.what, *row.states]
-    for step in answer.steps:
+    for step in answer.rows:
         for name in _LEVELS:
             yield [step.step, name, *(None if t is None else getattr(t.target, name) for t in step.targets)]
         for name in _MONEY:

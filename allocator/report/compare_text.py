@@ -51,7 +51,7 @@ def _write_some(paper: Paper, answer: Comparison, some: slice) -> None:
     _write_line(paper, cases, labels)
     _write_money(paper, cases, labels)
     _write_taken(paper, answer.taken, some, labels)
-    _write_steps(paper, answer.steps, some, labels)
+    _write_steps(paper, answer.rows, some, labels)
 
 
 def _write_taken(paper: Paper, things: Sequence[TakenAcross], some: slice, labels: Sequence[str]) -> None:

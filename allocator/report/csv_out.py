@@ -93,16 +93,16 @@ _CHECK = {
 
 
 def plan_csv(plan: Plan) -> str:
-    return record_table(_PLAN, plan.currency, plan.steps)
+    return record_table(_PLAN, plan.currency, plan.rows)
 
 
 def nines_csv(nines: Nines) -> str:
-    return record_table(_NINES, nines.currency, nines.points)
+    return record_table(_NINES, nines.currency, nines.rows)
 
 
 def today_csv(today: Today) -> str:
-    return record_table(_TODAY, today.currency, today.steps)
+    return record_table(_TODAY, today.currency, today.rows)
 
 
 def check_csv(check: Check) -> str:
-    return record_table(_CHECK, check.currency, check.steps)
+    return record_table(_CHECK, check.currency, check.rows)

@@ -43,7 +43,7 @@ def plan_json(plan: Plan) -> dict[str, Any]:
         "best_reachable": _best(plan.best_reachable),
         "binding": [held.step for held in plan.binding],
         "binding_reasons": [_pick(held, ("step", "reason")) for held in plan.binding],
-        "steps": [_step_target(step) for step in plan.steps],
+        "steps": [_step_target(step) for step in plan.rows],
         "rules": [_pick(rule, rules) for rule in plan.rules],
         "rules_note": plan.rules_note,
         "cautions": _cautions(plan.cautions),
@@ -72,7 +72,7 @@ def nines_json(nines: Nines) -> dict[str, Any]:
         **_pick(nines, ("title", "currency")),
         "split_yield": nines.split,
         "today_nines": nines.today_nines,
-        "points": [_point(point) for point in nines.points],
+        "points": [_point(point) for point in nines.rows],
         "highest_reachable": None
         if highest is None
         else {
@@ -99,7 +99,7 @@ def today_json(today: Today) -> dict[str, Any]:
     return {
         **_pick(today, ("title", "currency", "shipped_per_year", "targets")),
         **today_line_json(today.line),
-        "steps": [_step_today(step) for step in today.steps],
+        "steps": [_step_today(step) for step in today.rows],
         "assumed": today.assumed,
         "cautions": _cautions(today.cautions),
     }
@@ -114,7 +114,7 @@ def check_json(check: Check) -> dict[str, Any]:
     return {
         "sound": True,
         **_pick(check, ("title", "currency", "shipped_per_year", "file", "targets")),
-        "steps": [_understood(step) for step in check.steps],
+        "steps": [_understood(step) for step in check.rows],
         "assumed": check.assumed,
         "cautions": _cautions(check.cautions),
     }

@@ -31,15 +31,15 @@ def _write_points(paper: Paper, nines: Nines) -> None:
     paper.heading(f"Least cost of reaching at least each yield ({currency}/year)")
     extra, price = "extra over\nthe point\nbefore", "price per\nunit of\ndefect budget"
     heads = columns(["point"], ["nines", "yield\nneeded", "total", extra, price])
-    paper.table(heads, (_point_row(point) for point in nines.points), len(nines.points))
-    if any(point.price_of_defect_budget is not None for point in nines.points):
+    paper.table(heads, (point_row(point) for point in nines.rows), len(nines.rows))
+    if any(point.price_of_defect_budget is not None for point in nines.rows):
         paper.say(
             "The price per unit of defect budget (budget = -ln of the yield) holds near its point only; for a whole "
             "nine read the extra cost."
         )
 
 
-def _point_row(point: NinesPoint) -> list[str]:
+def point_row(point: NinesPoint) -> list[str]:
     extra = "-" if point.extra is None else words.money(point.extra)
     price = "-" if point.price_of_defect_budget is None else words.money(point.price_of_defect_budget)
     needed = words.percent(point.target_yield, point.target_loss)
@@ -50,7 +50,7 @@ def _write_changes(paper: Paper, nines: Nines) -> None:
     said = [
         f"{point.label}, {words.fixed(point.nines)} nines: "
         + words.listed([words.clean(change) for change in point.changes], MOST_CHANGES, "more changes", "; ")
-        for point in nines.points
+        for point in nines.rows
         if point.changes
     ]
     if said:

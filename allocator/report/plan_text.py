@@ -21,7 +21,7 @@ def plan_text(plan: Plan, width: int = LOG_WIDTH) -> str:
     _write_proof(paper, plan)
     blocks.write_assumed(paper, plan.assumed)
     blocks.write_cautions(paper, plan.cautions)
-    blocks.write_last_word(paper, [step.step for step in plan.steps if step.safety])
+    blocks.write_last_word(paper, [step.step for step in plan.rows if step.safety])
     return paper.text()
 
 
@@ -65,7 +65,7 @@ def _cost(plan: Plan) -> str:
 
 def _actions(plan: Plan) -> str:
     shared = [f"buy {words.quoted(bought.name)} (shared)" for bought in plan.purchases]
-    acts = shared + list(_step_actions(plan.steps))
+    acts = shared + list(_step_actions(plan.rows))
     return words.listed(acts, more="more changes (in the table)") if acts else "buy nothing and change nothing"
 
 
@@ -100,7 +100,7 @@ def _write_tables(paper: Paper, plan: Plan) -> None:
     blocks.write_money(paper, plan.currency, [("plan", plan.money), ("today", plan.today.money)])
 
 
-def _choice(step: StepTarget) -> str:
+def choice(step: StepTarget) -> str:
     parts = [words.clean(name) for name in step.alternatives]
     if step.law:
         parts.append(f"improve ({words.clean(step.law)})")
@@ -108,11 +108,11 @@ def _choice(step: StepTarget) -> str:
 
 
 def _write_steps(paper: Paper, plan: Plan) -> None:
-    steps = plan.steps
+    steps = plan.rows
     paper.heading(f"Steps: what to choose (money in {words.clean(plan.currency)}/year)")
     heads = columns(["step", "choice"], ["improve-\nment", "scrap", "share of\nbudget", "starts\nper year"])
     rows = (
-        [step.step, _choice(step), words.money(step.improvement), words.money(step.scrap),
+        [step.step, choice(step), words.money(step.improvement), words.money(step.scrap),
          words.share(step.budget_share), words.number(step.starts_per_year)]
         for step in steps
     )  # fmt: skip
@@ -127,12 +127,12 @@ def _write_steps(paper: Paper, plan: Plan) -> None:
         "ppm\ntoday",
         "ppm\ntarget",
     )
-    paper.table(columns(["step"], figures), (_level_row(step) for step in steps), len(steps))
+    paper.table(columns(["step"], figures), (level_row(step) for step in steps), len(steps))
     paper.say(blocks.INDEX_NOTE)
     _write_limits(paper, plan)
 
 
-def _level_row(step: StepTarget) -> list[str]:
+def level_row(step: StepTarget) -> list[str]:
     now, then = step.today, step.target
     return [
         step.step, words.fixed(now.sigma_level), words.fixed(then.sigma_level), words.fixed(now.cpk),
@@ -143,12 +143,12 @@ def _level_row(step: StepTarget) -> list[str]:
 def _write_limits(paper: Paper, plan: Plan) -> None:
     """Floors with where the plan stands, then the steps that sit at what was quoted or demonstrated."""
     said = []
-    for step in plan.steps:
+    for step in plan.rows:
         if step.floor is not None:
             stands = f"the floor {'binds' if step.floor_binds else 'does not bind'} ({step.floor_distance})"
             level = f"Cpk {words.fixed(step.target.cpk)}, {words.fixed(step.target.sigma_level)} sigma"
             said.append(f"{words.quoted(step.step)}: floor {words.clean(step.floor)}; plan {level}; {stands}")
-    for step in plan.steps:
+    for step in plan.rows:
         if step.at_cap:
             cap = words.clean(step.cap or "the most that was quoted or demonstrated")
             said.append(f"{words.quoted(step.step)} sits at its cap: {cap}")

@@ -37,6 +37,10 @@ _RENDERERS: dict[type, _Renderers] = {
 }
 
 
+def has_renderer(result: object) -> bool:
+    return type(result) in _RENDERERS
+
+
 def render(result: object, form: Form = "text", width: int = LOG_WIDTH) -> str:
     """The result as one text that ends in a line break; `width` counts for the form text only."""
     renderers = _RENDERERS[type(result)]

@@ -19,8 +19,8 @@ def today_text(today: Today, width: int = LOG_WIDTH) -> str:
     paper.heading("Where defects arise and where money is lost (the largest ten)")
     blocks.write_shares(
         paper,
-        [(step.step, step.defect_share) for step in today.steps],
-        [(step.step, step.money_share) for step in today.steps],
+        [(step.step, step.defect_share) for step in today.rows],
+        [(step.step, step.money_share) for step in today.rows],
     )
     blocks.write_assumed(paper, today.assumed)
     blocks.write_cautions(paper, today.cautions)
@@ -44,14 +44,14 @@ def _write_lots(paper: Paper, today: Today) -> None:
 def _write_steps(paper: Paper, today: Today) -> None:
     paper.heading("Steps: where each stands")
     heads = columns(["step"], ["sigma\nlevel", "Cpk", "Cpk after\nshift", "first-pass\nyield", "DPU", "ppm"])
-    paper.table(heads, (_level_row(step) for step in today.steps), len(today.steps))
+    paper.table(heads, (level_row(step) for step in today.rows), len(today.rows))
     paper.say(blocks.INDEX_NOTE)
     paper.heading(f"Steps: what each costs ({words.clean(today.currency)}/year)")
     heads = columns(["step"], ["starts\nper year", "scrap", "rework", "inspection"])
-    paper.table(heads, (_money_row(step) for step in today.steps), len(today.steps))
+    paper.table(heads, (_money_row(step) for step in today.rows), len(today.rows))
 
 
-def _level_row(step: StepToday) -> list[str]:
+def level_row(step: StepToday) -> list[str]:
     level = step.level
     first_pass = words.percent(step.first_pass_yield, 1.0 - step.first_pass_yield)
     return [

@@ -1,4 +1,8 @@
-"""What the commands answer with: plain frozen records, numbers only; they neither print nor plot."""
+"""What the commands answer with: plain frozen records, numbers only; they neither print nor plot.
+
+`rows` are the records of a result's own table; its namesake (`plan.steps`, `nines.points`) is the same as a DataFrame,
+made when it is first asked for.
+"""
 
 from allocator.results.compare import Compared, Comparison, StepAcross, TakenAcross
 from allocator.results.line import Caution, Level, Money, TodayLine, Yields

@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 from typing import TYPE_CHECKING
 
 from allocator.results.line import Caution
 from allocator.results.plan import Plan, StepTarget
-from allocator.results.table import as_table
+from allocator.shown import shown
 
 if TYPE_CHECKING:
     import pandas
@@ -47,6 +48,7 @@ class TakenAcross:
     states: tuple[str, ...]
 
 
+@shown
 @dataclass(frozen=True)
 class Comparison:
     """Several scenarios side by side, each with the plan that is best for it."""
@@ -55,7 +57,7 @@ class Comparison:
     cheapest: str | None
     """Label of the one that meets its targets at the least total per shipped unit; None where none does or can be."""
     taken: tuple[TakenAcross, ...]
-    steps: tuple[StepAcross, ...]
+    rows: tuple[StepAcross, ...]
     unlike: tuple[str, ...]
     """In words: what the scenarios do not have in common (promise, volume, currency, rate), to read the money by."""
 
@@ -64,6 +66,30 @@ class Comparison:
         """Return the cautions of all plans, each once."""
         return tuple(dict.fromkeys(caution for case in self.cases for caution in case.plan.cautions))
 
-    def table(self) -> pandas.DataFrame:
-        """Return one row per scenario with its label, its whole plan and the differences to the first."""
-        return as_table(self.cases)
+    @cached_property
+    def totals(self) -> pandas.DataFrame:
+        """One row per scenario: whether its promise is kept, its money, and the differences to the first."""
+        import pandas  # here, because only those who ask for a table should wait for it
+
+        plans = [case.plan for case in self.cases]
+        over = ("total_over_first", "per_unit_over_first", "capital_over_first")
+        columns = {
+            "label": [case.label for case in self.cases],
+            "reached": [plan.reached for plan in plans],
+            "total": [None if plan.money is None else plan.money.total for plan in plans],
+            "cost_per_unit": [plan.cost_per_unit for plan in plans],
+            "capital": [plan.capital for plan in plans],
+        }
+        return pandas.DataFrame(columns | {name: [getattr(case, name) for case in self.cases] for name in over})
+
+    @cached_property
+    def steps(self) -> pandas.DataFrame:
+        """One row per step: the sigma level to reach in each scenario, and whether the scenarios differ there."""
+        import pandas
+
+        levels = {
+            case.label: [None if (at := row.targets[i]) is None else at.target.sigma_level for row in self.rows]
+            for i, case in enumerate(self.cases)
+        }
+        names, differs = [row.step for row in self.rows], [row.differs for row in self.rows]
+        return pandas.DataFrame({"step": names, **levels, "differs": differs})

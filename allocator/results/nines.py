@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 from typing import TYPE_CHECKING
 
 from allocator.results.line import Caution
 from allocator.results.plan import BestReachable
 from allocator.results.table import as_table
+from allocator.shown import shown
 
 if TYPE_CHECKING:
     import pandas
@@ -31,6 +33,7 @@ class NinesPoint:
     gap: float
 
 
+@shown
 @dataclass(frozen=True)
 class Nines:
     """Total cost and cost of each extra nine, up to the highest reachable."""
@@ -39,7 +42,7 @@ class Nines:
     currency: str
     split: str
     today_nines: float
-    points: tuple[NinesPoint, ...]
+    rows: tuple[NinesPoint, ...]
     highest: BestReachable | None
     optimum_yield: float | None
     optimum_loss: float | None
@@ -47,6 +50,7 @@ class Nines:
     assumed: tuple[str, ...]
     cautions: tuple[Caution, ...]
 
-    def table(self) -> pandas.DataFrame:
-        """Return the points as a table."""
-        return as_table(self.points)
+    @cached_property
+    def points(self) -> pandas.DataFrame:
+        """The points as a table, from today's nines to the highest reachable."""
+        return as_table(NinesPoint, self.rows)

@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 from typing import TYPE_CHECKING
 
 from allocator.results.line import Caution, Level, Money, TodayLine, Yields
 from allocator.results.table import as_table
+from allocator.shown import shown
 
 if TYPE_CHECKING:
     import pandas
@@ -100,6 +102,7 @@ class BestReachable:
     binding: tuple[Binding, ...]
 
 
+@shown
 @dataclass(frozen=True)
 class Plan:
     """The cheapest plan that meets the target, or (reached False) the best that can be reached."""
@@ -120,7 +123,7 @@ class Plan:
     dpu: float | None
     capital: float | None
     purchases: tuple[Bought, ...]
-    steps: tuple[StepTarget, ...]
+    rows: tuple[StepTarget, ...]
     today: TodayLine
     proof: Proof | None
     price_of_defect_budget: float | None
@@ -139,6 +142,7 @@ class Plan:
     def cost_per_unit(self) -> float | None:
         return None if self.money is None else self.money.total / self.shipped_per_year
 
-    def table(self) -> pandas.DataFrame:
-        """Return the steps as a table: today's and the target's level, what is chosen, cost and share."""
-        return as_table(self.steps)
+    @cached_property
+    def steps(self) -> pandas.DataFrame:
+        """The steps as a table: the level to reach, today's (`…_today`), what is chosen, cost and share."""
+        return as_table(StepTarget, self.rows)

@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from functools import cached_property
 from typing import TYPE_CHECKING
 
 from allocator.results.line import Caution, Level, TodayLine
 from allocator.results.table import as_table
+from allocator.shown import shown
 
 if TYPE_CHECKING:
     import pandas
@@ -30,6 +32,7 @@ class StepToday:
     """Part of today's scrap, rework and inspection that is lost at this step's gate."""
 
 
+@shown
 @dataclass(frozen=True)
 class Today:
     """Where the line stands: yields, defects per unit, and where the money goes."""
@@ -38,15 +41,16 @@ class Today:
     currency: str
     shipped_per_year: float
     line: TodayLine
-    steps: tuple[StepToday, ...]
+    rows: tuple[StepToday, ...]
     targets: dict[str, float]
     target_losses: dict[str, float]
     assumed: tuple[str, ...]
     cautions: tuple[Caution, ...]
 
-    def table(self) -> pandas.DataFrame:
-        """Return the steps as a table."""
-        return as_table(self.steps)
+    @cached_property
+    def steps(self) -> pandas.DataFrame:
+        """The steps as a table: where each stands, and what is lost there."""
+        return as_table(StepToday, self.rows)
 
 
 @dataclass(frozen=True)
@@ -73,6 +77,7 @@ class Understood:
     """'assumed' or the stated inspection in words."""
 
 
+@shown
 @dataclass(frozen=True)
 class Check:
     """Is the scenario sound, what was understood, which cautions apply."""
@@ -81,8 +86,13 @@ class Check:
     currency: str
     shipped_per_year: float
     file: str
-    steps: tuple[Understood, ...]
+    rows: tuple[Understood, ...]
     targets: dict[str, float]
     target_losses: dict[str, float]
     assumed: tuple[str, ...]
     cautions: tuple[Caution, ...] = field(default_factory=tuple)
+
+    @cached_property
+    def steps(self) -> pandas.DataFrame:
+        """The steps as a table, as they were understood."""
+        return as_table(Understood, self.rows)

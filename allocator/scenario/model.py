@@ -243,3 +243,6 @@ class Scenario(Head):
 
     step: tuple[Step, ...] = Field(min_length=1)
     file: str = ""
+
+    def __repr__(self) -> str:
+        return f"Scenario({self.title!r}, {len(self.step):,} steps, from {self.file!r})"
