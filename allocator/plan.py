@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping, Sequence
 from dataclasses import replace
 
 import numpy as np
@@ -12,12 +13,13 @@ from allocator.cautions import cautions_of_plan, what_is_assumed
 from allocator.errors import RangeError
 from allocator.flow import yields
 from allocator.problem import CAPITAL, COST, Problem, pose
-from allocator.results import BestReachable, Binding, Bought, Plan, Proof
+from allocator.results import BestReachable, Binding, Bought, Plan, Proof, Restraint
 from allocator.rules import simpler_rules
 from allocator.scenario.model import Scenario
 from allocator.solve.road import Solved, solve
 from allocator.standing import defects_per_unit, line_today, load_parts, shipped_known
 from allocator.targets import AT_CAP, step_targets
+from allocator.variants import restrained, restraint_words
 
 JUST_REACHABLE = 1e-9
 """Room given to the best reachable budget when its least cost is asked for: yields that close are the same yield."""
@@ -32,6 +34,9 @@ def make_plan(
     targets: dict[str, float] | None = None,
     spend: float | None = None,
     capital: float | None = None,
+    hold: Mapping[str, Mapping[str, float]] | None = None,
+    without: Sequence[str] = (),
+    with_: Sequence[str] = (),
 ) -> Plan:
     """Return the cheapest plan that meets the scenario's targets, floors and limits.
 
@@ -45,6 +50,10 @@ def make_plan(
         Losses 1 − yield by yield name; each takes the place of the scenario's own target, the others stay.
     spend, capital : float, optional [currency/year, currency]
         Ask for the best split yield for a yearly total, or for a capital, instead of the least cost.
+    hold : mapping, optional
+        By step the level that a supplier insists on, as {"weld": {"cpk": 1.33}} (or sigma_level, dpmo, ppm).
+    without, with_ : sequence of str, optional
+        Alternatives, purchases or laws ("STEP: improve") that are not to be had, or to be had whatever they cost.
 
     Returns
     -------
@@ -54,13 +63,23 @@ def make_plan(
     Raises
     ------
     RangeError
-        When `of` or a limit makes no sense.
+        When `of`, a limit, a name or a level held makes no sense, or a level held lies below the step's floor.
     SolverError
         When a solver stops without an answer.
     """
     if spend is not None and capital is not None:
         raise RangeError("ask for the best yield for a yearly spend or for a capital, not both at once")
     problem = pose(scenario, of, targets)
+    if not (hold or without or with_):
+        return _plan_of(problem, spend, capital)
+    plan = min((_plan_of(one, spend, capital) for one in restrained(problem, hold, without, with_)), key=_rank)
+    free = _plan_of(problem, spend, capital)
+    total = free.money.total if free.reached and free.money is not None else None
+    loss = split_loss(free) if free.reached else None
+    return replace(plan, restraint=Restraint(restraint_words(hold, without, with_), total, loss))
+
+
+def _plan_of(problem: Problem, spend: float | None, capital: float | None) -> Plan:
     if problem.options.no_way:
         return _no_plan(problem, tuple(Binding(step, reason) for step, reason in problem.options.no_way))
     if spend is not None or capital is not None:
@@ -72,6 +91,19 @@ def make_plan(
     plan = _with_next_nine(plan, problem, solved)
     rules, note = simpler_rules(problem, solved.outcome)
     return _with_cautions(replace(plan, rules=rules, rules_note=note), problem)
+
+
+def _rank(plan: Plan) -> tuple[bool, float, float]:
+    """Order plans from the best: those that reach the target first, then by what was asked, yield or cost."""
+    total = math.inf if plan.money is None else plan.money.total
+    by_yield = plan.question == "best yield" or not plan.reached
+    return not plan.reached, split_loss(plan) if by_yield else total, total
+
+
+def split_loss(plan: Plan) -> float:
+    """Return the loss 1 − yield of the split yield, infinite where there is no plan."""
+    loss = None if plan.yields is None else getattr(plan.yields, plan.split.replace("_yield", "_loss"))
+    return math.inf if loss is None else float(loss)
 
 
 def best_reachable(problem: Problem) -> Solved:

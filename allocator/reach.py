@@ -21,13 +21,14 @@ Indices = NDArray[np.int64]
 Flags = NDArray[np.bool_]
 SLACK = 1e-12
 """Relative slack on levels: a floor written as the present level is kept by it."""
-NO_LAW, FIXED, QUOTED, STATED, TENTH = range(5)
+NO_LAW, FIXED, QUOTED, STATED, TENTH, HELD = range(6)
 CAP_WORDS = (
     "no law of improvement",
     "fixed by the scenario",
     "the best level quoted",
     "up_to (sigma level {:.4g})",
     "one tenth of its starting defects (no up_to is given)",
+    "held at the level that was asked for",
 )
 """What ends a way, by code; the level that `up_to` states goes into the braces."""
 

@@ -1,4 +1,4 @@
-"""What the command line asks for: which yield, its targets, and the money it may cost."""
+"""What the command line asks for: which yield, its targets, the money it may cost, what is refused or insisted on."""
 
 from __future__ import annotations
 
@@ -28,6 +28,16 @@ class Which(StrEnum):
 
 
 Of = Annotated[Which | None, typer.Option("--of", help="The yield whose budget is split and whose nines are priced.")]
+
+Hold = Annotated[
+    list[str] | None,
+    typer.Option(metavar="STEP=KEY:VALUE", help="Fix a step's level (sigma_level, cpk, dpmo, ppm); repeatable."),
+]
+Without = Annotated[
+    list[str] | None,
+    typer.Option(metavar="NAME", help="Ban an alternative, a purchase or a law ('STEP: improve'); repeatable."),
+]
+With = Annotated[list[str] | None, typer.Option("--with", metavar="NAME", help="Force one; repeatable.")]
 
 
 def yield_option(which: Which) -> Any:
@@ -91,3 +101,29 @@ def refuse_unfit_money(spend: float | None, capital: float | None) -> None:
     for option, amount in (("--spend", spend), ("--capital", capital)):
         if amount is not None and not 0.0 <= amount < float("inf"):
             raise refused(option, f"{amount:g}", "give an amount of money, 0 or more")
+
+
+def levels_held(texts: list[str]) -> dict[str, dict[str, float]]:
+    """The levels that suppliers insist on, by step, from texts as "weld=cpk:1.33"."""
+    held: dict[str, dict[str, float]] = {}
+    faults: list[Fault] = []
+    for text in texts:
+        step, _, level = text.rpartition("=")
+        key, _, figure = level.partition(":")
+        value = _number(figure)
+        if not step.strip() or value is None:
+            faults.append(Fault(COMMAND_LINE, "--hold", text, "give STEP=KEY:VALUE, as 'weld=cpk:1.33'"))
+        elif step.strip() in held:
+            faults.append(Fault(COMMAND_LINE, "--hold", text, "a step can be held at one level only; give it once"))
+        else:
+            held[step.strip()] = {key.strip(): value}
+    if faults:
+        raise InputError(faults)
+    return held
+
+
+def _number(text: str) -> float | None:
+    try:
+        return float(text)
+    except ValueError:
+        return None

@@ -7,7 +7,20 @@ from typing import Annotated
 import typer
 
 from allocator.cli.app import OUT_OF_REACH, AsCsv, AsJson, File, app, form_of, load, show
-from allocator.cli.asked import Of, Which, losses_asked, name_of, named, refuse_unfit_money, split_of, yield_option
+from allocator.cli.asked import (
+    Hold,
+    Of,
+    Which,
+    With,
+    Without,
+    levels_held,
+    losses_asked,
+    name_of,
+    named,
+    refuse_unfit_money,
+    split_of,
+    yield_option,
+)
 from allocator.errors import Fault, InputError
 
 
@@ -51,6 +64,9 @@ def plan(
     of: Of = None,
     spend: Annotated[float | None, typer.Option(help="The best yield for at most this total cost per year.")] = None,
     capital: Annotated[float | None, typer.Option(help="The best yield for at most this much capital.")] = None,
+    hold: Hold = None,
+    without: Without = None,
+    with_: With = None,
     as_json: AsJson = False,
     as_csv: AsCsv = False,
 ) -> None:
@@ -59,11 +75,15 @@ def plan(
     yields = {Which.final: final_yield, Which.rolled: rolled_yield, Which.shipped: shipped_yield}
     losses = losses_asked({which: text for which, text in yields.items() if text is not None}, nines, ppm)
     refuse_unfit_money(spend, capital)
+    levels = levels_held(hold or [])
     from allocator import api
 
     scenario = load(file)
     targets = named(losses, of or split_of(scenario, losses))
-    answer = api.make_plan(scenario, of=name_of(of), targets=targets, spend=spend, capital=capital)
+    answer = api.make_plan(
+        scenario, of=name_of(of), targets=targets, spend=spend, capital=capital, hold=levels, without=without or (),
+        with_=with_ or (),
+    )  # fmt: skip
     show(answer, form)
     if not answer.reached:
         raise typer.Exit(OUT_OF_REACH)

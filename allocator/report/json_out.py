@@ -46,8 +46,17 @@ def plan_json(plan: Plan) -> dict[str, Any]:
         "steps": [_step_target(step) for step in plan.rows],
         "rules": [_pick(rule, rules) for rule in plan.rules],
         "rules_note": plan.rules_note,
+        "restraint": _restraint(plan),
         "cautions": _cautions(plan.cautions),
     }
+
+
+def _restraint(plan: Plan) -> dict[str, Any] | None:
+    """What the plan was told to keep to, and what that costs; null where it was told nothing."""
+    if plan.restraint is None:
+        return None
+    kept = _pick(plan.restraint, ("what", "total_unrestrained", "loss_unrestrained"))
+    return {**kept, "cost_of_restraint": plan.cost_of_restraint}
 
 
 def _proof(plan: Plan) -> dict[str, Any]:

@@ -6,7 +6,10 @@ from collections.abc import Iterator
 
 from allocator.report import blocks, words
 from allocator.report.paper import LOG_WIDTH, Paper, columns
-from allocator.results import Plan, RuleOutcome, StepTarget
+from allocator.results import Plan, Restraint, RuleOutcome, StepTarget
+
+NO_COST = 1e-6
+"""A restraint that costs less than this share of the total costs nothing: it is the gap of the solve."""
 
 
 def plan_text(plan: Plan, width: int = LOG_WIDTH) -> str:
@@ -35,6 +38,25 @@ def _write_answer(paper: Paper, plan: Plan) -> None:
         currency = words.clean(plan.currency)
         paper.say(f"Capital {words.money(plan.capital)} {currency}; {unit} {currency} a shipped unit; {dpu}.")
     blocks.write_money_reason(paper, plan.today)
+    if plan.restraint is not None:
+        paper.heading(_restraint(plan, plan.restraint))
+
+
+def _restraint(plan: Plan, kept: Restraint) -> str:
+    """What the plan was told to keep to, and what the refusal costs against the plan that is free of it."""
+    told = f"Told to keep: {words.listed(kept.what)}."
+    if kept.total_unrestrained is None:
+        return f"{told} Without that the target cannot be met either."
+    free = words.per_year(kept.total_unrestrained, plan.currency)
+    if plan.question == "best yield":
+        best = words.yield_in_full(1.0 - (kept.loss_unrestrained or 0.0), kept.loss_unrestrained)
+        return f"{told} Free of it the best is {best}, at {free}."
+    if plan.cost_of_restraint is None:
+        return f"{told} Free of it the target can be met, at {free}."
+    extra = max(plan.cost_of_restraint, 0.0)
+    if extra < NO_COST * abs(kept.total_unrestrained):
+        return f"{told} That costs nothing: the free plan costs {free} too."
+    return f"{told} That costs {words.per_year(extra, plan.currency)} more than the free plan ({free})."
 
 
 def answer(plan: Plan) -> str:

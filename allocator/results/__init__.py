@@ -7,7 +7,7 @@ made when it is first asked for.
 from allocator.results.compare import Compared, Comparison, StepAcross, TakenAcross
 from allocator.results.line import Caution, Level, Money, TodayLine, Yields
 from allocator.results.nines import Nines, NinesPoint
-from allocator.results.plan import BestReachable, Binding, Bought, Plan, Proof, RuleOutcome, StepTarget
+from allocator.results.plan import BestReachable, Binding, Bought, Plan, Proof, Restraint, RuleOutcome, StepTarget
 from allocator.results.table import as_table, records
 from allocator.results.today import Check, StepToday, Today, Understood
 
@@ -25,6 +25,7 @@ __all__ = [
     "NinesPoint",
     "Plan",
     "Proof",
+    "Restraint",
     "RuleOutcome",
     "StepAcross",
     "StepTarget",

@@ -104,6 +104,16 @@ class BestReachable:
 
 @shown
 @dataclass(frozen=True)
+class Restraint:
+    """What the plan was told to keep to, and what the plan would be without it (None where it misses the target)."""
+
+    what: tuple[str, ...]
+    total_unrestrained: float | None
+    loss_unrestrained: float | None
+    """Of the split yield."""
+
+
+@dataclass(frozen=True)
 class Plan:
     """The cheapest plan that meets the target, or (reached False) the best that can be reached."""
 
@@ -137,6 +147,19 @@ class Plan:
     cautions: tuple[Caution, ...]
     spend_limit: float | None = None
     capital_limit: float | None = None
+    restraint: Restraint | None = None
+
+    @property
+    def cost_of_restraint(self) -> float | None:
+        """What the restraints add to the yearly total; None without them, or where either plan is missing."""
+        if (
+            self.restraint is None
+            or self.restraint.total_unrestrained is None
+            or self.money is None
+            or not self.reached
+        ):
+            return None
+        return self.money.total - self.restraint.total_unrestrained
 
     @property
     def cost_per_unit(self) -> float | None:

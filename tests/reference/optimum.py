@@ -10,11 +10,11 @@ import itertools
 import math
 import sys
 import time
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from concurrent.futures import ProcessPoolExecutor
 from pathlib import Path
 
-from tests.reference.combination import Combination, combine, ways_of
+from tests.reference.combination import Combination, Way, combine, ways_of
 from tests.reference.convex import Task, solve
 from tests.reference.line import split_target, target_yields
 from tests.reference.recount import recount, violations
@@ -30,14 +30,20 @@ LOOSE = 1e-6
 """Relative, for the softness of that answer."""
 
 
-def optimum(scenario: dict, of: str | None = None, targets: dict | None = None) -> dict:
+def optimum(
+    scenario: dict,
+    of: str | None = None,
+    targets: dict | None = None,
+    taking: Callable[[list[Way]], bool] | None = None,
+) -> dict:
     """Least total cost meeting targets, floors and the capital limit.
 
-    `targets` (yield name: yield or target table) replaces the scenario's. Returns {"total", "choice", "lower",
+    `targets` (yield name: yield or target table) replaces the scenario's; `taking` says which combinations of ways
+    count (default: all). Returns {"total", "choice", "lower",
     "recount", "violations"}; total is inf and choice None where no choice meets them.
     """
     budgets = {name: -math.log(goal) for name, goal in target_yields(scenario, targets).items()}
-    return _search(scenario, budgets, "cost", of)
+    return _search(scenario, budgets, "cost", of, taking)
 
 
 def best_reachable(
@@ -88,10 +94,18 @@ def combinations(scenario: dict) -> Iterator[Combination]:
         yield combine(scenario, list(ways))
 
 
-def _search(scenario: dict, budgets: dict[str, float], minimise: str, of: str | None) -> dict:
+def _search(
+    scenario: dict,
+    budgets: dict[str, float],
+    minimise: str,
+    of: str | None,
+    taking: Callable[[list[Way]], bool] | None = None,
+) -> dict:
     limit = scenario.get("limits", {}).get("capital")
     tasks = []
     for problem in combinations(scenario):
+        if taking is not None and not taking(problem.ways):
+            continue
         within = all(problem.exponent(n, problem.low) <= b * (1 + 1e-10) for n, b in budgets.items())
         if within and (limit is None or problem.capital_fixed <= limit + 1e-9 * max(1.0, abs(limit))):
             floor = problem.cheapest_thinkable() if minimise == "cost" else problem.exponent(minimise, problem.low)
