@@ -98,6 +98,9 @@ def test_plan_passes_targets_as_losses_by_name(api: Api) -> None:
             "targets": {"final_yield": 0.005, "shipped_yield": 1e-20},
             "spend": None,
             "capital": None,
+            "hold": {},
+            "without": (),
+            "with_": (),
         }
     ]
 

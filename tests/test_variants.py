@@ -107,17 +107,17 @@ def cell(**more: Any) -> dict[str, Any]:
 def test_a_level_held_is_the_level_of_the_plan(key: str, value: float, sigma: float) -> None:
     plan = make_plan(scenario_from_dict(cell()), hold={"turn": {key: value}}, without=["machine"])
     assert plan.reached
-    assert plan.steps[0].target.sigma_level == pytest.approx(sigma, rel=1e-12)
+    assert plan.rows[0].target.sigma_level == pytest.approx(sigma, rel=1e-12)
     # A decade law of 1,000 a year: what it asks for is the fall of the defects in tenfold cuts.
-    cuts = math.log10(plan.steps[0].today.dpmo / plan.steps[0].target.dpmo)
-    assert plan.steps[0].improvement == pytest.approx(1_000.0 * cuts, rel=1e-9)
+    cuts = math.log10(plan.rows[0].today.dpmo / plan.rows[0].target.dpmo)
+    assert plan.rows[0].improvement == pytest.approx(1_000.0 * cuts, rel=1e-9)
 
 
 def test_holding_at_the_plans_own_level_costs_nothing() -> None:
     scenario = scenario_from_dict(cell())
     free = make_plan(scenario)
     assert free.money is not None
-    plan = make_plan(scenario, hold={"press": {"dpmo": free.steps[1].target.dpmo}})
+    plan = make_plan(scenario, hold={"press": {"dpmo": free.rows[1].target.dpmo}})
     assert plan.cost_of_restraint == pytest.approx(0.0, abs=GAP * free.money.total)
 
 
@@ -137,9 +137,9 @@ def test_a_concession_costs_nothing_at_the_step_itself() -> None:
     """A supplier who falls back behind today is not paid for it, and the buyer's machine is not held down to it."""
     scenario = cell(target={})
     plan = make_plan(scenario_from_dict(scenario), hold={"turn": {"sigma_level": 2.8}})
-    assert plan.steps[0].target.sigma_level == 2.8
-    assert plan.steps[0].improvement == 0.0
-    assert plan.steps[0].alternatives == ()
+    assert plan.rows[0].target.sigma_level == 2.8
+    assert plan.rows[0].improvement == 0.0
+    assert plan.rows[0].alternatives == ()
     assert plan.cost_of_restraint is not None
     assert plan.cost_of_restraint > 0.0
 
@@ -170,7 +170,7 @@ def test_no_step_is_held_below_its_floor(safety: bool, level: dict[str, float]) 
     with pytest.raises(RangeError, match=r"today's level: its (safety )?floor"):
         held_at_today(asked(scenario), "press")
     kept = make_plan(scenario_from_dict(scenario), hold={"press": {"dpmo": 899.0}})
-    assert kept.steps[1].target.dpmo == pytest.approx(899.0)
+    assert kept.rows[1].target.dpmo == pytest.approx(899.0)
 
 
 def test_without_the_law_a_floor_may_be_out_of_reach() -> None:
@@ -188,7 +188,7 @@ def test_a_shared_purchase_forced_is_used_somewhere() -> None:
         step["alternative"] = [{"name": "cooled", "uses": "cooler", "capability": {"sigma_level": 4.5}}]
     plan = make_plan(scenario_from_dict(scenario), with_=["cooler"])
     assert [bought.name for bought in plan.purchases] == ["cooler"]
-    assert any(step.alternatives == ("cooled",) for step in plan.steps)
+    assert any(step.alternatives == ("cooled",) for step in plan.rows)
     assert plan.cost_of_restraint is not None
     assert plan.cost_of_restraint > 100_000.0
     with pytest.raises(RangeError, match="'turn: cooled', 'press: cooled'"):

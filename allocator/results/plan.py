@@ -102,7 +102,6 @@ class BestReachable:
     binding: tuple[Binding, ...]
 
 
-@shown
 @dataclass(frozen=True)
 class Restraint:
     """What the plan was told to keep to, and what the plan would be without it (None where it misses the target)."""
@@ -113,6 +112,7 @@ class Restraint:
     """Of the split yield."""
 
 
+@shown
 @dataclass(frozen=True)
 class Plan:
     """The cheapest plan that meets the target, or (reached False) the best that can be reached."""
