@@ -13,18 +13,20 @@ from typing import TYPE_CHECKING, Any
 from allocator.shown import Speaker, speaks_for_results
 
 if TYPE_CHECKING:
+    from allocator.case import capital_case
     from allocator.check import check_scenario
     from allocator.compare import compare_scenarios
     from allocator.errors import AllocatorError, InputError
     from allocator.nines import price_nines
     from allocator.plan import make_plan
-    from allocator.results import Check, Comparison, Nines, Plan, Today
+    from allocator.results import CapitalCase, Check, Comparison, Nines, Plan, Today
     from allocator.scenario.model import Scenario
     from allocator.scenario.read import read_scenario, scenario_from_dict
     from allocator.today import see_today
 
 _HOMES = {
     "AllocatorError": "errors",
+    "CapitalCase": "results",
     "Check": "results",
     "Comparison": "results",
     "InputError": "errors",
@@ -32,6 +34,7 @@ _HOMES = {
     "Plan": "results",
     "Scenario": "scenario.model",
     "Today": "results",
+    "capital_case": "case",
     "check_scenario": "check",
     "compare_scenarios": "compare",
     "make_plan": "plan",
@@ -43,6 +46,7 @@ _HOMES = {
 
 __all__ = [
     "AllocatorError",
+    "CapitalCase",
     "Check",
     "Comparison",
     "InputError",
@@ -50,6 +54,7 @@ __all__ = [
     "Plan",
     "Scenario",
     "Today",
+    "capital_case",
     "check_scenario",
     "compare_scenarios",
     "make_plan",

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from allocator.case import capital_case
 from allocator.check import check_scenario
 from allocator.compare import compare_scenarios
 from allocator.nines import price_nines
@@ -10,6 +11,7 @@ from allocator.scenario.read import read_scenario
 from allocator.today import see_today
 
 __all__ = [
+    "capital_case",
     "check_scenario",
     "compare_scenarios",
     "make_plan",

@@ -6,6 +6,7 @@ import contextlib
 import io
 import os
 import re
+import shlex
 import subprocess
 import sys
 from pathlib import Path
@@ -25,7 +26,7 @@ ROUNDING = 1e-9
 
 
 def run(arguments: str) -> str:
-    command = [sys.executable, "-m", "allocator", *arguments.split()]
+    command = [sys.executable, "-m", "allocator", *shlex.split(arguments)]
     environment = {**os.environ, "COLUMNS": "80", "NO_COLOR": "1"}
     return subprocess.run(command, capture_output=True, text=True, cwd=ROOT, env=environment, check=True).stdout
 

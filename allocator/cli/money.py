@@ -1,4 +1,4 @@
-"""The commands of those who answer for the money: compare."""
+"""The commands of those who answer for the money: compare, case."""
 
 from __future__ import annotations
 
@@ -7,7 +7,7 @@ from typing import Annotated
 
 import typer
 
-from allocator.cli.app import OUT_OF_REACH, AsCsv, AsJson, app, form_of, load, refused, show
+from allocator.cli.app import OUT_OF_REACH, AsCsv, AsJson, File, app, form_of, load, refused, show
 
 Files = Annotated[list[Path], typer.Argument(metavar="FILE FILE...", help="Scenario files.", show_default=False)]
 
@@ -23,4 +23,24 @@ def compare(files: Files, as_json: AsJson = False, as_csv: AsCsv = False) -> Non
     answer = api.compare_scenarios([load(file) for file in files])
     show(answer, form)
     if not all(case.plan.reached for case in answer.cases):
+        raise typer.Exit(OUT_OF_REACH)
+
+
+@app.command()
+def case(
+    file: File,
+    name: Annotated[
+        str | None,
+        typer.Argument(metavar="[NAME]", help="An alternative, purchase or law (STEP: NAME); without it, the plan."),
+    ] = None,
+    as_json: AsJson = False,
+    as_csv: AsCsv = False,
+) -> None:
+    """Make the capital case of the plan, or of one purchase, as in: allocator case line.toml 'new press'"""
+    form = form_of(as_json, as_csv)
+    from allocator import api
+
+    answer = api.capital_case(load(file), name)
+    show(answer, form)
+    if not answer.reached:
         raise typer.Exit(OUT_OF_REACH)

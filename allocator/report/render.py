@@ -6,6 +6,8 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any, Literal
 
+from allocator.report.case_data import case_csv, case_json
+from allocator.report.case_text import case_text
 from allocator.report.check_text import check_text
 from allocator.report.compare_data import compare_csv, compare_json
 from allocator.report.compare_text import compare_text
@@ -16,7 +18,7 @@ from allocator.report.paper import LOG_WIDTH
 from allocator.report.plain import to_json
 from allocator.report.plan_text import plan_text
 from allocator.report.today_text import today_text
-from allocator.results import Check, Comparison, Nines, Plan, Today
+from allocator.results import CapitalCase, Check, Comparison, Nines, Plan, Today
 
 Form = Literal["text", "json", "csv"]
 
@@ -33,6 +35,7 @@ _RENDERERS: dict[type, _Renderers] = {
     Nines: _Renderers(nines_text, nines_json, nines_csv),
     Today: _Renderers(today_text, today_json, today_csv),
     Check: _Renderers(check_text, check_json, check_csv),
+    CapitalCase: _Renderers(case_text, case_json, case_csv),
     Comparison: _Renderers(compare_text, compare_json, compare_csv),
 }
 

@@ -4,6 +4,7 @@
 made when it is first asked for.
 """
 
+from allocator.results.capital import Asset, Capacity, CapitalCase, CashCase, CashYear, Lever, Savings, ScrapView
 from allocator.results.compare import Compared, Comparison, StepAcross, TakenAcross
 from allocator.results.line import Caution, Level, Money, TodayLine, Yields
 from allocator.results.nines import Nines, NinesPoint
@@ -12,14 +13,20 @@ from allocator.results.table import as_table, records
 from allocator.results.today import Check, StepToday, Today, Understood
 
 __all__ = [
+    "Asset",
     "BestReachable",
     "Binding",
     "Bought",
+    "Capacity",
+    "CapitalCase",
+    "CashCase",
+    "CashYear",
     "Caution",
     "Check",
     "Compared",
     "Comparison",
     "Level",
+    "Lever",
     "Money",
     "Nines",
     "NinesPoint",
@@ -27,6 +34,8 @@ __all__ = [
     "Proof",
     "Restraint",
     "RuleOutcome",
+    "Savings",
+    "ScrapView",
     "StepAcross",
     "StepTarget",
     "StepToday",

@@ -1,0 +1,127 @@
+"""One way to run the line as a cost engineer sees it: its flow, its money by kind, and every single thing paid for."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from allocator import curves as cv
+from allocator.choice import Outcome
+from allocator.flow import GATE_FIELDS, Flow, Gates, Line, loads, money, run
+from allocator.money import annual_cost
+from allocator.problem import Problem, within
+from allocator.results import Asset, Money
+from allocator.scenario.model import Alternative, Costs, Law
+from allocator.standing import flow_today
+from allocator.variants import IMPROVE
+from allocator.ways import Ways, law_cost
+
+
+@dataclass(frozen=True)
+class Stand:
+    """The line run in one way; `of_step` gives the index of each asset's step, −1 for a shared purchase."""
+
+    line: Line
+    flow: Flow
+    assets: tuple[Asset, ...]
+    of_step: tuple[int, ...]
+    money: Money
+
+    def keeps(self, budgets: dict[str, float]) -> bool:
+        """Return whether all targets are met."""
+        used = loads(self.line, self.flow)
+        return all(within(used[name], budget) for name, budget in budgets.items())
+
+
+def stand_today(problem: Problem) -> Stand:
+    """Return the line as it stands: nothing bought, nothing improved."""
+    return _stand(problem, flow_today(problem), [])
+
+
+def stand_of(problem: Problem, ways: Ways, outcome: Outcome) -> Stand:
+    """Return the line as an evaluated choice among some ways runs it."""
+    owned = [*_shared(problem, outcome.bought)]
+    for i, (row, z) in enumerate(zip(outcome.choice.rows.tolist(), outcome.choice.z.tolist(), strict=True)):
+        owned += _at_step(problem, ways, i, row, z)
+    return _stand(problem, outcome.flow, owned)
+
+
+def stand_with_only(problem: Problem, rows: dict[int, tuple[Ways, int, float]]) -> Stand:
+    """Return today's line with some steps run otherwise: by step index a table of ways, its row and the level."""
+    today = problem.options.today
+    intensity, gates = today.intensity(), today.gates()
+    figures = {name: getattr(gates, name).copy() for name in GATE_FIELDS}
+    used = np.zeros(len(problem.options.purchase_names), dtype=bool)
+    owned: list[tuple[Asset, int]] = []
+    for i, (ways, row, z) in rows.items():
+        one = ways.take(np.array([row]))
+        intensity[i] = cv.intensity(one.curves, np.array([z]))[0]
+        for name in GATE_FIELDS:
+            figures[name][i] = getattr(one.gates, name)[0]
+        used |= one.uses[0]
+        owned += _at_step(problem, ways, i, row, z)
+    return _stand(problem, run(problem.line, intensity, Gates(**figures)), [*_shared(problem, used), *owned])
+
+
+def _stand(problem: Problem, flow: Flow, owned: list[tuple[Asset, int]]) -> Stand:
+    rate = rate_of(problem)
+    paid = sum(yearly(asset, rate) for asset, _ in owned)
+    return Stand(
+        problem.line, flow, tuple(a for a, _ in owned), tuple(i for _, i in owned), money(problem.line, flow, paid)
+    )
+
+
+def rate_of(problem: Problem) -> float:
+    """Return the discount rate; nothing has a price where none is stated."""
+    return problem.scenario.demand.discount_rate or 0.0
+
+
+def yearly(asset: Asset, rate: float) -> float:
+    """Return what an asset costs per year at a discount rate [currency/year]."""
+    owning = annual_cost(asset.price, asset.trade_in, asset.resale, rate, asset.life_years)
+    return owning + asset.per_year + asset.per_item + asset.price_allowance
+
+
+def _asset(problem: Problem, name: str, i: int, costs: Costs, items: float) -> tuple[Asset, int]:
+    demand = problem.scenario.demand
+    life = costs.life_years or demand.years or 1.0
+    own = costs if isinstance(costs, Alternative) else None
+    return Asset(
+        name=name, step=None if i < 0 else problem.scenario.step[i].name, price=costs.price, trade_in=costs.trade_in,
+        resale=costs.resale, life_years=life, per_year=costs.per_year,
+        per_item=0.0 if own is None else own.per_item * items,
+        price_allowance=0.0 if own is None else own.price_allowance * problem.line.shipped,
+        equivalent_annual_cost=annual_cost(costs.price, costs.trade_in, costs.resale, rate_of(problem), life),
+    ), i  # fmt: skip
+
+
+def _shared(problem: Problem, bought: NDArray[np.bool_]) -> Iterator[tuple[Asset, int]]:
+    for purchase, taken in zip(problem.scenario.purchase, bought.tolist(), strict=True):
+        if taken:
+            yield _asset(problem, purchase.name, -1, purchase, 0.0)
+
+
+def _at_step(problem: Problem, ways: Ways, i: int, row: int, z: float) -> Iterator[tuple[Asset, int]]:
+    step, items = problem.scenario.step[i], float(problem.line.per_finished[i] * problem.line.shipped)
+    chosen = ways.text[row].alternatives
+    for alternative in step.alternative:
+        if alternative.name in chosen:
+            yield _asset(problem, alternative.name, i, alternative, items)
+    cost = float(law_cost(ways, np.array([row]), np.array([z]))[0])
+    if step.improve is not None and cost > 0.0:
+        yield _law_asset(problem, step.improve, i, cost, float(ways.capital_per_cost[row])), i
+
+
+def _law_asset(problem: Problem, law: Law, i: int, cost: float, capital_per_cost: float) -> Asset:
+    """Return a law's yearly cost as what it is paid as: a price, or so much a year, or so much an item."""
+    per_item = law.per_item is not None or any(point.per_item is not None for point in law.points)
+    priced = capital_per_cost > 0.0
+    return Asset(
+        name=IMPROVE, step=problem.scenario.step[i].name, price=cost * capital_per_cost, trade_in=0.0, resale=0.0,
+        life_years=law.life_years or problem.scenario.demand.years or 1.0,
+        per_year=cost if not (priced or per_item) else 0.0, per_item=cost if per_item else 0.0, price_allowance=0.0,
+        equivalent_annual_cost=cost if priced else 0.0,
+    )  # fmt: skip
