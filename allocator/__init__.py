@@ -17,9 +17,10 @@ if TYPE_CHECKING:
     from allocator.check import check_scenario
     from allocator.compare import compare_scenarios
     from allocator.errors import AllocatorError, InputError
+    from allocator.measure import measure_capability
     from allocator.nines import price_nines
     from allocator.plan import make_plan
-    from allocator.results import CapitalCase, Check, Comparison, Nines, Plan, Today
+    from allocator.results import CapitalCase, Check, Comparison, Nines, Plan, Study, Today
     from allocator.scenario.model import Scenario
     from allocator.scenario.read import read_scenario, scenario_from_dict
     from allocator.today import see_today
@@ -33,11 +34,13 @@ _HOMES = {
     "Nines": "results",
     "Plan": "results",
     "Scenario": "scenario.model",
+    "Study": "results",
     "Today": "results",
     "capital_case": "case",
     "check_scenario": "check",
     "compare_scenarios": "compare",
     "make_plan": "plan",
+    "measure_capability": "measure",
     "price_nines": "nines",
     "read_scenario": "scenario.read",
     "scenario_from_dict": "scenario.read",
@@ -53,11 +56,13 @@ __all__ = [
     "Nines",
     "Plan",
     "Scenario",
+    "Study",
     "Today",
     "capital_case",
     "check_scenario",
     "compare_scenarios",
     "make_plan",
+    "measure_capability",
     "price_nines",
     "read_scenario",
     "scenario_from_dict",

@@ -5,6 +5,7 @@ from __future__ import annotations
 from allocator.case import capital_case
 from allocator.check import check_scenario
 from allocator.compare import compare_scenarios
+from allocator.measure import measure_capability
 from allocator.nines import price_nines
 from allocator.plan import make_plan
 from allocator.scenario.read import read_scenario
@@ -15,6 +16,7 @@ __all__ = [
     "check_scenario",
     "compare_scenarios",
     "make_plan",
+    "measure_capability",
     "price_nines",
     "read_scenario",
     "see_today",

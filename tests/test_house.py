@@ -11,9 +11,9 @@ import pytest
 ROOT = Path(__file__).parent.parent
 LONGEST_FILE = 400
 PUBLIC = {
-    "AllocatorError", "CapitalCase", "Check", "Comparison", "InputError", "Nines", "Plan", "Scenario", "Today",
-    "capital_case", "check_scenario", "compare_scenarios", "make_plan", "price_nines", "read_scenario",
-    "scenario_from_dict", "see_today",
+    "AllocatorError", "CapitalCase", "Check", "Comparison", "InputError", "Nines", "Plan", "Scenario", "Study",
+    "Today", "capital_case", "check_scenario", "compare_scenarios", "make_plan", "measure_capability", "price_nines",
+    "read_scenario", "scenario_from_dict", "see_today",
 }  # fmt: skip
 HEAVY = ("numpy", "scipy", "cvxpy", "pandas", "pydantic", "rich", "matplotlib")
 

@@ -65,6 +65,10 @@ class Paper:
     def say(self, text: str) -> None:
         self._console.print(Text(clean(text), overflow="fold"), width=self._prose)
 
+    def verbatim(self, text: str) -> None:
+        """Print a line to be copied, whole even where it is wider than the paper."""
+        self._console.print(Text(clean(text)), soft_wrap=True)
+
     def bullets(self, items: Sequence[str], most: int = MOST_BULLETS) -> None:
         grid = Table.grid(padding=(0, 1, 0, 0))
         grid.add_column(width=1)

@@ -13,12 +13,14 @@ from allocator.report.compare_data import compare_csv, compare_json
 from allocator.report.compare_text import compare_text
 from allocator.report.csv_out import check_csv, nines_csv, plan_csv, today_csv
 from allocator.report.json_out import check_json, nines_json, plan_json, today_json
+from allocator.report.measure_data import measure_csv, measure_json
+from allocator.report.measure_text import measure_text
 from allocator.report.nines_text import nines_text
 from allocator.report.paper import LOG_WIDTH
 from allocator.report.plain import to_json
 from allocator.report.plan_text import plan_text
 from allocator.report.today_text import today_text
-from allocator.results import CapitalCase, Check, Comparison, Nines, Plan, Today
+from allocator.results import CapitalCase, Check, Comparison, Nines, Plan, Study, Today
 
 Form = Literal["text", "json", "csv"]
 
@@ -36,6 +38,7 @@ _RENDERERS: dict[type, _Renderers] = {
     Today: _Renderers(today_text, today_json, today_csv),
     Check: _Renderers(check_text, check_json, check_csv),
     CapitalCase: _Renderers(case_text, case_json, case_csv),
+    Study: _Renderers(measure_text, measure_json, measure_csv),
     Comparison: _Renderers(compare_text, compare_json, compare_csv),
 }
 

@@ -9,6 +9,7 @@ from allocator.results.compare import Compared, Comparison, StepAcross, TakenAcr
 from allocator.results.line import Caution, Level, Money, TodayLine, Yields
 from allocator.results.nines import Nines, NinesPoint
 from allocator.results.plan import BestReachable, Binding, Bought, Plan, Proof, Restraint, RuleOutcome, StepTarget
+from allocator.results.study import Fit, Index, Indices, Outlier, Signal, Study
 from allocator.results.table import as_table, records
 from allocator.results.today import Check, StepToday, Today, Understood
 
@@ -25,20 +26,26 @@ __all__ = [
     "Check",
     "Compared",
     "Comparison",
+    "Fit",
+    "Index",
+    "Indices",
     "Level",
     "Lever",
     "Money",
     "Nines",
     "NinesPoint",
+    "Outlier",
     "Plan",
     "Proof",
     "Restraint",
     "RuleOutcome",
     "Savings",
     "ScrapView",
+    "Signal",
     "StepAcross",
     "StepTarget",
     "StepToday",
+    "Study",
     "TakenAcross",
     "Today",
     "TodayLine",

@@ -2,16 +2,14 @@
 
 from __future__ import annotations
 
-import math
-from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 
-from allocator.errors import InputError
-from allocator.scenario.faults import Damage, Finding, Owner, did_you_mean, shown
-from allocator.scenario.tables import read_cells, read_text
+from allocator.scenario.faults import Damage, Finding, Owner, shown
+from allocator.scenario.measurements import Measurements, UnusableError, read_measurements
+from allocator.spread import pooled_within
 
 COUNTED = ("mean", "std", "sample")
 """What the measurements themselves say; stating it as well could only contradict them."""
@@ -30,68 +28,36 @@ def fill_from_data(table: Any, owner: Owner, folder: Path | None, findings: list
     if stated:
         found = f"{' and '.join(stated)} beside data"
         findings.append(Finding(owner, "capability", found, "leave them out: they are counted from the file"))
-    values = _values(capability, owner, folder, findings)
+    try:
+        measured = _measured(capability, folder)
+    except UnusableError as wrong:
+        findings.append(Finding(owner, f"capability.{wrong.key}", wrong.found, wrong.allowed))
     if len(findings) > before:
         damage.add((owner, "capability"))
         return table
-    statistics = {"mean": float(np.mean(values)), "std": float(np.std(values, ddof=1)), "sample": len(values)}
-    return {**table, "capability": {**capability, **statistics}}
+    return {**table, "capability": {**capability, **statistics(measured)}}
 
 
-def _values(capability: dict[str, Any], owner: Owner, folder: Path | None, findings: list[Finding]) -> list[float]:
-    """Return the numbers of the column, or [] after reporting why there are none to use."""
+def statistics(measured: Measurements) -> dict[str, Any]:
+    """Return the figures that a capability takes from measurements: the mean, the spread and the sample.
 
-    def refuse(key: str, found: str, allowed: str) -> list[float]:
-        findings.append(Finding(owner, f"capability.{key}", found, allowed))
-        return []
+    The spread is that within subgroups where they are named, else the total one, whatever the order of the parts.
+    """
+    values, subgroups = np.array(measured.values), measured.subgroups
+    std = float(np.std(values, ddof=1)) if subgroups is None else pooled_within(values, subgroups)[0]
+    return {"mean": float(np.mean(values)), "std": std, "sample": len(values)}
 
-    name = capability["data"]
+
+def _measured(capability: dict[str, Any], folder: Path | None) -> Measurements:
+    name, names = capability["data"], {key: capability.get(key) for key in ("column", "subgroup")}
     if folder is None:
-        return refuse("data", shown(name), "no folder is known to look in: give lsl, usl, mean, std and sample instead")
-    try:
-        cells = [row for row in read_cells(read_text(folder / name, name), name) if any(map(str.strip, row))]
-    except InputError as error:
-        return refuse("data", f"'{name}': {error.faults[0].found}", error.faults[0].allowed)
-    header = [cell.strip() for cell in cells[0]]
-    position = _position(capability.get("column"), header, findings, owner)
-    if position is None:
-        return []
-    headless = len(header) == 1 and capability.get("column") is None and _number(header[0]) is not None
-    return _checked([row[position] if position < len(row) else "" for row in cells], headless, name, refuse)
-
-
-def _position(column: object, header: Sequence[str], findings: list[Finding], owner: Owner) -> int | None:
-    if column is None and len(header) == 1:
-        return 0
-    if column in header:
-        return header.index(str(column))
-    allowed = did_you_mean(str(column or ""), header, f"name one of the columns {', '.join(header)}")
-    found = "nothing" if column is None else f"{shown(column)}, which is no column of the file"
-    findings.append(Finding(owner, "capability.column", found, allowed))
-    return None
-
-
-def _checked(column: list[str], headless: bool, name: str, refuse: Any) -> list[float]:
-    start = 0 if headless else 1
-    cells = [(row, cell.strip()) for row, cell in enumerate(column[start:], start=start + 1) if cell.strip()]
-    wrong = [(row, cell) for row, cell in cells if _number(cell) is None]
-    if wrong:
-        more = f" and {len(wrong) - 3:,} more" if len(wrong) > 3 else ""
-        found = ", ".join(f"{cell!r} in row {row}" for row, cell in wrong[:3]) + more
-        return list(refuse("data", f"'{name}': {found}", "give numbers with a decimal point, or delete the row"))
-    values = [float(cell) for _, cell in cells]
-    if len(values) < 2:
-        found = f"'{name}': {len(values)} measurement" + ("" if len(values) == 1 else "s")
-        return list(refuse("data", found, "a spread needs at least 2 measurements"))
-    if float(np.std(values)) == 0.0:
-        found = f"'{name}': all {len(values)} measurements equal {values[0]:g}"
-        return list(refuse("data", found, "a process has some spread: measure with a finer gauge"))
-    return values
-
-
-def _number(cell: str) -> float | None:
-    try:
-        value = float(cell)
-    except ValueError:
-        return None
-    return value if math.isfinite(value) else None
+        allowed = "no folder is known to look in: give lsl, usl, mean, std and sample instead"
+        raise UnusableError("data", shown(name), allowed)
+    for key, value in names.items():
+        if value is not None and not isinstance(value, str):
+            raise UnusableError(key, shown(value), "give the name of a column, a text in quotes")
+    measured = read_measurements(folder / name, name, names["column"], names["subgroup"])
+    if measured.subgroups is not None and pooled_within(np.array(measured.values), measured.subgroups)[0] == 0.0:
+        found = f"'{name}': all parts of each subgroup are equal"
+        raise UnusableError("subgroup", found, "measure with a finer gauge, or leave subgroup out")
+    return measured

@@ -27,7 +27,7 @@ FAMILIES: dict[str, frozenset[str]] = {
     "item_yield": frozenset({"item_yield"}),
     "ppm": frozenset({"ppm"}),
     "count": frozenset({"bad", "of"}),
-    "data": frozenset({"data", "column"}),
+    "data": frozenset({"data", "column", "subgroup"}),
 }
 ORDER = [key for family in FAMILIES.values() for key in sorted(family, key="lsl usl mean std bad of".find)]
 BESIDE = ("shift", "k", "sides", "sample")
@@ -84,7 +84,8 @@ def _incomplete(family: str, keys: frozenset[str]) -> list[Remark]:
 
 def _incomplete_data(keys: frozenset[str], limits: Sequence[str]) -> list[Remark]:
     if "data" not in keys:
-        return [("data", "nothing", 'column needs data = "file.csv" beside it')]
+        alone = "column" if "column" in keys else "subgroup"
+        return [("data", "nothing", f'{alone} needs data = "file.csv" beside it')]
     return [] if limits else [("", "data without a limit", "give lsl, usl or both beside it")]
 
 

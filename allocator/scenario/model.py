@@ -63,6 +63,7 @@ class Capability(Table):
     of: Count | None = None
     data: str | None = None
     column: str | None = None
+    subgroup: str | None = None
     shift: Nonnegative | None = None
     k: BelowOne | None = None
     sides: Literal[1, 2] | None = None
