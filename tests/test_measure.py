@@ -239,7 +239,7 @@ def test_the_line_and_the_file_mean_the_same_level(tmp_path: Path, options: dict
     def sigma(capability: dict[str, Any]) -> float:
         step = {"name": "a", "scrap_cost": 1.0, "capability": capability}
         scenario = scenario_from_dict({"demand": {"shipped_per_year": 1.0}, "step": [step]}, folder=tmp_path)
-        return see_today(scenario).steps[0].level.sigma_level
+        return see_today(scenario).rows[0].level.sigma_level
 
     assert sigma(pasted) == pytest.approx(sigma(of_file), rel=1e-9)
     spread = study.std_within if subgroups else study.std_total
