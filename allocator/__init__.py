@@ -21,6 +21,7 @@ if TYPE_CHECKING:
     from allocator.nines import price_nines
     from allocator.plan import make_plan
     from allocator.results import CapitalCase, Check, Comparison, Nines, Plan, Study, Today
+    from allocator.scenario.book_out import write_workbook
     from allocator.scenario.model import Scenario
     from allocator.scenario.read import read_scenario, scenario_from_dict
     from allocator.today import see_today
@@ -45,6 +46,7 @@ _HOMES = {
     "read_scenario": "scenario.read",
     "scenario_from_dict": "scenario.read",
     "see_today": "today",
+    "write_workbook": "scenario.book_out",
 }
 
 __all__ = [
@@ -67,6 +69,7 @@ __all__ = [
     "read_scenario",
     "scenario_from_dict",
     "see_today",
+    "write_workbook",
 ]
 __version__ = "0.1.0"
 

@@ -8,6 +8,7 @@ from allocator.compare import compare_scenarios
 from allocator.measure import measure_capability
 from allocator.nines import price_nines
 from allocator.plan import make_plan
+from allocator.scenario.book_out import write_workbook
 from allocator.scenario.read import read_scenario
 from allocator.today import see_today
 
@@ -20,4 +21,5 @@ __all__ = [
     "price_nines",
     "read_scenario",
     "see_today",
+    "write_workbook",
 ]

@@ -63,7 +63,7 @@ class Api:
     def check_scenario(self, scenario: Any) -> Any:
         return self.answer(a_check())
 
-    def write_starter(self, path: Path) -> None:
+    def write_starter(self, path: Path, as_workbook: bool = False) -> None:
         path.write_text("title = 'a start'\n")
 
 

@@ -13,9 +13,9 @@ LONGEST_FILE = 400
 PUBLIC = {
     "AllocatorError", "CapitalCase", "Check", "Comparison", "InputError", "Nines", "Plan", "Scenario", "Study",
     "Today", "capital_case", "check_scenario", "compare_scenarios", "make_plan", "measure_capability", "price_nines",
-    "read_scenario", "scenario_from_dict", "see_today",
+    "read_scenario", "scenario_from_dict", "see_today", "write_workbook",
 }  # fmt: skip
-HEAVY = ("numpy", "scipy", "cvxpy", "pandas", "pydantic", "rich", "matplotlib")
+HEAVY = ("numpy", "scipy", "cvxpy", "pandas", "pydantic", "rich", "matplotlib", "openpyxl")
 
 
 def test_layers_point_one_way(monkeypatch: pytest.MonkeyPatch) -> None:

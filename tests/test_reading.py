@@ -75,7 +75,9 @@ def test_file_that_is_none(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> N
     assert faults_of(read_scenario, "latin.toml") == [
         "latin.toml: found bytes on line 3 that are no UTF-8; save the file as UTF-8"
     ]
-    assert "steps_from" in faults_of(read_scenario, "line.xlsx")[0]
+    (tmp_path / "line.csv").write_bytes(b"name,cp\n")
+    assert "no workbook" in faults_of(read_scenario, "line.xlsx")[0]
+    assert "steps_from" in faults_of(read_scenario, "line.csv")[0]
 
 
 @pytest.mark.parametrize(

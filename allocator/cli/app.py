@@ -65,7 +65,9 @@ app = typer.Typer(
 )
 
 
-File = Annotated[Path, typer.Argument(metavar="FILE", help="Scenario file (TOML).", show_default=False)]
+File = Annotated[
+    Path, typer.Argument(metavar="FILE", help="Scenario file (TOML, or a workbook .xlsx).", show_default=False)
+]
 AsJson = Annotated[bool, typer.Option("--json", help="Print the answer as JSON, at full precision.")]
 AsCsv = Annotated[bool, typer.Option("--csv", help="Print the table as CSV, at full precision.")]
 

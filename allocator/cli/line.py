@@ -25,13 +25,18 @@ from allocator.errors import Fault, InputError
 
 
 @app.command()
-def new(file: File) -> None:
+def new(
+    file: File,
+    xlsx: Annotated[
+        bool, typer.Option("--xlsx", help="Write a workbook to be filled in, with a sheet per table.")
+    ] = False,
+) -> None:
     """Write a small commented scenario to start from, as in: allocator new line.toml"""
     if file.exists():
         raise InputError([Fault(str(file), "", "a file of that name", "name a new file; nothing was overwritten")])
     from allocator.scenario.starter import write_starter
 
-    write_starter(file)
+    write_starter(file, as_workbook=xlsx)
     typer.echo(f"Wrote {file}. Next: allocator check {file}")
 
 

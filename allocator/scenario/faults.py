@@ -44,11 +44,14 @@ class Places:
         The names that owners bear, where they bear one.
     rows : dict
         (file, row) of what came from a table, row 1 being the header.
+    sheets : bool
+        Whether the file is a workbook, whose tables are sheets.
     """
 
     file: str
     names: dict[Owner, str] = field(default_factory=dict)
     rows: dict[Owner, tuple[str, int]] = field(default_factory=dict)
+    sheets: bool = False
 
     def file_of(self, owner: Owner) -> str:
         """Return the file in which the owner was written."""
@@ -66,7 +69,7 @@ class Places:
         if owner in self.names:
             return f"{kind} '{self.names[owner]}'"
         if len(owner) == 1:
-            return f"[{kind}]"
+            return f"sheet '{kind}'" if self.sheets else f"[{kind}]"
         return f"{kind} {int(owner[-1]) + 1}"
 
 

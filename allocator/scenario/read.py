@@ -1,23 +1,26 @@
 """What does a scenario file say: read it with its tables, check it twice, and report everything wrong at once.
 
-Rows of `steps_from` stand before the [[step]] tables, as that key itself does in the file (TOML has its plain keys
-first); rows of `alternatives_from` stand after a step's own [[step.alternative]] tables.
+Rows of `steps_from` stand before the [[step]] tables (in a workbook, the sheet `step`), as that key itself does in the
+file (TOML has its plain keys first); rows of `alternatives_from` stand after a step's own [[step.alternative]] tables.
 """
 
 from __future__ import annotations
 
 import re
 import tomllib
+from collections.abc import Iterator
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
 from allocator.errors import Fault, InputError
+from allocator.scenario.book import read_book
 from allocator.scenario.cross import cross_findings
 from allocator.scenario.data import fill_from_data
 from allocator.scenario.faults import Damage, Finding, Owner, Places, did_you_mean, hint, shown, to_faults
 from allocator.scenario.keys import bulk, read_record, read_steps
-from allocator.scenario.model import Alternative, Head, Scenario, Step
+from allocator.scenario.model import Alternative, Head, Purchase, Quote, Scenario, Step, Table
+from allocator.scenario.sheets import is_workbook
 from allocator.scenario.tables import TableRead, read_table, read_text
 from allocator.scenario.target import read_target
 
@@ -34,10 +37,12 @@ class _Reading:
     faults: list[Fault] = field(default_factory=list)
     findings: list[Finding] = field(default_factory=list)
     damage: Damage = field(default_factory=set)
+    tables: dict[type[Table], TableRead] = field(default_factory=dict)
+    """Sheets of rows, when the scenario is a workbook."""
 
 
 def read_scenario(path: str | Path) -> Scenario:
-    """Return the scenario in a TOML file, its tables read and everything checked.
+    """Return the scenario in a TOML file or a workbook (.xlsx), its tables read and everything checked.
 
     Parameters
     ----------
@@ -50,8 +55,10 @@ def read_scenario(path: str | Path) -> Scenario:
         With every fault found, not only the first.
     """
     path = Path(path)
-    if path.suffix.lower() in (".xlsx", ".xls", ".csv"):
-        allowed = 'give the scenario file (TOML); it names its tables by steps_from = "steps.csv"'
+    if is_workbook(path):
+        return _read_workbook(path)
+    if path.suffix.lower() == ".csv":
+        allowed = 'give the scenario file (TOML or .xlsx); it names its tables by steps_from = "steps.csv"'
         raise InputError([Fault(path.name, "", "a table", allowed)])
     text = read_text(path, path.name)
     try:
@@ -62,6 +69,19 @@ def read_scenario(path: str | Path) -> Scenario:
         raise InputError([Fault(path.name, "", "brackets nested without end", "close them")]) from None
     with bulk():
         return _read(data, _Reading(Places(path.name), path.parent))
+
+
+def _read_workbook(path: Path) -> Scenario:
+    book = read_book(path)
+    reading = _Reading(Places(path.name, sheets=True), path.parent, faults=book.faults, tables=book.tables)
+    purchases = book.tables.get(Purchase)
+    if purchases is not None:
+        book.data["purchase"] = purchases.records
+        for i, row in enumerate(purchases.rows):
+            reading.places.rows[("purchase", i)] = (purchases.file, row)
+            reading.damage.update((("purchase", i), topic) for topic in purchases.lost)
+    with bulk():
+        return _read(book.data, reading)
 
 
 def _syntax_fault(name: str, text: str, message: str) -> Fault:
@@ -117,6 +137,7 @@ def _read(data: dict[str, Any], reading: _Reading) -> Scenario:
     data = _with_known_keys(data, reading)
     _collect_steps(data, reading)
     _collect_alternatives(data, reading)
+    _collect_points(reading)
     _name_places(reading)
     _fill_measurements(reading)
     head = _read_head(data, reading)
@@ -157,41 +178,41 @@ def _read_head(data: dict[str, Any], reading: _Reading) -> Head:
 
 
 def _collect_steps(data: dict[str, Any], reading: _Reading) -> None:
-    table = _table(data, "steps_from", Step, reading)
-    if table is not None:
-        reading.steps += table.records
-        for i, row in enumerate(table.rows):
-            reading.places.rows[("step", i)] = (table.file, row)
-            reading.damage.update((("step", i), topic) for topic in table.lost)
+    named = _table(data, "steps_from", Step, reading)
+    for table in filter(None, (named, reading.tables.get(Step))):
+        for record, row in zip(table.records, table.rows, strict=True):
+            owner: Owner = ("step", len(reading.steps))
+            reading.steps.append(record)
+            reading.places.rows[owner] = (table.file, row)
+            reading.damage.update((owner, topic) for topic in table.lost)
     own = data.get("step", [])
     if not isinstance(own, list):
         reading.findings.append(Finding((), "step", shown(own), "write every step as [[step]], in double brackets"))
         own = []
     reading.steps += own
-    unreadable = "steps_from" in data and table is None
+    unreadable = "steps_from" in data and named is None
     if unreadable:
         reading.damage.update({(("step", -1), topic) for topic in ("name", "cost", "inspection")})
     elif not reading.steps and not any(finding.key == "step" for finding in reading.findings):
-        allowed = "add a [[step]] for every step of the line, in its order"
-        reading.findings.append(Finding((), "step", "no step", allowed))
+        form = "a row on the sheet `step`" if reading.places.sheets else "a [[step]]"
+        reading.findings.append(Finding((), "step", "no step", f"add {form} for every step of the line, in its order"))
 
 
-def _table(
-    data: dict[str, Any], key: str, record: type[Step] | type[Alternative], reading: _Reading
-) -> TableRead | None:
+def _table(data: dict[str, Any], key: str, record: type[Table], reading: _Reading) -> TableRead | None:
     """Return the table that a key names, None without one or after reporting why it cannot be read."""
     if key not in data:
         return None
     name = data[key]
     if not isinstance(name, str) or not name:
-        reading.findings.append(Finding((), key, shown(name), f'name a CSV file, as {key} = "table.csv"'))
+        allowed = f'name a CSV file or a sheet, as {key} = "table.csv" or "book.xlsx#table"'
+        reading.findings.append(Finding((), key, shown(name), allowed))
         return None
     if reading.folder is None:
         allowed = "no folder is known to look in: give the rows as step tables"
         reading.findings.append(Finding((), key, shown(name), allowed))
         return None
     try:
-        table = read_table(reading.folder / name, name, record)
+        table = read_table(reading.folder, name, record)
     except InputError as error:
         reading.faults += error.faults
         return None
@@ -200,25 +221,41 @@ def _table(
 
 
 def _collect_alternatives(data: dict[str, Any], reading: _Reading) -> None:
-    table = _table(data, "alternatives_from", Alternative, reading)
+    named = _table(data, "alternatives_from", Alternative, reading)
+    for table in filter(None, (reading.tables.get(Alternative), named)):
+        for i, record, row in _of_steps(table, reading):
+            own = reading.steps[i].get("alternative", [])
+            if not isinstance(own, list):
+                continue
+            reading.steps[i] = {**reading.steps[i], "alternative": [*own, record]}
+            owner = ("alternative", i, len(own))
+            reading.places.rows[owner] = (table.file, row)
+            reading.damage.update((owner, topic) for topic in table.lost)
+
+
+def _collect_points(reading: _Reading) -> None:
+    """Give the offers on their own sheet to the laws of their steps."""
+    table = reading.tables.get(Quote)
     if table is None:
         return
+    for i, record, _ in _of_steps(table, reading):
+        law = reading.steps[i].get("improve", {})
+        if isinstance(law, dict):
+            reading.steps[i] = {**reading.steps[i], "improve": {**law, "points": [*law.get("points", []), record]}}
+            reading.damage.update((("step", i), "improve") for _ in table.lost)
+
+
+def _of_steps(table: TableRead, reading: _Reading) -> Iterator[tuple[int, Any, int]]:
+    """Yield the rows of a table that belong to steps: the step's position, the record, its row; report the others."""
     index: dict[str, int] = {}
     for i, step in enumerate(reading.steps):
         if isinstance(step, dict) and isinstance(step.get("name"), str):
             index.setdefault(step["name"], i)
     for record, row, name in zip(table.records, table.rows, table.owners, strict=True):
-        if name not in index:
+        if name in index:
+            yield index[name], record, row
+        else:
             _unknown_owner(name, row, table, index, reading)
-            continue
-        i = index[name]
-        own = reading.steps[i].get("alternative", [])
-        if not isinstance(own, list):
-            continue
-        reading.steps[i] = {**reading.steps[i], "alternative": [*own, record]}
-        owner = ("alternative", i, len(own))
-        reading.places.rows[owner] = (table.file, row)
-        reading.damage.update((owner, topic) for topic in table.lost)
 
 
 def _unknown_owner(name: str, row: int, table: TableRead, index: dict[str, int], reading: _Reading) -> None:

@@ -9,7 +9,7 @@ from typing import Any
 
 from pydantic import TypeAdapter
 
-from allocator.scenario.model import LARGEST, MOST_COUNTED, Alternative, Step, Table
+from allocator.scenario.model import LARGEST, MOST_COUNTED, Table
 
 REMARKS = ("source", "evidence", "note")
 PLAIN_WORDS = {
@@ -34,8 +34,8 @@ class Spec:
         The only texts allowed, if any.
     keys : tuple of str
         The keys of a table.
-    upper : float or None
-        The upper bound, closed or open.
+    upper, lower : float or None
+        The bounds, closed or open.
     """
 
     kinds: tuple[str, ...]
@@ -43,6 +43,7 @@ class Spec:
     choices: tuple[str, ...] = ()
     keys: tuple[str, ...] = ()
     upper: float | None = None
+    lower: float | None = None
 
 
 @cache
@@ -85,8 +86,10 @@ def _spec_of(options: list[dict[str, Any]]) -> Spec:
     keys = tuple(key for option in options for key in option.get("properties", {}))
     tops = [option.get("exclusiveMaximum", option.get("maximum")) for option in options]
     ordered = tuple(k for k in keys if k not in REMARKS) + tuple(k for k in keys if k in REMARKS)
+    bottoms = [option.get("exclusiveMinimum", option.get("minimum")) for option in options]
     upper = next((top for top in tops if top is not None), None)
-    return Spec(kinds, " or ".join(map(_words, options)), choices, ordered, upper)
+    lower = next((bottom for bottom in bottoms if bottom is not None), None)
+    return Spec(kinds, " or ".join(map(_words, options)), choices, ordered, upper, lower)
 
 
 def _words(option: dict[str, Any]) -> str:
@@ -113,8 +116,8 @@ def _range(option: dict[str, Any]) -> str:
     return start + (" " if ends and not start else " and " if ends else "") + " and ".join(ends)
 
 
-def columns(record: type[Step] | type[Alternative]) -> dict[str, tuple[str, ...]]:
-    """Return the columns that a table of steps or alternatives may have, each with its path of keys.
+def columns(record: type[Table]) -> dict[str, tuple[str, ...]]:
+    """Return the columns that a table of such records may have, each with its path of keys.
 
     The figures of the capability need no prefix, unless the record has a key of that name itself.
     """

@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
-import os
-import tempfile
+import tomllib
 from pathlib import Path
 
 from allocator.errors import Fault, InputError
+from allocator.files import written_aside
+from allocator.scenario.book_out import write_workbook
+from allocator.scenario.read import scenario_from_dict
 
 STARTER = """\
 # A scenario to start from: replace the figures, then run
@@ -82,8 +84,8 @@ rework = { share = 0.60, cost = 1.50 }           # 60 % of what is found is mend
 """
 
 
-def write_starter(path: str | Path) -> None:
-    """Write the starter scenario to a new file.
+def write_starter(path: str | Path, as_workbook: bool = False) -> None:
+    """Write the starter scenario to a new file, as TOML or as a workbook to be filled in.
 
     Raises
     ------
@@ -93,20 +95,8 @@ def write_starter(path: str | Path) -> None:
     path = Path(path)
     if path.exists():
         raise InputError([Fault(str(path), "", "a file of that name", "name a new file; nothing was overwritten")])
-    # Written aside and moved into place: whoever looks never finds half a file.
-    handle, aside = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.")
-    try:
-        with os.fdopen(handle, "w", encoding="utf-8", newline="\n") as file:
-            file.write(STARTER)
-        os.chmod(aside, 0o666 & ~_umask())
-        os.replace(aside, path)
-    except BaseException:
-        os.unlink(aside)
-        raise
-
-
-def _umask() -> int:
-    """Return the permissions that new files do not get; it can only be read by setting it."""
-    mask = os.umask(0)
-    os.umask(mask)
-    return mask
+    if as_workbook:
+        write_workbook(scenario_from_dict(tomllib.loads(STARTER)), path)
+        return
+    with written_aside(path) as aside:
+        aside.write_text(STARTER, encoding="utf-8", newline="\n")

@@ -11,12 +11,14 @@ from typing import Any
 
 from allocator.errors import Fault, InputError
 from allocator.scenario.faults import SHOWN, did_you_mean, hint
-from allocator.scenario.model import Alternative, Step, Table
+from allocator.scenario.model import Alternative, Quote, Table
 from allocator.scenario.schema import columns, spec
+from allocator.scenario.sheets import Cells, is_workbook, one_sheet, place
 
 SEPARATORS = ";,\t"
+OF_A_STEP: tuple[type[Table], ...] = (Alternative, Quote)
+"""Records of which a step can have several: their rows name it in a column `step`."""
 TRUTHS = {"true": True, "yes": True, "false": False, "no": False}
-Cells = list[list[str]]
 
 
 @dataclass
@@ -74,19 +76,37 @@ def read_cells(text: str, name: str) -> Cells:
         raise _refused(name, f"a table that cannot be read ({error})", "save the sheet as CSV (UTF-8)") from None
 
 
-def read_table(path: Path, name: str, record: type[Step] | type[Alternative]) -> TableRead:
-    """Return the rows of a table of steps, or of alternatives (whose column `step` names the step).
+def read_table(folder: Path, name: str, record: type[Table]) -> TableRead:
+    """Return the rows of a table of steps, or of alternatives: a CSV file, or one sheet of a workbook.
 
-    Values that do not convert stay texts, for the check of the keys to report with their row.
+    Parameters
+    ----------
+    folder : Path
+        Where the file lies.
+    name : str
+        The file's name, for a workbook with the sheet's, as ``"book.xlsx#steps"``.
 
     Raises
     ------
     InputError
         When the file cannot be read as a table at all.
     """
-    if path.suffix.lower() in (".xlsx", ".xls", ".ods") or "#" in name:
-        raise _refused(name, "a workbook", "save the sheet as CSV (UTF-8) and name that file")
-    cells = read_cells(read_text(path, name), name)
+    file, _, sheet = name.partition("#")
+    if not is_workbook(file):
+        return table_of(read_cells(read_text(folder / name, name), name), name, record)
+    where = place(file, sheet) if sheet else file
+    cells = one_sheet(folder / file, file, sheet)
+    if not any(any(map(str.strip, row)) for row in cells):
+        raise _refused(where, "an empty sheet", "write it, or name another sheet")
+    return table_of(cells, where, record)
+
+
+def table_of(cells: Cells, name: str, record: type[Table]) -> TableRead:
+    """Return the rows of a table whose header names keys of a record; some cell is not blank.
+
+    Rows that belong to a step say so in a column `step`. Values that do not convert stay texts, for the check of the
+    keys to report with their row.
+    """
     table = TableRead(name)
     written = [(number, row) for number, row in enumerate(cells, start=1) if row and any(map(str.strip, row))]
     header, body = [cell.strip() for cell in written[0][1]], written[1:]
@@ -95,7 +115,7 @@ def read_table(path: Path, name: str, record: type[Step] | type[Alternative]) ->
     used = _usable_columns(table, header, record)
     width = len(header)
     full = [row if len(row) == width else (row + [""] * width)[:width] for _, row in body]
-    if record is Alternative:
+    if record in OF_A_STEP:
         at = header.index("step") if "step" in header else None
         table.owners = [row[at].strip() if at is not None else "" for row in full]
     filled = {keys: _converted([row[i] for row in full], record, keys) for i, keys in used.items()}
@@ -112,12 +132,10 @@ def _refuse_long_rows(table: TableRead, body: Sequence[tuple[int, list[str]]], w
         table.faults.append(Fault(f"{table.file}, {places}", "", "more cells than columns", allowed))
 
 
-def _usable_columns(
-    table: TableRead, header: list[str], record: type[Step] | type[Alternative]
-) -> dict[int, tuple[str, ...]]:
+def _usable_columns(table: TableRead, header: list[str], record: type[Table]) -> dict[int, tuple[str, ...]]:
     """Return the path of keys of every column that can be used; the others are reported once each."""
     known = columns(record)
-    if record is Alternative:
+    if record in OF_A_STEP:
         known["step"] = ("step",)
     used: dict[int, tuple[str, ...]] = {}
     for i, name in enumerate(header):
@@ -130,9 +148,9 @@ def _usable_columns(
             table.faults.append(Fault(table.file, f"column '{name}'", "the same column twice", "keep one of the two"))
         else:
             used[i] = path
-    if record is Alternative and "step" not in header and "step" not in table.lost:
+    if record in OF_A_STEP and "step" not in header and "step" not in table.lost:
         table.lost.add("step")
-        allowed = "add a column `step` with the name of the step that each alternative belongs to"
+        allowed = "add a column `step` with the name of the step that each row belongs to"
         table.faults.append(Fault(table.file, "column 'step'", "nothing", allowed))
     return used
 
@@ -157,8 +175,19 @@ def _report_column(
     table.lost.add(known[near][0] if near else name)
 
 
-def _converted(cells: Sequence[str], record: type[Step] | type[Alternative], path: tuple[str, ...]) -> list[Any]:
-    kinds = spec(record, path).kinds
+def value_of(text: str, record: type[Table], path: tuple[str, ...]) -> Any:
+    """Return one text as the kind of value that stands at a path of keys; what does not convert stays text."""
+    return _converted([text], record, path)[0]
+
+
+def number_of(text: str) -> float | str:
+    """Return a number where the text is one."""
+    number: float | str = _one(text, _whole)
+    return number
+
+
+def _converted(cells: Sequence[str], record: type[Table], path: tuple[str, ...]) -> list[Any]:
+    kinds = spec(record, path).kinds if path else ()
     if "number" in kinds:
         return _each(cells, float)
     if "integer" in kinds:
