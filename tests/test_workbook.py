@@ -67,7 +67,7 @@ def content(scenario: Scenario) -> dict[str, Any]:
     for step in dumped["step"]:
         for table in (step, *step["alternative"]):
             if table["capability"]:
-                table["capability"] |= {"data": None, "column": None}
+                table["capability"] |= {"data": None, "column": None, "subgroup": None}
     return dumped
 
 

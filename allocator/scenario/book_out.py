@@ -27,6 +27,7 @@ ROOM = 200
 """Empty rows below the last one that are checked as well while the sheet is filled in."""
 HEAD_FILL, HEAD_INK = "FF1F3A4D", "FFFFFFFF"
 WIDEST = 44
+FROM_FILE = ("data", "column", "subgroup")
 Row = dict[str, Any]
 
 
@@ -109,7 +110,7 @@ def _counted(table: Row) -> Row:
     if "data" not in capability:
         return table
     assert all(key in capability for key in COUNTED)
-    return {**table, "capability": {key: value for key, value in capability.items() if key not in ("data", "column")}}
+    return {**table, "capability": {key: value for key, value in capability.items() if key not in FROM_FILE}}
 
 
 def _flat(table: Mapping[str, Any], before: str = "") -> Row:

@@ -104,6 +104,7 @@ MEANINGS: dict[str, str] = {
     "per": "among so many",
     "data": "a CSV file of measurements beside this workbook",
     "column": "its column",
+    "subgroup": "its column of subgroups, as shifts or batches",
     "sides": "number of limits",
     "sample": "parts behind the estimate",
 }
