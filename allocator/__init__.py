@@ -20,7 +20,8 @@ if TYPE_CHECKING:
     from allocator.measure import measure_capability
     from allocator.nines import price_nines
     from allocator.plan import make_plan
-    from allocator.results import CapitalCase, Check, Comparison, Nines, Plan, Study, Today
+    from allocator.rehearsal import rehearse
+    from allocator.results import CapitalCase, Check, Comparison, Nines, Plan, Rehearsal, Study, Today
     from allocator.scenario.book_out import write_workbook
     from allocator.scenario.model import Scenario
     from allocator.scenario.read import read_scenario, scenario_from_dict
@@ -34,6 +35,7 @@ _HOMES = {
     "InputError": "errors",
     "Nines": "results",
     "Plan": "results",
+    "Rehearsal": "results",
     "Scenario": "scenario.model",
     "Study": "results",
     "Today": "results",
@@ -44,6 +46,7 @@ _HOMES = {
     "measure_capability": "measure",
     "price_nines": "nines",
     "read_scenario": "scenario.read",
+    "rehearse": "rehearsal",
     "scenario_from_dict": "scenario.read",
     "see_today": "today",
     "write_workbook": "scenario.book_out",
@@ -57,6 +60,7 @@ __all__ = [
     "InputError",
     "Nines",
     "Plan",
+    "Rehearsal",
     "Scenario",
     "Study",
     "Today",
@@ -67,6 +71,7 @@ __all__ = [
     "measure_capability",
     "price_nines",
     "read_scenario",
+    "rehearse",
     "scenario_from_dict",
     "see_today",
     "write_workbook",

@@ -8,6 +8,7 @@ from allocator.compare import compare_scenarios
 from allocator.measure import measure_capability
 from allocator.nines import price_nines
 from allocator.plan import make_plan
+from allocator.rehearsal import rehearse
 from allocator.scenario.book_out import write_workbook
 from allocator.scenario.read import read_scenario
 from allocator.today import see_today
@@ -20,6 +21,7 @@ __all__ = [
     "measure_capability",
     "price_nines",
     "read_scenario",
+    "rehearse",
     "see_today",
     "write_workbook",
 ]

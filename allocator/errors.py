@@ -3,6 +3,7 @@
 AllocatorError
 ├── InputError            the scenario or a command's argument is wrong (exit 2); carries every fault found
 ├── RangeError            a pure function was asked outside its valid range (a ValueError too)
+├── OutOfReachError       there is no plan that meets the target, and the question needs one (exit 1)
 └── SolverError           a solver stopped without an answer that could be proved
 """
 
@@ -52,6 +53,10 @@ class InputError(AllocatorError):
 
 class RangeError(AllocatorError, ValueError):
     """A figure lies outside the range in which a formula is valid."""
+
+
+class OutOfReachError(AllocatorError):
+    """The target cannot be met, and what was asked needs a plan that meets it."""
 
 
 class SolverError(AllocatorError):

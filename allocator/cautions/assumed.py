@@ -13,6 +13,7 @@ def what_is_assumed(problem: Problem) -> tuple[str, ...]:
         "Final yield here means: a unit started comes out, and comes out good (reworked counts as good, escapes do not).",
         "One product at one volume; reworked items are good, and their own later scrap is neglected.",
         "Rework and inspection are charged on shipped quantity, scrap on the items started and lost.",
+        *_clustering(problem),
         *_inspection(problem),
         *_shift(problem),
     ]
@@ -22,6 +23,14 @@ def what_is_assumed(problem: Problem) -> tuple[str, ...]:
             f"({scenario.demand.years:g} years unless stated); amounts are pre-tax planning figures."
         )
     return (*texts, *problem.options.notes)
+
+
+def _clustering(problem: Problem) -> list[str]:
+    names = [step.name for step in problem.scenario.step if step.clustering is not None]
+    if not names:
+        return []
+    shown = ", ".join(names[:4]) + (f" and {len(names) - 4} more" if len(names) > 4 else "")
+    return [f"Clustering is stated ({shown}): computed figures stay Poisson, a rehearsal draws the clusters."]
 
 
 def _inspection(problem: Problem) -> list[str]:

@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 from pydantic import BaseModel
 
 from allocator.capability import study_index
+from allocator.cautions.clusters import cautions_of_clusters
 from allocator.problem import Problem, inspection_stated
 from allocator.results import Caution
 from allocator.scenario.level import LONG_TERM, given
@@ -302,6 +303,10 @@ def _false_rejects(problem: Problem) -> Iterator[Caution]:
         )  # fmt: skip
 
 
+def _clustering(problem: Problem) -> Iterator[Caution]:
+    yield from cautions_of_clusters(problem, problem.options.today.intensity())
+
+
 def _loose_ends(problem: Problem) -> Iterator[Caution]:
     nothing = _steps(problem, lambda s, _: not s.fixed and not s.alternative and s.improve is None)
     if len(nothing) == len(problem.scenario.step):
@@ -326,5 +331,5 @@ def _costs_nothing(name: str, step: Step) -> bool:
 LOOKS: tuple[Callable[[Problem], Iterator[Caution]], ...] = (
     _safety, _inspection, _long_term, _shifts, _small_sample, _beyond_the_data, _counts, _near_tail, _one_opportunity,
     _three_sigma, _copies, _laws, _judged, _widening, _rework, _false_rejects,
-    _loose_ends,
+    _clustering, _loose_ends,
 )  # fmt: skip

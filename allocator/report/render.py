@@ -19,8 +19,10 @@ from allocator.report.nines_text import nines_text
 from allocator.report.paper import LOG_WIDTH
 from allocator.report.plain import to_json
 from allocator.report.plan_text import plan_text
+from allocator.report.rehearsal_data import rehearsal_csv, rehearsal_json
+from allocator.report.rehearsal_text import rehearsal_text
 from allocator.report.today_text import today_text
-from allocator.results import CapitalCase, Check, Comparison, Nines, Plan, Study, Today
+from allocator.results import CapitalCase, Check, Comparison, Nines, Plan, Rehearsal, Study, Today
 
 Form = Literal["text", "json", "csv"]
 
@@ -38,6 +40,7 @@ _RENDERERS: dict[type, _Renderers] = {
     Today: _Renderers(today_text, today_json, today_csv),
     Check: _Renderers(check_text, check_json, check_csv),
     CapitalCase: _Renderers(case_text, case_json, case_csv),
+    Rehearsal: _Renderers(rehearsal_text, rehearsal_json, rehearsal_csv),
     Study: _Renderers(measure_text, measure_json, measure_csv),
     Comparison: _Renderers(compare_text, compare_json, compare_csv),
 }

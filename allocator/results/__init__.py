@@ -9,6 +9,7 @@ from allocator.results.compare import Compared, Comparison, StepAcross, TakenAcr
 from allocator.results.line import Caution, Level, Money, TodayLine, Yields
 from allocator.results.nines import Nines, NinesPoint
 from allocator.results.plan import BestReachable, Binding, Bought, Plan, Proof, Restraint, RuleOutcome, StepTarget
+from allocator.results.rehearsal import Rehearsal, Rehearsed, StepRehearsed
 from allocator.results.study import Fit, Index, Indices, Outlier, Signal, Study
 from allocator.results.table import as_table, records
 from allocator.results.today import Check, StepToday, Today, Understood
@@ -37,12 +38,15 @@ __all__ = [
     "Outlier",
     "Plan",
     "Proof",
+    "Rehearsal",
+    "Rehearsed",
     "Restraint",
     "RuleOutcome",
     "Savings",
     "ScrapView",
     "Signal",
     "StepAcross",
+    "StepRehearsed",
     "StepTarget",
     "StepToday",
     "Study",

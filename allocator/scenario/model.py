@@ -182,6 +182,7 @@ class Step(Table):
     feeds: str | None = None
     per_unit: Positive = 1.0
     opportunities: Positive = 1.0
+    clustering: Positive | None = None
     scrap_cost: Nonnegative | None = None
     cost_added: Nonnegative | None = None
     salvage: Nonnegative = 0.0
