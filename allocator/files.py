@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import errno
 import os
 import tempfile
 from collections.abc import Iterator
@@ -13,6 +14,8 @@ from pathlib import Path
 def written_aside(path: str | Path) -> Iterator[Path]:
     """Yield the name of an empty file beside `path`, which takes its place when the block ends without an error."""
     path = Path(path)
+    if not path.parent.is_dir():
+        raise FileNotFoundError(errno.ENOENT, "no such folder", str(path.parent))
     handle, name = tempfile.mkstemp(dir=path.parent, prefix=f".{path.stem}.", suffix=path.suffix)
     os.close(handle)
     aside = Path(name)

@@ -16,9 +16,9 @@ from hypothesis import strategies as st
 from typer.testing import CliRunner
 
 from allocator import make_plan, read_scenario, scenario_from_dict, write_workbook
+from allocator.cells import LONGEST
 from allocator.cli import app
 from allocator.errors import InputError
-from allocator.scenario import book_out
 from allocator.scenario.book import KEYED, ROWED, TOP
 from allocator.scenario.book_words import USUAL, meaning
 from allocator.scenario.model import Head, Scenario, Target
@@ -401,7 +401,7 @@ def test_a_failed_write_leaves_the_old_file(tmp_path: Path, monkeypatch: pytest.
     assert [file.name for file in tmp_path.iterdir()] == ["book.xlsx"]
 
 
-@pytest.mark.parametrize("title", ["bell \x07", "x" * (book_out.LONGEST + 1)], ids=["control sign", "too long"])
+@pytest.mark.parametrize("title", ["bell \x07", "x" * (LONGEST + 1)], ids=["control sign", "too long"])
 def test_texts_that_no_cell_can_hold_are_refused(title: str, tmp_path: Path) -> None:
     data = {"demand": {"shipped_per_year": 10}, "step": [{"name": "a", "cost_added": 1, "capability": {"cp": 1.0}}]}
     with pytest.raises(InputError, match="32,767 printable characters"):

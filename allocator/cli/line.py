@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
+from pathlib import Path
 from typing import Annotated
 
 import typer
 
-from allocator.cli.app import OUT_OF_REACH, AsCsv, AsJson, File, app, form_of, load, show
+from allocator.cli.app import OUT_OF_REACH, AsCsv, AsJson, File, app, form_of, load, refused, show
 from allocator.cli.asked import (
     Hold,
     Of,
@@ -72,6 +73,7 @@ def plan(
     hold: Hold = None,
     without: Without = None,
     with_: With = None,
+    xlsx: Annotated[Path | None, typer.Option(metavar="FILE", help="Write the plan to a workbook as well.")] = None,
     as_json: AsJson = False,
     as_csv: AsCsv = False,
 ) -> None:
@@ -80,6 +82,8 @@ def plan(
     yields = {Which.final: final_yield, Which.rolled: rolled_yield, Which.shipped: shipped_yield}
     losses = losses_asked({which: text for which, text in yields.items() if text is not None}, nines, ppm)
     refuse_unfit_money(spend, capital)
+    if xlsx is not None and xlsx.suffix.lower() != ".xlsx":
+        raise refused("--xlsx", str(xlsx), "name a workbook, as plan.xlsx")
     levels = levels_held(hold or [])
     from allocator import api
 
@@ -90,6 +94,11 @@ def plan(
         with_=with_ or (),
     )  # fmt: skip
     show(answer, form)
+    if xlsx is not None:
+        from allocator.report.plan_book import write_plan_book
+
+        write_plan_book(answer, xlsx)
+        typer.echo(f"Wrote {xlsx}", err=True)
     if not answer.reached:
         raise typer.Exit(OUT_OF_REACH)
 

@@ -2,13 +2,12 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from decimal import Decimal
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from allocator.errors import Fault, InputError
-from allocator.files import written_aside
+from allocator.cells import fill_cell, new_book, save_book, width_of, write_head
 from allocator.scenario.book import KEY, KEYED, MEANING, ROWED, TOP, VALUE
 from allocator.scenario.book_words import USUAL, meaning, validation
 from allocator.scenario.data import COUNTED
@@ -17,16 +16,10 @@ from allocator.scenario.schema import columns
 from allocator.scenario.tables import OF_A_STEP
 
 if TYPE_CHECKING:
-    from openpyxl.cell.cell import Cell, MergedCell
     from openpyxl.worksheet.worksheet import Worksheet
 
-FORMULA_SIGNS = ("=", "+", "-", "@")
-LONGEST = 32_767
-"""Characters that a cell can hold."""
 ROOM = 200
 """Empty rows below the last one that are checked as well while the sheet is filled in."""
-HEAD_FILL, HEAD_INK = "FF1F3A4D", "FFFFFFFF"
-WIDEST = 44
 FROM_FILE = ("data", "column", "subgroup")
 Row = dict[str, Any]
 
@@ -49,18 +42,12 @@ def write_workbook(scenario: Scenario, path: str | Path) -> None:
         When the name ends otherwise, or a text has signs that no workbook can hold.
     """
     path = Path(path)
-    if path.suffix.lower() != ".xlsx":
-        raise InputError([Fault(path.name, "", f"a name that ends in {path.suffix or 'nothing'}", "end it in .xlsx")])
-    from openpyxl import Workbook  # here, because only those who want a workbook should wait for it
-
-    book = Workbook()
-    book.remove(book.worksheets[0])
+    book = new_book(path)
     for sheet, rows in _keyed(scenario).items():
         _write_keys(book.create_sheet(sheet), () if sheet == TOP else (sheet,), rows, path)
     for sheet, records in _rowed(scenario).items():
         _write_rows(book.create_sheet(sheet), ROWED[sheet], records, path)
-    with written_aside(path) as aside:
-        book.save(aside)
+    save_book(book, path)
 
 
 def _keyed(scenario: Scenario) -> dict[str, Row]:
@@ -126,13 +113,13 @@ def _flat(table: Mapping[str, Any], before: str = "") -> Row:
 
 def _write_keys(sheet: Worksheet, within: tuple[str, ...], rows: Row, path: Path) -> None:
     record: type[Table] = Target if within == ("target",) else Head
-    _write_head(sheet, [KEY, VALUE, MEANING])
+    write_head(sheet, [KEY, VALUE, MEANING])
     for number, (key, value) in enumerate(rows.items(), start=2):
         keys = tuple(key.split("."))
         inside = keys if record is Target else (*within, *keys)
-        _fill(sheet.cell(number, 1), key, path)
-        _fill(sheet.cell(number, 2), value, path)
-        _fill(sheet.cell(number, 3), meaning(record, inside), path)
+        fill_cell(sheet.cell(number, 1), key, path.name)
+        fill_cell(sheet.cell(number, 2), value, path.name)
+        fill_cell(sheet.cell(number, 3), meaning(record, inside), path.name)
         rule = validation(record, inside)
         if rule is not None:
             rule.add(sheet.cell(number, 2).coordinate)
@@ -148,53 +135,17 @@ def _write_rows(sheet: Worksheet, record: type[Table], records: Sequence[Row], p
     owner = ["step"] if record in OF_A_STEP else []
     paths = {**columns(record), **dict.fromkeys(owner, ())}
     names = list(dict.fromkeys((*owner, *USUAL[sheet.title], *(key for row in records for key in row))))
-    _write_head(sheet, names)
+    write_head(sheet, names)
     for number, row in enumerate(records, start=2):
         for column, name in enumerate(names, start=1):
-            _fill(sheet.cell(number, column), row.get(name), path)
+            fill_cell(sheet.cell(number, column), row.get(name), path.name)
     for column, name in enumerate(names, start=1):
         keys = paths[name]
         comment = Comment(meaning(record, keys), "allocator", width=320, height=120)
         letter = get_column_letter(column)
         sheet.cell(1, column).comment = comment
-        sheet.column_dimensions[letter].width = _width(name, (row.get(name) for row in records))
+        sheet.column_dimensions[letter].width = width_of(name, (row.get(name) for row in records))
         rule = validation(record, keys) if keys else None
         if rule is not None:
             rule.add(f"{letter}2:{letter}{len(records) + ROOM}")
             sheet.add_data_validation(rule)
-
-
-def _width(name: str, values: Iterable[Any]) -> int:
-    longest = max((len(str(value)) for value in values if value is not None), default=0)
-    return min(max(len(name), longest, 8) + 3, WIDEST)
-
-
-def _write_head(sheet: Worksheet, names: Sequence[str]) -> None:
-    from openpyxl.styles import Font, PatternFill
-
-    for column, name in enumerate(names, start=1):
-        cell = sheet.cell(1, column, name)
-        cell.font, cell.fill = Font(bold=True, color=HEAD_INK), PatternFill("solid", fgColor=HEAD_FILL)
-    sheet.freeze_panes = "B2"
-
-
-def _fill(cell: Cell | MergedCell, value: Any, path: Path) -> None:
-    """Write a value; a text that starts like a formula stays text, also when somebody edits it."""
-    from openpyxl.utils.exceptions import IllegalCharacterError
-
-    if value is None:
-        return
-    try:
-        cell.value = value
-    except IllegalCharacterError:
-        raise _no_cell(path, "a control sign in", value) from None
-    if isinstance(value, str):
-        if len(value) > LONGEST:
-            raise _no_cell(path, f"{len(value):,} characters in", value)
-        cell.data_type = "s"
-        cell.quotePrefix = value.startswith(FORMULA_SIGNS)
-
-
-def _no_cell(path: Path, what: str, value: str) -> InputError:
-    allowed = "a cell takes up to 32,767 printable characters: shorten the text or rewrite it"
-    return InputError([Fault(path.name, "", f"{what} {value[:40]!r}", allowed)])
