@@ -22,6 +22,7 @@ if TYPE_CHECKING:
     from allocator.plan import make_plan
     from allocator.rehearsal import rehearse
     from allocator.results import CapitalCase, Check, Comparison, Nines, Plan, Rehearsal, Study, Today
+    from allocator.review import review_page
     from allocator.scenario.book_out import write_workbook
     from allocator.scenario.model import Scenario
     from allocator.scenario.read import read_scenario, scenario_from_dict
@@ -47,6 +48,7 @@ _HOMES = {
     "price_nines": "nines",
     "read_scenario": "scenario.read",
     "rehearse": "rehearsal",
+    "review_page": "review",
     "scenario_from_dict": "scenario.read",
     "see_today": "today",
     "write_workbook": "scenario.book_out",
@@ -72,6 +74,7 @@ __all__ = [
     "price_nines",
     "read_scenario",
     "rehearse",
+    "review_page",
     "scenario_from_dict",
     "see_today",
     "write_workbook",

@@ -9,6 +9,7 @@ from allocator.measure import measure_capability
 from allocator.nines import price_nines
 from allocator.plan import make_plan
 from allocator.rehearsal import rehearse
+from allocator.review import review_page
 from allocator.scenario.book_out import write_workbook
 from allocator.scenario.read import read_scenario
 from allocator.today import see_today
@@ -22,6 +23,7 @@ __all__ = [
     "price_nines",
     "read_scenario",
     "rehearse",
+    "review_page",
     "see_today",
     "write_workbook",
 ]

@@ -100,10 +100,10 @@ def caution_in_words(caution: Caution) -> str:
     what = words.clean(caution.code.replace("_", " "))
     where = words.listed([words.quoted(step) for step in caution.steps], more="more steps")
     head = f"{what} ({where})" if where else what
-    return f"{head}: {_sentence(caution.reason)} What to do: {_sentence(caution.fix)}"
+    return f"{head}: {sentence(caution.reason)} What to do: {sentence(caution.fix)}"
 
 
-def _sentence(text: str) -> str:
+def sentence(text: str) -> str:
     said = words.clean(text)
     return said if said.endswith((".", "!", "?")) else f"{said}."
 

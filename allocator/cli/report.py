@@ -1,0 +1,31 @@
+"""The command that puts everything on one page for the design review."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+from allocator.cli.app import OUT_OF_REACH, File, app, load
+
+
+@app.command()
+def report(
+    file: File,
+    output: Annotated[
+        Path | None,
+        typer.Option("-o", "--output", metavar="PAGE", help="The page to write (default: FILE's name with .html)."),
+    ] = None,
+) -> None:
+    """Write the page for the design review, as in: allocator report line.toml -o review.html"""
+    target = output if output is not None else Path(f"{file.stem}.html")
+    from allocator import api
+    from allocator.report.page import page_html, refuse_lost_folder, write_page
+
+    refuse_lost_folder(target)
+    review = api.review_page(load(file))
+    write_page(page_html(review), target)
+    typer.echo(f"Wrote {target}. Open it in a browser; it needs no network.")
+    if not review.plan.reached:
+        raise typer.Exit(OUT_OF_REACH)

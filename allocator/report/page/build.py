@@ -1,0 +1,61 @@
+"""The page as one file: template, style and script joined with what the record says, every text escaped."""
+
+from __future__ import annotations
+
+from importlib.resources import files
+from pathlib import Path
+from typing import Any
+
+from allocator.errors import Fault, InputError
+from allocator.files import written_aside
+from allocator.report.page.control import control
+from allocator.report.page.cost import cost_drawing
+from allocator.report.page.rails import line_drawing
+from allocator.report.page.said import said
+from allocator.results import ReviewPage
+
+TEMPLATES = "allocator.report.page"
+
+
+def page_html(review: ReviewPage) -> str:
+    """The page as text: no address outside it, nothing loaded."""
+    from jinja2 import Environment, FunctionLoader, StrictUndefined  # here: other reports should not wait for it
+
+    environment = Environment(
+        loader=FunctionLoader(_read), autoescape=True, undefined=StrictUndefined, trim_blocks=True, lstrip_blocks=True
+    )
+    parts: dict[str, Any] = {
+        "review": review,
+        "said": said(review),
+        "control": control(review),
+        "cost": cost_drawing(review),
+        "line": line_drawing(review),
+        "style": _read("page.css"),
+        "script": _read("page.js"),
+    }
+    return environment.get_template("page.html").render(parts)
+
+
+def _read(name: str) -> str:
+    return files(TEMPLATES).joinpath("templates", name).read_text(encoding="utf-8")
+
+
+def refuse_lost_folder(file: Path) -> None:
+    """Refuse a page in a directory that does not exist, before any work is done.
+
+    Raises
+    ------
+    InputError
+    """
+    folder = file.parent
+    if not folder.is_dir():
+        raise InputError([Fault(str(file), "", f"no directory {folder}", "name a file in a directory that exists")])
+    if file.is_dir():
+        raise InputError([Fault(str(file), "", "a directory", "name a file")])
+
+
+def write_page(text: str, file: Path) -> None:
+    """Write the page aside and move it into place, so that no half page is ever there."""
+    refuse_lost_folder(file)
+    with written_aside(file) as aside:
+        aside.write_text(text, encoding="utf-8", newline="\n")

@@ -1,0 +1,84 @@
+"""What is put before a design review: the plan, every stop of the control, the picture of the line, the sources."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+from allocator.grouping import rows_of
+from allocator.picture import divide, picture
+from allocator.plan import binding_steps, make_plan, summarise
+from allocator.problem import Problem, pose
+from allocator.results import BestReachable, Plan, ReviewPage, Row
+from allocator.scenario.model import Scenario
+from allocator.sources import sources_of
+from allocator.standing import levels_today
+from allocator.state import floor_words
+from allocator.stops import Answer, answers, describe_stops
+
+
+def review_page(scenario: Scenario) -> ReviewPage:
+    """Return everything the page of a design review shows, all figures worked out.
+
+    Parameters
+    ----------
+    scenario : Scenario
+        As read by `read_scenario`.
+    """
+    problem = pose(scenario)
+    plan = make_plan(scenario)
+    steps = rows_of(problem.line.feeds.tolist())
+    rows = _rows(problem, steps)
+    found = answers(problem)
+    shown = _opens_with(found, plan)
+    outcome = found[shown].outcome
+    return ReviewPage(
+        file=scenario.file,
+        plan=plan,
+        highest=_highest(problem, found),
+        rows=rows,
+        grouped=len(steps) < len(scenario.step),
+        stops=describe_stops(problem, found, steps),
+        shown=shown,
+        line=picture(problem, steps, None if outcome is None else outcome.flow),
+        division=divide(plan, steps, [name_of_row(row) for row in rows]),
+        sources=sources_of(scenario),
+    )
+
+
+def _opens_with(found: Sequence[Answer], plan: Plan) -> int:
+    """Return the stop of the target, of the best reachable when it is out of reach, or of the optimum without one."""
+    labels = [answer.label for answer in found]
+    first = ("target", "highest reachable") if plan.split in plan.targets else ("economic optimum",)
+    return next((labels.index(label) for label in first if label in labels), 0)
+
+
+def _highest(problem: Problem, found: Sequence[Answer]) -> BestReachable | None:
+    """Return the highest reachable of the stops with what holds it there, None where only today could be shown."""
+    best = found[-1].solved
+    return None if best is None else summarise(problem, best, binding_steps(problem, best, None))
+
+
+def _rows(problem: Problem, rows: Sequence[Sequence[int]]) -> tuple[Row, ...]:
+    levels, steps = levels_today(problem), problem.scenario.step
+    made = []
+    for mine in rows:
+        suppliers = {steps[i].supplier for i in mine}
+        sigma = [levels[i].sigma_level for i in mine]
+        made.append(
+            Row(
+                steps=tuple(steps[i].name for i in mine),
+                supplier=suppliers.pop() if len(suppliers) == 1 else None,
+                sigma_low=min(sigma),
+                sigma_high=max(sigma),
+                floor=floor_words(steps[mine[0]].at_least) if len(mine) == 1 else None,
+                safety=any(steps[i].safety for i in mine),
+            )
+        )
+    return tuple(made)
+
+
+def name_of_row(row: Row) -> str:
+    """Return a row's name: the step's own, or the first and the last with their number."""
+    if len(row.steps) == 1:
+        return row.steps[0]
+    return f"{row.steps[0]} … {row.steps[-1]} ({len(row.steps)} steps)"
