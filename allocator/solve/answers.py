@@ -42,17 +42,16 @@ class Market:
     curves : Curves
         One row per way.
     z_low, z_high : shape (n_ways,) [σ]
-    lines : sequence
-        Straight pieces (δ, cost) or None per way; None for "no way has any".
+    pieces : dict, optional
+        Straight pieces (δ, cost) that stand for the law, by way; none for most.
     """
 
     def __init__(
-        self, curves: Curves, z_low: Array, z_high: Array, lines: list[tuple[Array, Array] | None] | None = None
+        self, curves: Curves, z_low: Array, z_high: Array, pieces: dict[int, tuple[Array, Array]] | None = None
     ) -> None:
         self.size = len(z_low)
         self.straight = np.zeros(self.size, dtype=bool)
-        if lines is not None:
-            self.straight = np.array([line is not None for line in lines], dtype=bool)
+        self.straight[list(pieces or ())] = True
         moves = (z_high > z_low) & ~self.straight
         self.decade = np.flatnonzero(moves & (curves.kind == cv.DECADE))
         self.sloped = np.flatnonzero(moves & ((curves.kind == cv.POWER) | (curves.kind == cv.EXPONENTIAL)))
@@ -62,7 +61,7 @@ class Market:
         self.still_cost = np.where(still, cv.smooth_cost(curves, z_low), 0.0)
         self.decades = _Decades(curves.take(self.decade), self.low[self.decade], self.high[self.decade])
         self.slopes = _Sloped(curves.take(self.sloped), z_low[self.sloped], z_high[self.sloped])
-        self.pieces = _Pieces(self.straight, lines)
+        self.pieces = _Pieces(pieces or {})
         self.low[self.pieces.rows], self.high[self.pieces.rows] = self.pieces.low, self.pieces.high
 
     @property
@@ -193,9 +192,9 @@ class _Sloped:
 class _Pieces:
     """Quotes and chords: straight pieces, flattened over all ways that have them."""
 
-    def __init__(self, straight: NDArray[np.bool_], lines: list[tuple[Array, Array] | None] | None) -> None:
-        self.rows = np.flatnonzero(straight)
-        self.knots = [line for line in (lines or []) if line is not None]
+    def __init__(self, pieces: dict[int, tuple[Array, Array]]) -> None:
+        self.rows = np.array(sorted(pieces), dtype=np.int64)
+        self.knots = [pieces[row] for row in self.rows.tolist()]
         self.low = np.array([delta[0] for delta, _ in self.knots])
         self.high = np.array([delta[-1] for delta, _ in self.knots])
         width = max((len(delta) for delta, _ in self.knots), default=0)

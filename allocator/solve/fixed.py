@@ -9,14 +9,22 @@ from numpy.typing import NDArray
 
 from allocator import curves as cv
 from allocator.choice import Choice, Outcome, evaluate, keeps_limits
+from allocator.errors import SolverError
 from allocator.flow import GATE_FIELDS, Gates, inspection_cost
-from allocator.problem import CAPITAL, COST, Problem
+from allocator.problem import CAPITAL, COST, Problem, within
+from allocator.scenario.model import YIELD_NAMES
 from allocator.solve.answers import Market
 from allocator.solve.interior import GAP, Point, minimise
 from allocator.solve.price import build_duty, clear
 from allocator.solve.program import Program, build_program
 
 Array = NDArray[np.float64]
+MOST_LEVELS = 1_500
+"""Levels that the interior point works out together: its tables grow with their square."""
+TOO_MANY = (
+    "{:,} levels move under a limit on money, and at most {:,} can be worked out together; "
+    "ask without the limit, or for a part of the line"
+)
 
 
 @dataclass(frozen=True)
@@ -35,10 +43,25 @@ def solve_fixed(problem: Problem, rows: NDArray[np.int64], hopeless: float | Non
     """Return the best levels for one way per step, None when these ways cannot keep the budgets and limits.
 
     The search stops early, at a worse answer, once its bound passes `hopeless`.
+
+    Raises
+    ------
+    SolverError
+        When so many levels move under a limit on money that they cannot be worked out together.
     """
+    ways = problem.options.ways
+    fewest = evaluate(problem.line, problem.options, Choice(rows, ways.z_high[rows]))
+    if not all(within(fewest.loads[name], budget) for name, budget in problem.budgets.items()):
+        return None
+    if problem.objective in YIELD_NAMES and problem.capital is None and problem.spend is None:
+        return _at_an_end(problem, fewest)
+    if problem.objective == CAPITAL and not problem.budgets and problem.spend is None:
+        return _at_an_end(problem, evaluate(problem.line, problem.options, Choice(rows, ways.z_low[rows])))
     by_price = _by_price(problem, rows, hopeless)
     if by_price is not None:
         return by_price
+    if int(ways.moves[rows].sum()) > MOST_LEVELS:
+        raise SolverError(TOO_MANY.format(int(ways.moves[rows].sum()), MOST_LEVELS))
     program = build_program(problem, rows)
     point = minimise(program, problem.objective, _limits(problem), hopeless)
     if point is None:
@@ -51,6 +74,14 @@ def solve_fixed(problem: Problem, rows: NDArray[np.int64], hopeless: float | Non
     )
 
 
+def _at_an_end(problem: Problem, outcome: Outcome) -> FixedAnswer:
+    """Return an answer that no level could better: loads fall and capital rises with every level, all by themselves."""
+    moves = problem.options.ways.moves[outcome.choice.rows].any()
+    return FixedAnswer(
+        outcome, outcome.value(problem.objective), dict.fromkeys(problem.budgets, 0.0) if moves else None
+    )
+
+
 def _by_price(problem: Problem, rows: NDArray[np.int64], hopeless: float | None) -> FixedAnswer | None:
     """Return the answer of the price road, where budgets alone couple the steps and it closes the gap; else None."""
     if problem.objective != COST or problem.capital is not None or problem.spend is not None:
@@ -58,12 +89,13 @@ def _by_price(problem: Problem, rows: NDArray[np.int64], hopeless: float | None)
     ways, line = problem.options.ways, problem.line
     gates = Gates(*(getattr(ways.gates, name)[rows] for name in GATE_FIELDS))
     curves = ways.curves.take(rows)
-    market = Market(curves, ways.z_low[rows], ways.z_high[rows], [ways.lines[i] for i in rows])
+    market = Market(curves, ways.z_low[rows], ways.z_high[rows], ways.lines.take(rows).pieces)
     aside = _money_aside(problem, rows, gates)
     cleared = clear(
         market, build_duty(line, gates, problem.budgets), curves, GAP, hopeless=(hopeless or np.inf) - aside
     )
-    if cleared is None or cleared.gap > 10.0 * GAP:
+    many = int(ways.moves[rows].sum()) > MOST_LEVELS
+    if cleared is None or (cleared.gap > 10.0 * GAP and not many):
         return None
     z = ways.z_low[rows].copy()
     moving = np.flatnonzero(ways.moves[rows])

@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 
 from allocator.flow import GATE_FIELDS, Gates
 from allocator.problem import COST, Problem, within
+from allocator.scenario.model import YIELD_NAMES
 from allocator.solve.answers import Market
 from allocator.solve.choose import Index, Menu, Priced, balance_menu, fill_budget, price_menu
 from allocator.solve.fixed import FixedAnswer, solve_fixed
@@ -45,12 +46,30 @@ def serves(problem: Problem) -> bool:
     """Return whether the price alone can settle this question: no limit on money, no gate and no purchase to choose."""
     if problem.objective != COST or problem.capital is not None or problem.spend is not None:
         return False
-    ways = problem.options.ways
-    if ways.uses.any():
-        return False
-    first = first_ways(problem)
+    return not problem.options.ways.uses.any() and gates_given(problem)
+
+
+def gates_given(problem: Problem) -> bool:
+    """Return whether no gate is a choice: all ways of a step find, mend and reject the same."""
+    ways, first = problem.options.ways, first_ways(problem)
     columns = [getattr(ways.gates, name) for name in CHOICE_GATE]
     return all(bool(np.array_equal(column, column[first][ways.step])) for column in columns)
+
+
+def best_of_a_yield(problem: Problem) -> bool:
+    """Return whether the best of a yield is asked where every step can simply do its best."""
+    unlimited = problem.capital is None and problem.spend is None
+    return problem.objective in YIELD_NAMES and unlimited and gates_given(problem)
+
+
+def fewest_defects(problem: Problem) -> Index:
+    """Return the way of every step that gets its defects lowest, the cheaper of two; it keeps any budget that can be.
+
+    The best of every yield at once, where no gate is a choice and money sets no limit.
+    """
+    ways = problem.options.ways
+    order = np.lexsort((ways.fixed_cost, ways.delta_low, ways.step))
+    return np.asarray(order[np.flatnonzero(np.diff(ways.step[order], prepend=-1))], dtype=np.int64)
 
 
 def first_ways(problem: Problem) -> Index:
@@ -81,7 +100,7 @@ def solve_by_price(problem: Problem, gap: float) -> ByPrice | None:
     first = first_ways(problem)
     gates = Gates(*(getattr(ways.gates, name)[first] for name in GATE_FIELDS))
     fixed = ways.fixed_cost + (line.shipped * line.per_finished)[ways.step] * ways.gates.per_item
-    market = Market(ways.curves, ways.z_low, ways.z_high, list(ways.lines))
+    market = Market(ways.curves, ways.z_low, ways.z_high, ways.lines.pieces)
     menu = Menu(market, first, ways.step, fixed)
     budgets = {problem.split: problem.budgets[problem.split]} if problem.split in problem.budgets else {}
     duty = build_duty(line, gates, budgets)

@@ -20,33 +20,41 @@ def without_dominated(problem: Problem) -> Problem:
     defects, cost and capital.
     """
     ways = problem.options.ways
-    keep = np.ones(len(ways), dtype=bool)
-    plain = (ways.curves.kind == cv.NONE) & ~ways.moves
-    groups: dict[tuple[object, ...], list[int]] = {}
-    for w in np.flatnonzero(plain).tolist():
-        gate = tuple(float(getattr(ways.gates, name)[w]) for name in GATE_FIELDS)
-        groups.setdefault((int(ways.step[w]), gate, ways.uses[w].tobytes()), []).append(w)
-    for members in groups.values():
-        _drop_dominated(ways, members, keep)
-    if keep.all():
+    plain = np.flatnonzero((ways.curves.kind == cv.NONE) & ~ways.moves)
+    group = _comparable(ways, plain)
+    order = np.lexsort((ways.capital[plain], ways.fixed_cost[plain], ways.delta_high[plain], group))
+    rows, group = plain[order], group[order]
+    beaten = np.zeros(len(rows), dtype=bool)
+    for back in range(1, int(np.bincount(group).max(initial=0))):
+        # Sorted by defects, so that only an earlier one can be better; ties go to the first.
+        better, other = rows[:-back], rows[back:]
+        cheaper = (ways.fixed_cost[better] <= ways.fixed_cost[other]) & (ways.capital[better] <= ways.capital[other])
+        beaten[back:] |= cheaper & (group[:-back] == group[back:])
+    if not beaten.any():
         return problem
+    keep = np.ones(len(ways), dtype=bool)
+    keep[rows[beaten]] = False
     return replace(problem, options=replace(problem.options, ways=ways.take(np.flatnonzero(keep))))
 
 
-def _drop_dominated(ways: Ways, members: list[int], keep: NDArray[np.bool_]) -> None:
-    members = sorted(members, key=lambda w: (ways.delta_high[w], ways.fixed_cost[w], ways.capital[w]))
-    kept: list[int] = []
-    for w in members:
-        if any(ways.fixed_cost[v] <= ways.fixed_cost[w] and ways.capital[v] <= ways.capital[w] for v in kept):
-            keep[w] = False
-        else:
-            kept.append(w)
+def _comparable(ways: Ways, rows: NDArray[np.int64]) -> NDArray[np.int64]:
+    """Return a number for every way that is the same for ways of one step with the same gate and purchases."""
+    same = np.concatenate([[getattr(ways.gates, name)[rows] for name in GATE_FIELDS], ways.uses[rows].T])
+    step = ways.step[rows]
+    first = np.searchsorted(step, step)
+    if np.array_equal(same, same[:, first]):
+        return step
+    order = np.lexsort((*same, step))
+    new = (np.diff(same[:, order], axis=1) != 0.0).any(axis=0) | (np.diff(step[order]) != 0)
+    number = np.zeros(len(rows), dtype=np.int64)
+    number[order[1:]] = np.cumsum(new)
+    return number
 
 
 def ways_by_step(problem: Problem) -> list[NDArray[np.int64]]:
     """Return the ways of every step, in file order."""
-    step = problem.options.ways.step
-    return [np.flatnonzero(step == i).astype(np.int64) for i in range(problem.line.n_steps)]
+    ways = np.arange(len(problem.options.ways))
+    return np.split(ways, np.searchsorted(problem.options.ways.step, np.arange(1, problem.line.n_steps)))
 
 
 def first_choices(problem: Problem) -> list[NDArray[np.int64]]:

@@ -14,7 +14,7 @@ from allocator.choice import Outcome
 from allocator.problem import CAPITAL, COST, Problem, within
 from allocator.solve.fixed import FixedAnswer, solve_fixed
 from allocator.solve.mixed import solve_mixed
-from allocator.solve.mixprice import ByPrice, serves, solve_by_price
+from allocator.solve.mixprice import ByPrice, best_of_a_yield, fewest_defects, serves, solve_by_price
 from allocator.solve.reduce import first_choices, ways_by_step, without_dominated
 
 SMALL_MOVING, SMALL_STILL = 40, 3000
@@ -72,12 +72,14 @@ def solve(problem: Problem, starts: list[NDArray[np.int64]] | None = None) -> So
 
 def _by_size(problem: Problem, starts: list[NDArray[np.int64]], enough: float | None = None) -> Solved | None:
     """Solve choice by choice, by price, or by branch and bound; None when no choice that keeps the limits is known."""
-    by_step = ways_by_step(problem)
-    choices = math.prod(len(mine) for mine in by_step)
-    moving = bool(problem.options.ways.moves.any())
-    if choices <= (SMALL_MOVING if moving else SMALL_STILL):
-        return _every_choice(problem, by_step, choices)
+    few = SMALL_MOVING if problem.options.ways.moves.any() else SMALL_STILL
+    choices = _count_choices(problem, few)
+    if choices <= few:
+        return _every_choice(problem, choices)
     gap = GAP if len(problem.options.ways) <= LARGE else GAP_LARGE
+    if best_of_a_yield(problem):
+        answer = solve_fixed(problem, fewest_defects(problem))
+        return None if answer is None else _solved(problem, answer, answer.bound, "every step at its best")
     if serves(problem):
         priced = solve_by_price(problem, GAP)
         if priced is not None:
@@ -112,10 +114,17 @@ def _settle_remainder(problem: Problem, priced: ByPrice, solved: Solved, gap: fl
     return settled if settled.gap < solved.gap else solved
 
 
-def _every_choice(problem: Problem, by_step: list[NDArray[np.int64]], choices: int) -> Solved | None:
+def _count_choices(problem: Problem, few: int) -> int:
+    """Return how many choices there are, or any larger number once there are more than `few`."""
+    counts = np.bincount(problem.options.ways.step)
+    several = counts[counts > 1].tolist()
+    return math.prod(several) if len(several) <= few else few + 1
+
+
+def _every_choice(problem: Problem, choices: int) -> Solved | None:
     best: FixedAnswer | None = None
     bound = math.inf
-    for rows in itertools.product(*by_step):
+    for rows in itertools.product(*ways_by_step(problem)):
         value = None if best is None else best.outcome.value(problem.objective)
         answer = solve_fixed(problem, np.array(rows, dtype=np.int64), hopeless=value)
         if answer is None:
@@ -174,11 +183,6 @@ def _in_reduced(problem: Problem, reduced: Problem, starts: list[NDArray[np.int6
     """Translate choices into rows of the reduced table; a way that was dropped is replaced by nothing (left out)."""
     if reduced is problem:
         return starts
-    key = {_key(reduced, w): w for w in range(len(reduced.options.ways))}
-    translated = [[key.get(_key(problem, int(w)), -1) for w in rows] for rows in starts]
-    return [np.array(rows, dtype=np.int64) for rows in translated if -1 not in rows]
-
-
-def _key(problem: Problem, w: int) -> tuple[object, ...]:
-    ways = problem.options.ways
-    return int(ways.step[w]), ways.text[w].alternatives, float(ways.z_low[w]), float(ways.z_high[w])
+    own, kept = problem.options.ways, reduced.options.ways
+    translated = [kept.find(own, rows) for rows in starts]
+    return [rows for rows in translated if -1 not in rows]
