@@ -14,15 +14,18 @@ import numpy as np
 from numpy.typing import NDArray
 
 from allocator import curves as cv
-from allocator.capability import log_good
 from allocator.choice import Choice, Outcome, evaluate
-from allocator.flow import GATE_FIELDS, Gates, gate_values, gradient
+from allocator.flow import GATE_FIELDS, Gates, gradient
 from allocator.problem import Problem, within
 from allocator.results import RuleOutcome
 from allocator.state import floor_words
 from allocator.ways import law_cost
 
 Array = NDArray[np.float64]
+Indices = NDArray[np.int64]
+Flags = NDArray[np.bool_]
+MOST_REMARKS = 50
+"""Steps that a rule's breaches are told of by name; of a long line thousands may break the same way."""
 
 
 def simpler_rules(problem: Problem, plan: Outcome) -> tuple[tuple[RuleOutcome, ...], str]:
@@ -43,7 +46,7 @@ def simpler_rules(problem: Problem, plan: Outcome) -> tuple[tuple[RuleOutcome, .
     free = budget - fixed
     if free <= 0.0:
         return (), "the false rejects of today's gates alone use up the budget, so no rule can split the rest"
-    today = weight * np.array([-s.opportunities * float(log_good(s.log_p)) for s in problem.options.today])
+    today = weight * problem.options.today.intensity()
     outcomes = []
     for name, source, split in RULES:
         parts = split(problem, weight, today, free)
@@ -52,7 +55,7 @@ def simpler_rules(problem: Problem, plan: Outcome) -> tuple[tuple[RuleOutcome, .
 
 
 def _gates_today(problem: Problem) -> Gates:
-    return Gates(*np.array([gate_values(s.inspection, s.rework) for s in problem.options.today]).T)
+    return problem.options.today.gates()
 
 
 def _load_weights(problem: Problem, gates: Gates) -> tuple[Array, float]:
@@ -71,7 +74,7 @@ def _equal(problem: Problem, weight: Array, today: Array, free: float) -> Array:
 
 
 def _per_opportunity(problem: Problem, weight: Array, today: Array, free: float) -> Array:
-    count = problem.line.per_finished * np.array([s.opportunities for s in problem.options.today])
+    count = problem.line.per_finished * problem.options.today.opportunities
     return np.asarray(free * count / count.sum())
 
 
@@ -85,11 +88,9 @@ def _raise_the_worst(problem: Problem, weight: Array, today: Array, free: float)
     if today.sum() <= free:
         return today
     rising = np.sort(today)
-    for kept in range(len(rising)):
-        level = (free - rising[:kept].sum()) / (len(rising) - kept)
-        if level <= rising[kept]:
-            break
-    return np.asarray(np.minimum(today, level))
+    below = np.cumsum(rising) - rising
+    level = (free - below) / np.arange(len(rising), 0, -1)
+    return np.asarray(np.minimum(today, level[np.argmax(level <= rising)]))
 
 
 Split = Callable[[Problem, Array, Array, float], Array]
@@ -104,14 +105,8 @@ RULES: tuple[tuple[str, str, Split], ...] = (
 def _outcome(
     problem: Problem, plan: Outcome, name: str, source: str, parts: Array, weight: Array, today: Array, gates: Gates
 ) -> RuleOutcome:
-    broken: list[str] = []
-    rows, z = [], []
-    for i in range(problem.line.n_steps):
-        row, level, remark = _cheapest_within(problem, i, float(parts[i]), float(weight[i]), gates)
-        rows.append(row)
-        z.append(level)
-        broken.extend(remark)
-    result = evaluate(problem.line, problem.options, Choice(np.array(rows, dtype=np.int64), np.array(z)))
+    choice, broken = _cheapest_within(problem, parts, weight, gates)
+    result = evaluate(problem.line, problem.options, choice)
     met = within(result.loads[problem.split], problem.budgets[problem.split] * (1.0 + 1e-9))
     for other, budget in problem.budgets.items():
         if other != problem.split and not within(result.loads[other], budget * (1.0 + 1e-9)):
@@ -126,51 +121,78 @@ def _outcome(
     )  # fmt: skip
 
 
-def _cheapest_within(
-    problem: Problem, i: int, part: float, weight: float, gates: Gates
-) -> tuple[int, float, list[str]]:
-    """Return the way and level that keep the step's part at the least cost, and in words what the part breaks.
+def _cheapest_within(problem: Problem, parts: Array, weight: Array, gates: Gates) -> tuple[Choice, list[str]]:
+    """Return each step's way and level that keep its part at the least cost, and in words what the parts break.
 
     A floor binds whatever the rule says; a part that no way keeps is kept as nearly as possible.
     """
-    ways, options, step = problem.options.ways, problem.options, problem.scenario.step[i]
-    mine = np.array(
-        [w for w in np.flatnonzero(ways.step == i) if _same_gate(problem, int(w), i, gates)], dtype=np.int64
-    )
-    if len(mine) == 0:
-        mine = np.flatnonzero(ways.step == i).astype(np.int64)
-    wanted = part / weight if weight > 0.0 else math.inf
+    ways, options, n = problem.options.ways, problem.options, problem.line.n_steps
+    wanted = np.divide(parts, weight, out=np.full(n, math.inf), where=weight > 0.0)
+    offered = _offered(problem, gates)
     # A part equal to what the step does today asks for nothing, whatever the last digit says.
-    delta = np.minimum(ways.delta_high[mine], np.maximum(wanted * (1.0 + 1e-12), 0.0))
-    reached = delta >= ways.delta_low[mine] * (1.0 - 1e-12)
-    if not reached.any():
-        best = int(mine[np.argmin(ways.delta_low[mine])])
-        return best, float(ways.z_high[best]), [f"'{step.name}' cannot get there ({ways.text[best].cap})"]
-    able, delta = mine[reached], np.maximum(delta[reached], ways.delta_low[mine][reached])
-    z = np.where(
-        delta >= ways.delta_high[able], ways.z_low[able], cv.sigma(ways.curves.take(able), np.maximum(delta, 1e-300))
-    )
-    z = np.clip(z, ways.z_low[able], ways.z_high[able])
+    most = np.maximum(wanted[ways.step] * (1.0 + 1e-12), 0.0)
+    delta = np.minimum(ways.delta_high, most)
+    able = np.flatnonzero(offered & (delta >= ways.delta_low * (1.0 - 1e-12)))
+    z = _levels_within(problem, able, delta[able])
     purchases = ways.uses[able] @ options.purchase_cost if len(options.purchase_cost) else 0.0
-    cost = ways.fixed_cost[able] + law_cost(ways, able, z) + purchases
-    best = int(np.argmin(cost))
-    return int(able[best]), float(z[best]), _floor_remark(problem, i, wanted)
+    cost = np.full(len(ways), math.inf)
+    cost[able] = ways.fixed_cost[able] + law_cost(ways, able, z) + purchases
+    level = ways.z_high.copy()
+    level[able] = z
+    missed = np.setdiff1d(np.arange(n), ways.step[able])
+    rows = _first_by(cost, offered, ways.step)
+    rows[missed] = _first_by(ways.delta_low, offered, ways.step)[missed]
+    return Choice(rows, level[rows]), _remarks(problem, rows, missed, wanted)
 
 
-def _floor_remark(problem: Problem, i: int, wanted: float) -> list[str]:
-    """Say when a step's part alone would leave it below its floor (the floor is kept all the same)."""
-    step, ways = problem.scenario.step[i], problem.options.ways
-    if step.at_least is None:
-        return []
-    mine = np.flatnonzero(ways.step == i)
-    today = problem.options.today[i]
-    below = today.level.sigma_level < ways.z_low[mine].min() * (1.0 - 1e-9)
-    allowed = float(ways.delta_high[mine].max())
-    if below and wanted > allowed:
-        return [f"'{step.name}' would stay below its floor ({floor_words(step.at_least)}); the floor is kept"]
-    return []
+def _first_by(score: Array, offered: Flags, step: Indices) -> Indices:
+    """Return the row of each step's lowest score among what is offered, the first of equals."""
+    rows = np.flatnonzero(offered)
+    order = rows[np.lexsort((score[rows], step[rows]))]
+    return np.asarray(order[np.flatnonzero(np.diff(step[order], prepend=-1))], dtype=np.int64)
 
 
-def _same_gate(problem: Problem, w: int, i: int, gates: Gates) -> bool:
-    table = problem.options.ways.gates
-    return all(float(getattr(table, name)[w]) == float(getattr(gates, name)[i]) for name in GATE_FIELDS)
+def _offered(problem: Problem, gates: Gates) -> Flags:
+    """Return the ways that leave their step's gate as it is, all of its ways where none does."""
+    ways = problem.options.ways
+    same = np.ones(len(ways), dtype=bool)
+    for name in GATE_FIELDS:
+        same &= getattr(ways.gates, name) == getattr(gates, name)[ways.step]
+    some = np.zeros(problem.line.n_steps, dtype=bool)
+    some[ways.step[same]] = True
+    return same | ~some[ways.step]
+
+
+def _levels_within(problem: Problem, rows: Indices, delta: Array) -> Array:
+    """Return the level of some ways at intensity `delta`, held inside each way's range."""
+    ways = problem.options.ways
+    delta = np.maximum(delta, ways.delta_low[rows])
+    z = ways.z_low[rows].copy()
+    moved = np.flatnonzero(delta < ways.delta_high[rows])
+    if len(moved):
+        z[moved] = cv.sigma(ways.curves.take(rows[moved]), np.maximum(delta[moved], 1e-300))
+    return np.asarray(np.clip(z, ways.z_low[rows], ways.z_high[rows]))
+
+
+def _remarks(problem: Problem, rows: Indices, missed: Indices, wanted: Array) -> list[str]:
+    """Say which parts cannot be kept, and which would leave a step below its floor (the floor is kept all the same)."""
+    ways, steps = problem.options.ways, problem.scenario.step
+    said = {i: f"'{steps[i].name}' cannot get there ({ways.text[rows[i]].cap})" for i in missed[:MOST_REMARKS].tolist()}
+    below = _left_below_floor(problem, wanted)
+    below[missed] = False
+    for i in np.flatnonzero(below)[:MOST_REMARKS].tolist():
+        said[i] = f"'{steps[i].name}' would stay below its floor ({floor_words(steps[i].at_least)}); the floor is kept"
+    texts = [said[i] for i in sorted(said)][:MOST_REMARKS]
+    more = len(missed) + int(below.sum()) - len(texts)
+    return [*texts, f"the same holds for {more:,} more steps"] if more else texts
+
+
+def _left_below_floor(problem: Problem, wanted: Array) -> Flags:
+    """Return where a part alone would leave a step, whose floor has to raise it, below that floor."""
+    ways, n = problem.options.ways, problem.line.n_steps
+    floored = np.array([step.at_least is not None for step in problem.scenario.step], dtype=bool)
+    least_z, most_delta = np.full(n, math.inf), np.full(n, -math.inf)
+    np.minimum.at(least_z, ways.step, ways.z_low)
+    np.maximum.at(most_delta, ways.step, ways.delta_high)
+    below = problem.options.today.levels.sigma_level < least_z * (1.0 - 1e-9)
+    return np.asarray(floored & below & (wanted > most_delta))
