@@ -10,12 +10,12 @@ from numpy.typing import NDArray
 from allocator import curves as cv
 from allocator.choice import Choice, Outcome, evaluate, keeps_limits
 from allocator.errors import SolverError
-from allocator.flow import GATE_FIELDS, Gates, inspection_cost
+from allocator.flow import GATE_FIELDS, Gates, inspection_cost, loads, run
 from allocator.problem import CAPITAL, COST, Problem, within
 from allocator.scenario.model import YIELD_NAMES
 from allocator.solve.answers import Market
 from allocator.solve.interior import GAP, Point, minimise
-from allocator.solve.price import build_duty, clear
+from allocator.solve.price import Near, build_duty, clear
 from allocator.solve.program import Program, build_program
 
 Array = NDArray[np.float64]
@@ -39,10 +39,12 @@ class FixedAnswer:
     price: dict[str, float] | None
 
 
-def solve_fixed(problem: Problem, rows: NDArray[np.int64], hopeless: float | None = None) -> FixedAnswer | None:
+def solve_fixed(
+    problem: Problem, rows: NDArray[np.int64], hopeless: float | None = None, near: Near | None = None
+) -> FixedAnswer | None:
     """Return the best levels for one way per step, None when these ways cannot keep the budgets and limits.
 
-    The search stops early, at a worse answer, once its bound passes `hopeless`.
+    The search stops early, at a worse answer, once its bound passes `hopeless`; it starts from `near`, if given.
 
     Raises
     ------
@@ -50,14 +52,13 @@ def solve_fixed(problem: Problem, rows: NDArray[np.int64], hopeless: float | Non
         When so many levels move under a limit on money that they cannot be worked out together.
     """
     ways = problem.options.ways
-    fewest = evaluate(problem.line, problem.options, Choice(rows, ways.z_high[rows]))
-    if not all(within(fewest.loads[name], budget) for name, budget in problem.budgets.items()):
+    if not _budgets_can_be_kept(problem, rows):
         return None
     if problem.objective in YIELD_NAMES and problem.capital is None and problem.spend is None:
-        return _at_an_end(problem, fewest)
+        return _at_an_end(problem, rows, ways.z_high[rows])
     if problem.objective == CAPITAL and not problem.budgets and problem.spend is None:
-        return _at_an_end(problem, evaluate(problem.line, problem.options, Choice(rows, ways.z_low[rows])))
-    by_price = _by_price(problem, rows, hopeless)
+        return _at_an_end(problem, rows, ways.z_low[rows])
+    by_price = _by_price(problem, rows, hopeless, near)
     if by_price is not None:
         return by_price
     if int(ways.moves[rows].sum()) > MOST_LEVELS:
@@ -74,15 +75,27 @@ def solve_fixed(problem: Problem, rows: NDArray[np.int64], hopeless: float | Non
     )
 
 
-def _at_an_end(problem: Problem, outcome: Outcome) -> FixedAnswer:
+def _budgets_can_be_kept(problem: Problem, rows: NDArray[np.int64]) -> bool:
+    """Return whether the lowest intensities keep every budget, since no other do better by any of them."""
+    if not problem.budgets:
+        return True
+    ways = problem.options.ways
+    gates = Gates(*(getattr(ways.gates, name)[rows] for name in GATE_FIELDS))
+    fewest = loads(problem.line, run(problem.line, ways.delta_low[rows], gates))
+    return all(within(fewest[name], budget) for name, budget in problem.budgets.items())
+
+
+def _at_an_end(problem: Problem, rows: NDArray[np.int64], z: Array) -> FixedAnswer:
     """Return an answer that no level could better: loads fall and capital rises with every level, all by themselves."""
-    moves = problem.options.ways.moves[outcome.choice.rows].any()
+    outcome, moves = evaluate(problem.line, problem.options, Choice(rows, z)), problem.options.ways.moves[rows].any()
     return FixedAnswer(
         outcome, outcome.value(problem.objective), dict.fromkeys(problem.budgets, 0.0) if moves else None
     )
 
 
-def _by_price(problem: Problem, rows: NDArray[np.int64], hopeless: float | None) -> FixedAnswer | None:
+def _by_price(
+    problem: Problem, rows: NDArray[np.int64], hopeless: float | None, near: Near | None
+) -> FixedAnswer | None:
     """Return the answer of the price road, where budgets alone couple the steps and it closes the gap; else None."""
     if problem.objective != COST or problem.capital is not None or problem.spend is not None:
         return None
@@ -91,9 +104,8 @@ def _by_price(problem: Problem, rows: NDArray[np.int64], hopeless: float | None)
     curves = ways.curves.take(rows)
     market = Market(curves, ways.z_low[rows], ways.z_high[rows], ways.lines.take(rows).pieces)
     aside = _money_aside(problem, rows, gates)
-    cleared = clear(
-        market, build_duty(line, gates, problem.budgets), curves, GAP, hopeless=(hopeless or np.inf) - aside
-    )
+    duty = build_duty(line, gates, problem.budgets)
+    cleared = clear(market, duty, curves, GAP, near, np.inf if hopeless is None else hopeless - aside)
     many = int(ways.moves[rows].sum()) > MOST_LEVELS
     if cleared is None or (cleared.gap > 10.0 * GAP and not many):
         return None

@@ -11,18 +11,16 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from allocator.flow import GATE_FIELDS, Gates
 from allocator.problem import COST, Problem, within
 from allocator.scenario.model import YIELD_NAMES
 from allocator.solve.answers import Market
 from allocator.solve.choose import Index, Menu, Priced, balance_menu, fill_budget, price_menu
 from allocator.solve.fixed import FixedAnswer, solve_fixed
-from allocator.solve.price import Duty, build_duty
+from allocator.solve.price import Duty, Near, build_duty
+from allocator.solve.reduce import first_ways, gates_given, gates_of_first
 
 Array = NDArray[np.float64]
 PASSES = 12
-CHOICE_GATE = tuple(name for name in GATE_FIELDS if name != "per_item")
-"""What a gate does; its price per item does not touch the flow."""
 
 
 @dataclass
@@ -49,13 +47,6 @@ def serves(problem: Problem) -> bool:
     return not problem.options.ways.uses.any() and gates_given(problem)
 
 
-def gates_given(problem: Problem) -> bool:
-    """Return whether no gate is a choice: all ways of a step find, mend and reject the same."""
-    ways, first = problem.options.ways, first_ways(problem)
-    columns = [getattr(ways.gates, name) for name in CHOICE_GATE]
-    return all(bool(np.array_equal(column, column[first][ways.step])) for column in columns)
-
-
 def best_of_a_yield(problem: Problem) -> bool:
     """Return whether the best of a yield is asked where every step can simply do its best."""
     unlimited = problem.capital is None and problem.spend is None
@@ -72,11 +63,6 @@ def fewest_defects(problem: Problem) -> Index:
     return np.asarray(order[np.flatnonzero(np.diff(ways.step[order], prepend=-1))], dtype=np.int64)
 
 
-def first_ways(problem: Problem) -> Index:
-    """Return the row of each step's first way; the table is in the steps' order."""
-    return np.searchsorted(problem.options.ways.step, np.arange(problem.line.n_steps)).astype(np.int64)
-
-
 @dataclass(frozen=True)
 class ByPrice:
     """The best answer, its bound, and the ways that no better plan can take (bool, shape (n_ways,))."""
@@ -86,7 +72,7 @@ class ByPrice:
     excluded: NDArray[np.bool_]
 
 
-def solve_by_price(problem: Problem, gap: float) -> ByPrice | None:
+def solve_by_price(problem: Problem, gap: float, near: Near | None = None) -> ByPrice | None:
     """Return the best answer with its bound, None where no choice that keeps the limits was found.
 
     Parameters
@@ -95,16 +81,19 @@ def solve_by_price(problem: Problem, gap: float) -> ByPrice | None:
         One that `serves`.
     gap : float
         Relative gap at which to stop.
+    near : Near, optional
+        What is known from a neighbouring question.
     """
     ways, line = problem.options.ways, problem.line
     first = first_ways(problem)
-    gates = Gates(*(getattr(ways.gates, name)[first] for name in GATE_FIELDS))
     fixed = ways.fixed_cost + (line.shipped * line.per_finished)[ways.step] * ways.gates.per_item
     market = Market(ways.curves, ways.z_low, ways.z_high, ways.lines.pieces)
     menu = Menu(market, first, ways.step, fixed)
     budgets = {problem.split: problem.budgets[problem.split]} if problem.split in problem.budgets else {}
-    duty = build_duty(line, gates, budgets)
+    duty = build_duty(line, gates_of_first(problem), budgets)
     here, price, found = np.minimum.reduceat(market.low, first), 1.0, _Found()
+    if near is not None:
+        here, price = near.intensity, near.prices.get(problem.split) or 1.0
     for _ in range(PASSES):
         before = found.best
         rows, price = _one_pass(problem, menu, duty, here, price, found)

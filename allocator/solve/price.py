@@ -35,11 +35,14 @@ class Duty:
     line, gates
     loads : list of (weight, fixed, budget)
         Σ weight·δ + fixed ≤ budget, for every yield with a target.
+    names : tuple
+        Of the loads.
     """
 
     line: Line
     gates: Gates
     loads: list[tuple[Array, float, float]]
+    names: tuple[str, ...] = ()
 
     def money(self, delta: Array) -> tuple[float, Array]:
         """Return scrap, rework and escapes [currency/year] at δ, and their slope in δ, shape (n_steps,)."""
@@ -72,6 +75,14 @@ class Cleared:
         return (self.total - self.bound) / max(abs(self.total), 1.0)
 
 
+@dataclass(frozen=True)
+class Near:
+    """What the answer to a neighbouring question tells: its intensities, shape (n_steps,), and prices by limit."""
+
+    intensity: Array
+    prices: dict[str, float]
+
+
 def build_duty(line: Line, gates: Gates, budgets: dict[str, float]) -> Duty:
     """Return the couplings of a line whose gates are fixed."""
     q, n = line.per_finished, line.n_steps
@@ -80,11 +91,11 @@ def build_duty(line: Line, gates: Gates, budgets: dict[str, float]) -> Duty:
         "final_yield": lambda: (gradient(line, gates, q * (1.0 - gates.reworked), 1.0), float(q @ gates.scrap_of_good)),
         "shipped_yield": lambda: (gradient(line, gates, np.zeros(n), 1.0), 0.0),
     }
-    return Duty(line, gates, [(*weights[name](), budget) for name, budget in budgets.items()])
+    return Duty(line, gates, [(*weights[name](), budget) for name, budget in budgets.items()], tuple(budgets))
 
 
 def clear(
-    market: Market, duty: Duty, curves: Curves, gap: float, prices: Array | None = None, hopeless: float = np.inf
+    market: Market, duty: Duty, curves: Curves, gap: float, near: Near | None = None, hopeless: float = np.inf
 ) -> Cleared | None:
     """Return the cheapest intensities for one way per step, None when the budgets cannot be kept.
 
@@ -97,16 +108,18 @@ def clear(
         Of the market's ways.
     gap : float
         Relative gap at which to stop.
-    prices : optional
-        Prices of the budgets to start from.
+    near : Near, optional
+        Prices and intensities to start from.
     hopeless : float, optional [currency/year]
         Stop as soon as the bound passes this.
     """
     if any(float(w @ market.low) + fixed > budget * (1.0 + 1e-12) + 4e-16 for w, fixed, budget in duty.loads):
         return None
-    price = np.full(len(duty.loads), np.nan) if prices is None else prices
+    price, start = np.full(len(duty.loads), np.nan), market.high
+    if near is not None:
+        price, start = np.array([near.prices.get(name, np.nan) for name in duty.names]), near.intensity
     stalled = 0
-    here = _inside(market.low, market.high, duty)
+    here = _inside(market.low, np.clip(start, market.low, market.high), duty)
     money, slope = duty.money(here)
     best, best_total, best_bound = here, np.inf, -np.inf
     history: list[tuple[float, float]] = []

@@ -8,9 +8,15 @@ import numpy as np
 from numpy.typing import NDArray
 
 from allocator import curves as cv
-from allocator.flow import GATE_FIELDS
+from allocator.flow import GATE_FIELDS, Gates
 from allocator.problem import Problem
+from allocator.solve.price import build_duty
 from allocator.ways import Ways
+
+SLACK = 1e-9
+"""Share of a budget by which a way may exceed it before it is dropped: far above the rounding of the figures."""
+CHOICE_GATE = tuple(name for name in GATE_FIELDS if name != "per_item")
+"""What a gate does; its price per item does not touch the flow."""
 
 
 def without_dominated(problem: Problem) -> Problem:
@@ -35,6 +41,43 @@ def without_dominated(problem: Problem) -> Problem:
     keep = np.ones(len(ways), dtype=bool)
     keep[rows[beaten]] = False
     return replace(problem, options=replace(problem.options, ways=ways.take(np.flatnonzero(keep))))
+
+
+def without_excessive(problem: Problem) -> Problem:
+    """Return the problem without ways that alone use up a budget, all other steps at their best.
+
+    Where no gate is a choice; near the best reachable yield this leaves few choices or one.
+    """
+    if not problem.budgets or not gates_given(problem):
+        return problem
+    ways = problem.options.ways
+    fewest = ways.least_by_step(problem.line.n_steps)
+    keep = np.ones(len(ways), dtype=bool)
+    for weight, fixed, budget in build_duty(problem.line, gates_of_first(problem), problem.budgets).loads:
+        used = float(weight @ fewest) + fixed
+        over = used + weight[ways.step] * (ways.delta_low - fewest[ways.step])
+        keep &= (over <= budget + SLACK * abs(budget)) | (ways.delta_low == fewest[ways.step])
+    if keep.all():
+        return problem
+    return replace(problem, options=replace(problem.options, ways=ways.take(np.flatnonzero(keep))))
+
+
+def first_ways(problem: Problem) -> NDArray[np.int64]:
+    """Return the row of each step's first way; the table is in the steps' order."""
+    return np.searchsorted(problem.options.ways.step, np.arange(problem.line.n_steps)).astype(np.int64)
+
+
+def gates_of_first(problem: Problem) -> Gates:
+    """Return the gate of each step's first way."""
+    first = first_ways(problem)
+    return Gates(*(getattr(problem.options.ways.gates, name)[first] for name in GATE_FIELDS))
+
+
+def gates_given(problem: Problem) -> bool:
+    """Return whether no gate is a choice: all ways of a step find, mend and reject the same."""
+    ways, first = problem.options.ways, first_ways(problem)
+    columns = [getattr(ways.gates, name) for name in CHOICE_GATE]
+    return all(bool(np.array_equal(column, column[first][ways.step])) for column in columns)
 
 
 def _comparable(ways: Ways, rows: NDArray[np.int64]) -> NDArray[np.int64]:

@@ -5,17 +5,20 @@ from __future__ import annotations
 import itertools
 import math
 import time
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from allocator.choice import Outcome
+from allocator.errors import SolverError
 from allocator.problem import CAPITAL, COST, Problem, within
 from allocator.solve.fixed import FixedAnswer, solve_fixed
 from allocator.solve.mixed import solve_mixed
 from allocator.solve.mixprice import ByPrice, best_of_a_yield, fewest_defects, serves, solve_by_price
-from allocator.solve.reduce import first_choices, ways_by_step, without_dominated
+from allocator.solve.price import Near
+from allocator.solve.reduce import first_choices, ways_by_step, without_dominated, without_excessive
 
 SMALL_MOVING, SMALL_STILL = 40, 3000
 """Choices solved one by one rather than by branch and bound: with levels to find in each, and without."""
@@ -27,6 +30,8 @@ GAP_PRICED = 1e-6
 LARGE = 600
 """Ways above which the wider aim applies."""
 SECONDS = 60.0
+SECONDS_LEFT = 20.0
+"""Time for the remainder that the price could not settle: its answer has a proof already."""
 LONGEST_MASTER = 4000
 """Steps beyond which the price road's answer stands with its printed gap: the master would take minutes."""
 PRICE_METHOD = "one price for all steps"
@@ -50,8 +55,13 @@ class Solved:
     blocked: str | None = None
     least: float = math.nan
 
+    @property
+    def near(self) -> Near | None:
+        """What a neighbouring question can start from."""
+        return None if self.outcome is None else Near(self.outcome.flow.intensity, self.price or {})
 
-def solve(problem: Problem, starts: list[NDArray[np.int64]] | None = None) -> Solved:
+
+def solve(problem: Problem, starts: list[NDArray[np.int64]] | None = None, near: Near | None = None) -> Solved:
     """Return the best choice for the problem's objective, with its proof.
 
     Parameters
@@ -59,29 +69,33 @@ def solve(problem: Problem, starts: list[NDArray[np.int64]] | None = None) -> So
     problem : Problem
     starts : list of int arrays, optional
         Choices (rows of the problem's own table) worth trying first, from a neighbouring question.
+    near : Near, optional
+        Prices and intensities of a neighbouring question.
     """
     began = time.monotonic()
-    reduced = without_dominated(problem)
+    reduced = without_excessive(without_dominated(problem))
     translated = _in_reduced(problem, reduced, starts or [])
-    solved = _by_size(reduced, translated) or _first_feasible(reduced)
+    solved = _by_size(reduced, translated, near=near) or _first_feasible(without_dominated(problem))
     if solved.outcome is not None and solved.problem.objective != problem.objective:
         # What was found keeps every limit; now it can serve as the start that the search was missing.
         solved = _by_size(reduced, [solved.outcome.choice.rows]) or solved
     return replace(solved, seconds=time.monotonic() - began)
 
 
-def _by_size(problem: Problem, starts: list[NDArray[np.int64]], enough: float | None = None) -> Solved | None:
+def _by_size(
+    problem: Problem, starts: list[NDArray[np.int64]], enough: float | None = None, near: Near | None = None
+) -> Solved | None:
     """Solve choice by choice, by price, or by branch and bound; None when no choice that keeps the limits is known."""
     few = SMALL_MOVING if problem.options.ways.moves.any() else SMALL_STILL
     choices = _count_choices(problem, few)
     if choices <= few:
-        return _every_choice(problem, choices)
+        return _every_choice(problem, choices, near)
     gap = GAP if len(problem.options.ways) <= LARGE else GAP_LARGE
     if best_of_a_yield(problem):
         answer = solve_fixed(problem, fewest_defects(problem))
         return None if answer is None else _solved(problem, answer, answer.bound, "every step at its best")
     if serves(problem):
-        priced = solve_by_price(problem, GAP)
+        priced = solve_by_price(problem, GAP, near)
         if priced is not None:
             solved = _solved(problem, priced.best, priced.bound, PRICE_METHOD)
             if solved.gap <= GAP_PRICED or problem.line.n_steps > LONGEST_MASTER:
@@ -106,7 +120,10 @@ def _settle_remainder(problem: Problem, priced: ByPrice, solved: Solved, gap: fl
     kept = np.flatnonzero(~priced.excluded)
     small = replace(problem, options=replace(problem.options, ways=problem.options.ways.take(kept)))
     rows = np.searchsorted(kept, priced.best.outcome.choice.rows).astype(np.int64)
-    search = solve_mixed(small, [rows], gap, SECONDS)
+    try:
+        search = solve_mixed(small, [rows], gap, SECONDS_LEFT)
+    except SolverError:
+        return solved  # The priced answer stands with its own proof.
     assert search.best is not None
     bound = max(min(search.bound, search.value(search.best)), priced.bound)
     method = f"{PRICE_METHOD}, branch and bound over the {len(kept):,} ways left"
@@ -121,12 +138,13 @@ def _count_choices(problem: Problem, few: int) -> int:
     return math.prod(several) if len(several) <= few else few + 1
 
 
-def _every_choice(problem: Problem, choices: int) -> Solved | None:
+def _every_choice(problem: Problem, choices: int, near: Near | None) -> Solved | None:
     best: FixedAnswer | None = None
     bound = math.inf
-    for rows in itertools.product(*ways_by_step(problem)):
+    each = itertools.product(*ways_by_step(problem)) if choices > 1 else [range(problem.line.n_steps)]
+    for rows in each:
         value = None if best is None else best.outcome.value(problem.objective)
-        answer = solve_fixed(problem, np.array(rows, dtype=np.int64), hopeless=value)
+        answer = solve_fixed(problem, np.array(rows, dtype=np.int64), value, near)
         if answer is None:
             continue
         bound = min(bound, answer.bound)
@@ -186,3 +204,25 @@ def _in_reduced(problem: Problem, reduced: Problem, starts: list[NDArray[np.int6
     own, kept = problem.options.ways, reduced.options.ways
     translated = [kept.find(own, rows) for rows in starts]
     return [rows for rows in translated if -1 not in rows]
+
+
+def sweep(problem: Problem, budgets: Sequence[float | None]) -> list[Solved]:
+    """Return the cheapest plan at each budget of the split yield, other targets, floors and limits kept.
+
+    Each answer starts from the one before, so budgets in falling (or rising) order are quickest.
+
+    Parameters
+    ----------
+    problem : Problem
+    budgets : sequence of float or None
+        Defect budgets −ln(yield); None lifts the target.
+    """
+    reduced, answers = without_dominated(problem), list[Solved]()
+    near, starts = None, list[NDArray[np.int64]]()
+    for budget in budgets:
+        solved = solve(reduced.with_budget(problem.split, budget), starts, near)
+        answers.append(solved)
+        if solved.outcome is not None:
+            near = solved.near
+            starts = [reduced.options.ways.find(solved.problem.options.ways, solved.outcome.choice.rows)]
+    return answers
