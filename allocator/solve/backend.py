@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import sys
+import warnings
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
@@ -98,7 +99,9 @@ def _ask(rows: Rows, chosen: NDArray[np.bool_], options: dict[str, Any]) -> _Sol
     constraints = [upper @ x <= rows.upper_limit, equal @ x == rows.equal_value, x >= rows.low, x <= rows.high]
     problem = cp.Problem(cp.Minimize(rows.cost @ x), constraints)
     try:
-        with _silent_stdout():
+        with _silent_stdout(), warnings.catch_warnings():
+            # A stop at the time allowed is "inaccurate" to cvxpy; here its dual bound is judged, not its word.
+            warnings.filterwarnings("ignore", message="Solution may be inaccurate")
             problem.solve(solver=cp.HIGHS, **options)  # type: ignore[no-untyped-call]
     except (cp.error.SolverError, ValueError):
         # cvxpy answers a status it does not know with either of the two.

@@ -27,7 +27,7 @@ GAP = 1e-7
 GAP_LARGE = 2e-5
 GAP_PRICED = 1e-6
 """Gap at which the price road's answer with choices is good enough; else the remainder is settled."""
-LARGE = 600
+LARGE = 250
 """Ways above which the wider aim applies."""
 SECONDS = 60.0
 SECONDS_LEFT = 20.0
