@@ -19,9 +19,10 @@ if TYPE_CHECKING:
     from allocator.errors import AllocatorError, InputError
     from allocator.measure import measure_capability
     from allocator.nines import price_nines
+    from allocator.option_table import review_table
     from allocator.plan import make_plan
     from allocator.rehearsal import rehearse
-    from allocator.results import CapitalCase, Check, Comparison, Nines, Plan, Rehearsal, Study, Today
+    from allocator.results import CapitalCase, Check, Comparison, Nines, Plan, Rehearsal, Review, Study, Today
     from allocator.review import review_page
     from allocator.scenario.book_out import write_workbook
     from allocator.scenario.model import Scenario
@@ -37,6 +38,7 @@ _HOMES = {
     "Nines": "results",
     "Plan": "results",
     "Rehearsal": "results",
+    "Review": "results",
     "Scenario": "scenario.model",
     "Study": "results",
     "Today": "results",
@@ -49,6 +51,7 @@ _HOMES = {
     "read_scenario": "scenario.read",
     "rehearse": "rehearsal",
     "review_page": "review",
+    "review_table": "option_table",
     "scenario_from_dict": "scenario.read",
     "see_today": "today",
     "write_workbook": "scenario.book_out",
@@ -63,6 +66,7 @@ __all__ = [
     "Nines",
     "Plan",
     "Rehearsal",
+    "Review",
     "Scenario",
     "Study",
     "Today",
@@ -75,6 +79,7 @@ __all__ = [
     "read_scenario",
     "rehearse",
     "review_page",
+    "review_table",
     "scenario_from_dict",
     "see_today",
     "write_workbook",

@@ -7,6 +7,7 @@ from allocator.check import check_scenario
 from allocator.compare import compare_scenarios
 from allocator.measure import measure_capability
 from allocator.nines import price_nines
+from allocator.option_table import review_table
 from allocator.plan import make_plan
 from allocator.rehearsal import rehearse
 from allocator.review import review_page
@@ -24,6 +25,7 @@ __all__ = [
     "read_scenario",
     "rehearse",
     "review_page",
+    "review_table",
     "see_today",
     "write_workbook",
 ]

@@ -3,32 +3,43 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from allocator import curves as cv
 from allocator.choice import Outcome
-from allocator.flow import GATE_FIELDS, Flow, Gates, Line, loads, money, run
+from allocator.flow import GATE_FIELDS, Flow, Gates, Line, loads, money, run, yields
 from allocator.money import annual_cost
 from allocator.problem import Problem, within
-from allocator.results import Asset, Money
+from allocator.results import Asset, Money, Yields
 from allocator.scenario.model import Alternative, Costs, Law
-from allocator.standing import flow_today
+from allocator.standing import flow_today, shipped_known
+from allocator.states import States
 from allocator.variants import IMPROVE
 from allocator.ways import Ways, law_cost
 
 
 @dataclass(frozen=True)
 class Stand:
-    """The line run in one way; `of_step` gives the index of each asset's step, −1 for a shared purchase."""
+    """The line run in one way."""
 
     line: Line
     flow: Flow
     assets: tuple[Asset, ...]
-    of_step: tuple[int, ...]
     money: Money
+    inspected: bool
+    """Whether some gate states an inspection, so that escapes are known."""
+
+    @property
+    def capital(self) -> float:
+        """What is paid today, less trade-ins [currency]."""
+        return float(sum(asset.price - asset.trade_in for asset in self.assets))
+
+    @property
+    def yields(self) -> Yields:
+        return yields(self.line, self.flow, self.inspected)
 
     def keeps(self, budgets: dict[str, float]) -> bool:
         """Return whether all targets are met."""
@@ -38,7 +49,7 @@ class Stand:
 
 def stand_today(problem: Problem) -> Stand:
     """Return the line as it stands: nothing bought, nothing improved."""
-    return _stand(problem, flow_today(problem), [])
+    return _stand(problem, flow_today(problem), [], problem.options.today)
 
 
 def stand_of(problem: Problem, ways: Ways, outcome: Outcome) -> Stand:
@@ -46,7 +57,7 @@ def stand_of(problem: Problem, ways: Ways, outcome: Outcome) -> Stand:
     owned = [*_shared(problem, outcome.bought)]
     for i, (row, z) in enumerate(zip(outcome.choice.rows.tolist(), outcome.choice.z.tolist(), strict=True)):
         owned += _at_step(problem, ways, i, row, z)
-    return _stand(problem, outcome.flow, owned)
+    return _stand(problem, outcome.flow, owned, ways.states.take(outcome.choice.rows))
 
 
 def stand_with_only(problem: Problem, rows: dict[int, tuple[Ways, int, float]]) -> Stand:
@@ -55,22 +66,24 @@ def stand_with_only(problem: Problem, rows: dict[int, tuple[Ways, int, float]]) 
     intensity, gates = today.intensity(), today.gates()
     figures = {name: getattr(gates, name).copy() for name in GATE_FIELDS}
     used = np.zeros(len(problem.options.purchase_names), dtype=bool)
-    owned: list[tuple[Asset, int]] = []
+    inspection, owned = today.inspection.copy(), list[Asset]()
     for i, (ways, row, z) in rows.items():
         one = ways.take(np.array([row]))
         intensity[i] = cv.intensity(one.curves, np.array([z]))[0]
         for name in GATE_FIELDS:
             figures[name][i] = getattr(one.gates, name)[0]
+        inspection[i] = one.states.inspection[0]
         used |= one.uses[0]
         owned += _at_step(problem, ways, i, row, z)
-    return _stand(problem, run(problem.line, intensity, Gates(**figures)), [*_shared(problem, used), *owned])
+    flow = run(problem.line, intensity, Gates(**figures))
+    return _stand(problem, flow, [*_shared(problem, used), *owned], replace(today, inspection=inspection))
 
 
-def _stand(problem: Problem, flow: Flow, owned: list[tuple[Asset, int]]) -> Stand:
+def _stand(problem: Problem, flow: Flow, owned: list[Asset], states: States) -> Stand:
     rate = rate_of(problem)
-    paid = sum(yearly(asset, rate) for asset, _ in owned)
+    paid = sum(yearly(asset, rate) for asset in owned)
     return Stand(
-        problem.line, flow, tuple(a for a, _ in owned), tuple(i for _, i in owned), money(problem.line, flow, paid)
+        problem.line, flow, tuple(owned), money(problem.line, flow, paid), inspected=shipped_known(problem, states)
     )
 
 
@@ -85,7 +98,7 @@ def yearly(asset: Asset, rate: float) -> float:
     return owning + asset.per_year + asset.per_item + asset.price_allowance
 
 
-def _asset(problem: Problem, name: str, i: int, costs: Costs, items: float) -> tuple[Asset, int]:
+def _asset(problem: Problem, name: str, i: int, costs: Costs, items: float) -> Asset:
     demand = problem.scenario.demand
     life = costs.life_years or demand.years or 1.0
     own = costs if isinstance(costs, Alternative) else None
@@ -95,16 +108,16 @@ def _asset(problem: Problem, name: str, i: int, costs: Costs, items: float) -> t
         per_item=0.0 if own is None else own.per_item * items,
         price_allowance=0.0 if own is None else own.price_allowance * problem.line.shipped,
         equivalent_annual_cost=annual_cost(costs.price, costs.trade_in, costs.resale, rate_of(problem), life),
-    ), i  # fmt: skip
+    )  # fmt: skip
 
 
-def _shared(problem: Problem, bought: NDArray[np.bool_]) -> Iterator[tuple[Asset, int]]:
+def _shared(problem: Problem, bought: NDArray[np.bool_]) -> Iterator[Asset]:
     for purchase, taken in zip(problem.scenario.purchase, bought.tolist(), strict=True):
         if taken:
             yield _asset(problem, purchase.name, -1, purchase, 0.0)
 
 
-def _at_step(problem: Problem, ways: Ways, i: int, row: int, z: float) -> Iterator[tuple[Asset, int]]:
+def _at_step(problem: Problem, ways: Ways, i: int, row: int, z: float) -> Iterator[Asset]:
     step, items = problem.scenario.step[i], float(problem.line.per_finished[i] * problem.line.shipped)
     chosen = ways.text[row].alternatives
     for alternative in step.alternative:
@@ -112,7 +125,7 @@ def _at_step(problem: Problem, ways: Ways, i: int, row: int, z: float) -> Iterat
             yield _asset(problem, alternative.name, i, alternative, items)
     cost = float(law_cost(ways, np.array([row]), np.array([z]))[0])
     if step.improve is not None and cost > 0.0:
-        yield _law_asset(problem, step.improve, i, cost, float(ways.capital_per_cost[row])), i
+        yield _law_asset(problem, step.improve, i, cost, float(ways.capital_per_cost[row]))
 
 
 def _law_asset(problem: Problem, law: Law, i: int, cost: float, capital_per_cost: float) -> Asset:

@@ -1,4 +1,4 @@
-"""The commands of those who answer for the money: compare, case."""
+"""The commands of those who answer for the money: compare, case, review."""
 
 from __future__ import annotations
 
@@ -8,6 +8,7 @@ from typing import Annotated
 import typer
 
 from allocator.cli.app import OUT_OF_REACH, AsCsv, AsJson, File, app, form_of, load, refused, show
+from allocator.cli.progress import progress
 
 Files = Annotated[list[Path], typer.Argument(metavar="FILE FILE...", help="Scenario files.", show_default=False)]
 
@@ -41,6 +42,25 @@ def case(
     from allocator import api
 
     answer = api.capital_case(load(file), name)
+    show(answer, form)
+    if not answer.reached:
+        raise typer.Exit(OUT_OF_REACH)
+
+
+@app.command()
+def review(
+    file: File,
+    step: Annotated[str | None, typer.Option(metavar="NAME", help="One step alone, and later checks for it.")] = None,
+    as_json: AsJson = False,
+    as_csv: AsCsv = False,
+) -> None:
+    """Set all options in one table for a design review, as in: allocator review line.toml --step weld"""
+    form = form_of(as_json, as_csv)
+    from allocator import api
+
+    scenario = load(file)
+    with progress("weighing the options") as watch:
+        answer = api.review_table(scenario, step, watch=watch)
     show(answer, form)
     if not answer.reached:
         raise typer.Exit(OUT_OF_REACH)

@@ -21,8 +21,10 @@ from allocator.report.plain import to_json
 from allocator.report.plan_text import plan_text
 from allocator.report.rehearsal_data import rehearsal_csv, rehearsal_json
 from allocator.report.rehearsal_text import rehearsal_text
+from allocator.report.review_data import review_csv, review_json
+from allocator.report.review_text import review_text
 from allocator.report.today_text import today_text
-from allocator.results import CapitalCase, Check, Comparison, Nines, Plan, Rehearsal, Study, Today
+from allocator.results import CapitalCase, Check, Comparison, Nines, Plan, Rehearsal, Review, Study, Today
 
 Form = Literal["text", "json", "csv"]
 
@@ -42,6 +44,7 @@ _RENDERERS: dict[type, _Renderers] = {
     CapitalCase: _Renderers(case_text, case_json, case_csv),
     Rehearsal: _Renderers(rehearsal_text, rehearsal_json, rehearsal_csv),
     Study: _Renderers(measure_text, measure_json, measure_csv),
+    Review: _Renderers(review_text, review_json, review_csv),
     Comparison: _Renderers(compare_text, compare_json, compare_csv),
 }
 

@@ -8,6 +8,7 @@ from allocator.results.capital import Asset, Capacity, CapitalCase, CashCase, Ca
 from allocator.results.compare import Compared, Comparison, StepAcross, TakenAcross
 from allocator.results.line import Caution, Level, Money, TodayLine, Yields
 from allocator.results.nines import Nines, NinesPoint
+from allocator.results.option_table import LineFigures, Review, ReviewedStep, ReviewRow
 from allocator.results.plan import BestReachable, Binding, Bought, Plan, Proof, Restraint, RuleOutcome, StepTarget
 from allocator.results.rehearsal import Rehearsal, Rehearsed, StepRehearsed
 from allocator.results.review import (
@@ -46,6 +47,7 @@ __all__ = [
     "Indices",
     "Level",
     "Lever",
+    "LineFigures",
     "LinePart",
     "Money",
     "Nines",
@@ -56,7 +58,10 @@ __all__ = [
     "Rehearsal",
     "Rehearsed",
     "Restraint",
+    "Review",
     "ReviewPage",
+    "ReviewRow",
+    "ReviewedStep",
     "Row",
     "RowAt",
     "RuleOutcome",
