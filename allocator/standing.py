@@ -58,6 +58,12 @@ def flow_today(problem: Problem) -> Flow:
     return flow_of_states(problem.line, problem.options.today)
 
 
+def names_fed(problem: Problem) -> list[str | None]:
+    """Return the name of the step that each step feeds, None for the last."""
+    names = [step.name for step in problem.scenario.step]
+    return [None if fed < 0 else names[fed] for fed in problem.line.feeds.tolist()]
+
+
 def shipped_known(problem: Problem, states: States) -> bool:
     """Return whether escapes are known: some gate of the line states an inspection, or they are what is asked."""
     asked = problem.split == "shipped_yield" or "shipped_yield" in problem.budgets

@@ -14,7 +14,7 @@ from allocator.problem import Problem
 from allocator.results import Level, StepTarget, records
 from allocator.scales import NAME
 from allocator.scenario.model import Floor, Step
-from allocator.standing import levels_at, levels_today, load_shares
+from allocator.standing import levels_at, levels_today, load_shares, names_fed
 from allocator.state import floor_words
 from allocator.states import floor_sigmas
 from allocator.ways import Ways
@@ -43,6 +43,7 @@ def step_targets(problem: Problem, ways: Ways, outcome: Outcome) -> tuple[StepTa
         "capital": outcome.capital_by_step,
         "first_pass_yield": first_pass(flow),
         "floor_binds": binds,
+        "found": line.per_finished * flow.found,
     }
     return records(
         StepTarget,
@@ -50,6 +51,7 @@ def step_targets(problem: Problem, ways: Ways, outcome: Outcome) -> tuple[StepTa
             "step": [step.name for step in steps],
             "supplier": [step.supplier for step in steps],
             "safety": [step.safety for step in steps],
+            "feeds": names_fed(problem),
             "today": levels_today(problem),
             "target": target,
             "floor": [floor_words(step.at_least) for step in steps],

@@ -11,7 +11,7 @@ from allocator.flow import first_pass, inspection_cost, rework_cost, scrap_lost_
 from allocator.problem import Problem, pose
 from allocator.results import StepToday, Today
 from allocator.scenario.model import Scenario
-from allocator.standing import flow_today, levels_today, line_today
+from allocator.standing import flow_today, levels_today, line_today, names_fed
 
 
 def see_today(scenario: Scenario) -> Today:
@@ -45,7 +45,7 @@ def _steps(problem: Problem) -> tuple[StepToday, ...]:
         lost = scrap + rework + inspection
         money_share = lost / lost.sum() if 0.0 < lost.sum() < math.inf else np.zeros(line.n_steps)
     all_defects = sum(level.dpu for level in levels)
-    yields_ = first_pass(flow)
+    yields_, found, feeds = first_pass(flow), line.per_finished * flow.found, names_fed(problem)
     return tuple(
         StepToday(
             step=step.name,
@@ -58,6 +58,8 @@ def _steps(problem: Problem) -> tuple[StepToday, ...]:
             inspection=float(inspection[i]),
             defect_share=levels[i].dpu / all_defects if all_defects else 0.0,
             money_share=float(money_share[i]),
+            feeds=feeds[i],
+            found=float(found[i]),
         )
         for i, step in enumerate(problem.scenario.step)
     )

@@ -91,6 +91,7 @@ def step_target(name: str, **changes: Any) -> StepTarget:
         step=name, supplier=None, today=level(3.9, None), target=level(), alternatives=(), law=None, budget_share=0.2,
         starts_per_year=50_251.3, scrap=1234.5, rework=0.0, inspection=0.0, improvement=0.0, capital=0.0, at_cap=False,
         cap=None, floor=None, floor_distance=None, floor_binds=False, safety=False, first_pass_yield=1.0,
+        feeds=None, found=0.0019,
     )  # fmt: skip
     return replace(step, **changes)
 
@@ -145,7 +146,7 @@ def some_nines(**changes: Any) -> Nines:
 
 
 def a_today(known: bool = True) -> Today:
-    steps = tuple(StepToday(name, None, level(), 0.998, 5e4, 1e3, 0.0, 0.0, 0.2, 0.2) for name in NAMES)
+    steps = tuple(StepToday(name, None, level(), 0.998, 5e4, 1e3, 0.0, 0.0, 0.2, 0.2, None, 0.0) for name in NAMES)
     return Today("Frame line", "EUR", 5e4, today_line(known), steps, {}, {}, ("shift of 1.5",), (CAUTION,))
 
 

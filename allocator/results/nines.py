@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from functools import cached_property
 from typing import TYPE_CHECKING
@@ -31,6 +32,14 @@ class NinesPoint:
     price_of_defect_budget: float | None
     changes: tuple[str, ...]
     gap: float
+
+    @property
+    def price_per_nine(self) -> float | None:
+        """Rise of the least total per nine, near this point and with the choices kept; None without a local price."""
+        if self.price_of_defect_budget is None:
+            return None
+        # The budget is -ln(1 - loss) and a nine is ln 10 of ln(loss), so a nine takes ln 10 * loss / (1 - loss) of it.
+        return self.price_of_defect_budget * math.log(10.0) * self.target_loss / self.target_yield
 
 
 @shown

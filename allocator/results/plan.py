@@ -43,6 +43,10 @@ class StepTarget:
     floor_binds: bool
     safety: bool
     first_pass_yield: float
+    feeds: str | None
+    """The step that its items go into; None for the last."""
+    found: float
+    """Expected defects per finished unit that are found at this step's gate, wherever they arose."""
 
 
 @dataclass(frozen=True)

@@ -30,6 +30,10 @@ class StepToday:
     """Part of all defects per finished unit that arise in this step."""
     money_share: float
     """Part of today's scrap, rework and inspection that is lost at this step's gate."""
+    feeds: str | None
+    """The step that its items go into; None for the last."""
+    found: float
+    """Expected defects per finished unit that are found at this step's gate, wherever they arose."""
 
 
 @shown
