@@ -69,6 +69,10 @@ File = Annotated[
     Path, typer.Argument(metavar="FILE", help="Scenario file (TOML, or a workbook .xlsx).", show_default=False)
 ]
 AsJson = Annotated[bool, typer.Option("--json", help="Print the answer as JSON, at full precision.")]
+Figures = Annotated[
+    Path | None,
+    typer.Option("--figures", metavar="DIR", help="Draw its figures into a folder as well, as SVG and PNG."),
+]
 AsCsv = Annotated[bool, typer.Option("--csv", help="Print the table as CSV, at full precision.")]
 
 
@@ -113,6 +117,16 @@ def show(answer: object, form: Any) -> None:
 
     width = shutil.get_terminal_size().columns if sys.stdout.isatty() else LOG_WIDTH
     sys.stdout.write(render(answer, form, width))
+
+
+def draw(answer: object, folder: Path | None) -> None:
+    """Write the figures of an answer, if they are asked for."""
+    if folder is None:
+        return
+    from allocator.figures import save_figures
+
+    for path in save_figures(answer, folder):
+        typer.echo(f"Wrote {path}", err=True)
 
 
 def refused(option: str, found: str, allowed: str) -> InputError:

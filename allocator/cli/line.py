@@ -7,7 +7,7 @@ from typing import Annotated
 
 import typer
 
-from allocator.cli.app import OUT_OF_REACH, AsCsv, AsJson, File, app, form_of, load, refused, show
+from allocator.cli.app import OUT_OF_REACH, AsCsv, AsJson, Figures, File, app, draw, form_of, load, refused, show
 from allocator.cli.asked import (
     Hold,
     Of,
@@ -51,12 +51,14 @@ def check(file: File, as_json: AsJson = False, as_csv: AsCsv = False) -> None:
 
 
 @app.command()
-def today(file: File, as_json: AsJson = False, as_csv: AsCsv = False) -> None:
+def today(file: File, figures: Figures = None, as_json: AsJson = False, as_csv: AsCsv = False) -> None:
     """Show where the line stands: its yields, its defects and where the money goes."""
     form = form_of(as_json, as_csv)
     from allocator import api
 
-    show(api.see_today(load(file)), form)
+    answer = api.see_today(load(file))
+    show(answer, form)
+    draw(answer, figures)
 
 
 @app.command()
@@ -74,6 +76,7 @@ def plan(
     without: Without = None,
     with_: With = None,
     xlsx: Annotated[Path | None, typer.Option(metavar="FILE", help="Write the plan to a workbook as well.")] = None,
+    figures: Figures = None,
     as_json: AsJson = False,
     as_csv: AsCsv = False,
 ) -> None:
@@ -99,6 +102,7 @@ def plan(
 
         write_plan_book(answer, xlsx)
         typer.echo(f"Wrote {xlsx}", err=True)
+    draw(answer, figures)
     if not answer.reached:
         raise typer.Exit(OUT_OF_REACH)
 
@@ -108,6 +112,7 @@ def nines(
     file: File,
     points: Annotated[int | None, typer.Option(min=2, help="Add an even grid of this many points.")] = None,
     of: Of = None,
+    figures: Figures = None,
     as_json: AsJson = False,
     as_csv: AsCsv = False,
 ) -> None:
@@ -117,5 +122,6 @@ def nines(
 
     answer = api.price_nines(load(file), of=name_of(of), points=points)
     show(answer, form)
+    draw(answer, figures)
     if answer.highest is None:
         raise typer.Exit(OUT_OF_REACH)

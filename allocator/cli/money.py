@@ -7,7 +7,7 @@ from typing import Annotated
 
 import typer
 
-from allocator.cli.app import OUT_OF_REACH, AsCsv, AsJson, File, app, form_of, load, refused, show
+from allocator.cli.app import OUT_OF_REACH, AsCsv, AsJson, Figures, File, app, draw, form_of, load, refused, show
 from allocator.cli.progress import progress
 
 Files = Annotated[list[Path], typer.Argument(metavar="FILE FILE...", help="Scenario files.", show_default=False)]
@@ -34,6 +34,7 @@ def case(
         str | None,
         typer.Argument(metavar="[NAME]", help="An alternative, purchase or law (STEP: NAME); without it, the plan."),
     ] = None,
+    figures: Figures = None,
     as_json: AsJson = False,
     as_csv: AsCsv = False,
 ) -> None:
@@ -43,6 +44,7 @@ def case(
 
     answer = api.capital_case(load(file), name)
     show(answer, form)
+    draw(answer, figures)
     if not answer.reached:
         raise typer.Exit(OUT_OF_REACH)
 

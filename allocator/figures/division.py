@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from typing import TYPE_CHECKING, NamedTuple
 
-from allocator.figures.style import ACCENT, HATCH, MID, PALE, RULE, calm, explain, money_ticks, new_row, short
+from allocator.figures.style import ACCENT, HATCH, MID, PALE, RULE, calm, cut, explain, money_ticks, new_row, short
 from allocator.report import words
 from allocator.results import Plan
 
@@ -47,7 +47,7 @@ def division(plan: Plan, axes: Sequence[Axes] | None = None) -> tuple[Axes, Axes
     left.xaxis.set_major_formatter(lambda value, _: f"{value * 100:.3g} %")
     left.set_yticks(list(rows), [short(part.name) for part in parts])
     left.invert_yaxis()
-    calm(right, "Money", f"{words.clean(plan.currency)}/year")
+    calm(right, "Money", f"{cut(plan.currency)}/year")
     improvement = [p.improvement for p in parts]
     right.barh(rows, improvement, height=BAR, color=ACCENT, label="improvement")
     right.barh(

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
-from allocator.figures.style import ACCENT, INK, MID, RULE, SMALL, SOFT, calm, money_ticks, new_axes, plain
+from allocator.figures.style import ACCENT, INK, MID, RULE, SMALL, SOFT, calm, cut, money_ticks, new_axes, plain
 from allocator.report import words
 from allocator.results import Nines, NinesPoint
 
@@ -33,7 +33,7 @@ def frontier(nines: Nines, ax: Axes | None = None) -> Axes:
         x is nines of the split yield, y the total [currency/year].
     """
     ax = new_axes(ax, 7.5, 4.4)
-    yield_name, currency = words.yield_name(nines.split), words.clean(nines.currency)
+    yield_name, currency = words.yield_name(nines.split), cut(nines.currency)
     calm(ax, f"What each nine of {yield_name} costs", f"nines of {yield_name}", f"least total, {currency}/year")
     money_ticks(ax.yaxis)
     ax.grid(axis="y", color=RULE, linewidth=0.6)

@@ -5,7 +5,20 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 from allocator.errors import RangeError
-from allocator.figures.style import ACCENT, HATCH, INK, MID, PALE, RULE, calm, explain, money_ticks, new_axes, plain
+from allocator.figures.style import (
+    ACCENT,
+    HATCH,
+    INK,
+    MID,
+    PALE,
+    RULE,
+    calm,
+    cut,
+    explain,
+    money_ticks,
+    new_axes,
+    short,
+)
 from allocator.report import words
 from allocator.results import CapitalCase, CashCase, Lever
 
@@ -41,8 +54,8 @@ def sensitivities(case: CapitalCase, against: str | None = None, ax: Axes | None
     chosen = _comparison(case, against)
     levers = chosen.levers[:MOST_LEVERS]
     ax = new_axes(ax, 8.0, 1.5 + 0.34 * len(levers))
-    subject = "the plan" if case.subject is None else f"'{case.subject}'"
-    calm(ax, f"Worth of {subject} against {chosen.against}", f"{words.clean(case.currency)}/year")
+    subject = "the plan" if case.subject is None else f"'{cut(case.subject)}'"
+    calm(ax, f"Worth of {subject} against {chosen.against}", f"{cut(case.currency)}/year")
     rows, base = range(len(levers)), chosen.worth_per_year
     ax.barh(
         rows, [lever.worth_low - base for lever in levers], left=base, height=BAR, color=PALE, edgecolor=MID,
@@ -73,5 +86,5 @@ def _comparison(case: CapitalCase, against: str | None) -> CashCase:
 
 def _label(lever: Lever, currency: str) -> str:
     unit = currency if lever.unit == "currency" else lever.unit
-    ends = f"{plain(lever.figure)}\n{words.number(lever.low)} … {words.number(lever.high)} {plain(unit)}"
+    ends = f"{short(lever.figure)}\n{words.number(lever.low)} … {words.number(lever.high)} {short(unit)}"
     return ends if lever.turns_at is None else f"{ends}; turns at {words.number(lever.turns_at)}"

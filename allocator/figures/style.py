@@ -65,10 +65,15 @@ def plain(text: str) -> str:
     return clean(text).replace("$", r"\$")
 
 
-def short(name: str) -> str:
-    """Return a name that fits beside a bar."""
+def cut(name: str) -> str:
+    """Return a name no longer than fits."""
     kept = clean(name)
-    return plain(kept if len(kept) <= LONGEST_NAME else f"{kept[: LONGEST_NAME - 1]}…")
+    return kept if len(kept) <= LONGEST_NAME else f"{kept[: LONGEST_NAME - 1]}…"
+
+
+def short(name: str) -> str:
+    """Return a name as it is to be read beside a bar."""
+    return plain(cut(name))
 
 
 def money_ticks(axis: object) -> None:

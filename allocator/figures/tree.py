@@ -6,7 +6,7 @@ from collections.abc import Callable, Mapping, Sequence
 from typing import TYPE_CHECKING, Any, NamedTuple
 
 from allocator.errors import RangeError
-from allocator.figures.style import ACCENT, HATCH, INK, MID, PALE, SMALL, SOFT, TEXT, calm, new_axes, plain, short
+from allocator.figures.style import ACCENT, HATCH, INK, MID, PALE, SMALL, SOFT, TEXT, calm, cut, new_axes, plain, short
 from allocator.report import words
 from allocator.results import Plan, StepTarget, StepToday, Today
 
@@ -60,7 +60,7 @@ def line(answer: Today | Plan, ax: Axes | None = None) -> Axes:
     state = "today" if isinstance(answer, Today) else "under the plan"
     calm(ax, f"Where defects arise, are found, and cost money, {state}")
     _draw_tree(ax, shown, lanes)
-    _draw_columns(ax, shown, max(lanes.values()), words.clean(answer.currency))
+    _draw_columns(ax, shown, max(lanes.values()), cut(answer.currency))
     ax.set_ylim(len(shown) - 0.3, -1.6)
     ax.set_xticks([])
     ax.set_yticks([])
