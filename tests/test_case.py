@@ -281,6 +281,13 @@ def test_without_horizon_or_with_an_unknown_name_it_is_refused() -> None:
         case_of(line(form(), demand=DEMAND), "pres")
 
 
+def test_tables_for_python(shipped: CapitalCase) -> None:
+    assert shipped.figures["npv"].tolist() == [case.npv for case in shipped.cases]
+    last = shipped.years.groupby("against", sort=False)["cumulative_discounted"].last()
+    assert last.tolist() == pytest.approx(shipped.figures["npv"].tolist(), rel=1e-9, abs=1e-6)
+    assert shipped.title in repr(shipped)
+
+
 def run(*arguments: str) -> Any:
     return CliRunner().invoke(app, ["case", *arguments])
 

@@ -188,6 +188,14 @@ def test_progress_is_told() -> None:
     assert told == [(1, 3), (2, 3), (3, 3)]
 
 
+def test_a_table_for_python(review: Review) -> None:
+    table = review.options
+    assert len(table) == len(review.rows)
+    assert table["over_living"][0] == 0.0
+    assert table.loc[table["option"] == "new bore", "capital_alone"].tolist() == [30_000]
+    assert ".rows as records" in repr(review)
+
+
 def run(*arguments: str) -> Any:
     return CliRunner().invoke(app, ["review", *arguments])
 

@@ -1,19 +1,19 @@
 """Do defects per unit, escapes and the cost of inspections agree with published worked examples?
 
-Left out: inspection after every operation against one final inspection (Groover, Automation, Production Systems, and
-CIM). It charges inspection on the pieces that reach it, this model on the pieces shipped. Clustered defects (negative
-binomial yields) are another model altogether.
+Left out: clustered defects (negative binomial yields), which are another model altogether.
 """
 
 from __future__ import annotations
 
+import itertools
 import math
+from pathlib import Path
 from typing import Any
 
 import pytest
 
 from allocator.results import Today
-from tests.published.lines import line, plan, step, today, with_defects
+from tests.published.lines import command, line, plan, step, today, with_defects
 
 MANY = 1e6
 """Opportunities among which a count per unit is spread, so that it is Poisson as the sources have it."""
@@ -159,3 +159,118 @@ def test_inspect_all_or_none(bad: float, decision: str) -> None:
         assert answer.today.money is not None
         assert answer.money is not None
         assert (answer.today.money.total - answer.money.total) / 1000 == pytest.approx(0.35, rel=1e-9)
+
+
+def test_the_capital_case_of_inspecting_all(tmp_path: Path) -> None:
+    """The same numbers as a case: $15 of defects an hour avoided on 20 units, $0.40 a unit spent, $0.35 gained."""
+    every_unit = {
+        "name": "inspect every unit", "inspection": {"finds": 1.0, "per_item": 0.40},
+        "rework": {"share": 1.0, "cost": 0.0},
+    }  # fmt: skip
+    unit = step("unit", with_defects(0.03), inspection={"finds": 0.0}, alternative=[every_unit])
+    hour = {"shipped_per_year": 20, "years": 1, "discount_rate": 0}
+    seen = command(tmp_path, "case", line(unit, demand=hour, target={"escape_cost": 25.0}), "inspect every unit")
+    assert seen["verdict"] == "buy"
+    case = seen["cases"][0]
+    assert case["savings"]["escapes"] == pytest.approx(15.0, rel=1e-9)
+    assert case["savings"]["inspection"] == pytest.approx(-0.40 * 20, rel=1e-9)
+    assert case["worth_per_year"] == pytest.approx(0.35 * 20, rel=1e-9)
+
+
+@pytest.mark.parametrize(("bad", "decision"), [(0.1601, "inspect"), (0.1599, "leave")])
+def test_the_kp_rule(bad: float, decision: str) -> None:
+    """All or none by k1/k2: inspect for $1, else replace later for $6.25, indifferent at p = 0.16.
+
+    Rule: Barlow, Engineering Reliability (SIAM 1998), section 5.3; figures of a textbook problem, answer 1/6.25.
+    """
+    all_of_it = {
+        "name": "inspect", "inspection": {"finds": 1.0, "per_item": 1.0}, "rework": {"share": 1.0, "cost": 0.0},
+    }  # fmt: skip
+    unit = step("unit", with_defects(bad), inspection={"finds": 0.0}, alternative=[all_of_it])
+    answer = plan(line(unit, demand={"shipped_per_year": 1000}, target={"escape_cost": 6.25}))
+    assert bool(answer.rows[0].alternatives) == (decision == "inspect")
+
+
+def operations(count: int, bad: float, cost: float, each: float, final: float | None, batch: int) -> dict[str, Any]:
+    """A batch through alike operations, inspected after each (`each` a piece), or once at the end (`final` a piece).
+
+    Inspection is charged on the pieces that reach it, as the source has it: it is part of the cost added.
+    """
+    own = with_defects(-math.log1p(-bad))
+    seen = {"finds": 1.0} if final is None else {"finds": 0.0}
+    steps = [step(f"operation {i}", own, cost_added=cost + each, inspection=seen) for i in range(count)]
+    for one in steps:
+        one.pop("scrap_cost")
+    if final is not None:
+        sorting = step("sort", NEARLY_NONE, cost_added=final, inspection={"finds": 0.0, "earlier": 1.0})
+        sorting.pop("scrap_cost")
+        steps.append(sorting)
+    good = batch * (1.0 - bad) ** count
+    return line(*steps, demand={"shipped_per_year": good})
+
+
+def cost_of_batch(scenario: dict[str, Any]) -> float:
+    """What is spent on all pieces started: on the good ones, and on those thrown away."""
+    money = today(scenario).line.money
+    assert money is not None
+    added = sum(one["cost_added"] for one in scenario["step"])
+    return scenario["demand"]["shipped_per_year"] * added + money.scrap
+
+
+def test_inspection_after_every_operation_or_once_at_the_end() -> None:
+    """Groover, Automation, Production Systems, and CIM: 100 pieces, 20 operations at $1.00, 3 % bad at each.
+
+    One final inspection at $2.00 a piece: $2,200. $0.10 after each operation: about $1,673 (100·1.10·(1−0.97^20)/0.03
+    = 1,672.75). The printed results are from memory.
+    """
+    final = cost_of_batch(operations(20, 0.03, 1.0, 0.0, 2.0, 100))
+    distributed = cost_of_batch(operations(20, 0.03, 1.0, 0.10, None, 100))
+    assert final == pytest.approx(2_200, rel=1e-9)
+    assert distributed == pytest.approx(1_673, abs=0.5)
+    assert distributed == pytest.approx(110 * (1 - 0.97**20) / 0.03, rel=1e-9)
+
+
+def test_ten_operations_break_even_with_the_final_station() -> None:
+    """Problem after Groover: 10 operations at $1.00 + $0.30, 4 % bad: $10.893 a piece started, by the formula.
+
+    A final station may then cost 10.893 − 10 a piece.
+    """
+    distributed = cost_of_batch(operations(10, 0.04, 1.0, 0.30, None, 1))
+    assert distributed == pytest.approx(10.892939, abs=5e-7)
+    for station, dearer in ((0.892939 - 0.01, False), (0.892939 + 0.01, True)):
+        assert (cost_of_batch(operations(10, 0.04, 1.0, 0.0, station, 1)) > distributed) == dearer
+
+
+FOUND = {"visual": 0.5, "in-circuit": 0.75, "functional": 0.96}
+"""Of what is still bad, from the yields of scenario 1: 60 to 80, 80 to 95, 95 to 99.8 %."""
+
+
+@pytest.mark.parametrize("start", [0.60, 0.80, 0.98, 0.998])
+def test_the_program_places_the_tests_as_enumeration_does(start: float) -> None:
+    """Shina's boards and prices; which tests to keep, out of all eight placements, the shares found held.
+
+    The cost of each placement is written out here: tests, repairs of what they find, and $500 for what is left.
+    """
+
+    def cost(kept: tuple[str, ...]) -> float:
+        spent, bad = 0.0, 1.0 - start
+        for name in kept:
+            test, repair = TESTS[name]
+            spent += test + repair * bad * FOUND[name]
+            bad *= 1.0 - FOUND[name]
+        return spent + AT_CUSTOMER * bad
+
+    steps = [step("assembly", with_defects(1.0 - start), inspection={"finds": 0.0})]
+    for name, found in FOUND.items():
+        test, repair = TESTS[name]
+        bench = {
+            "name": name, "inspection": {"finds": 0.0, "earlier": found, "per_item": test},
+            "rework": {"share": 1.0, "cost": repair},
+        }  # fmt: skip
+        steps.append(step(f"{name} test", NEARLY_NONE, inspection={"finds": 0.0}, alternative=[bench]))
+    answer = plan(line(*steps, demand={"shipped_per_year": BOARDS}, target={"escape_cost": AT_CUSTOMER}))
+    placements = [tuple(kept) for n in range(4) for kept in itertools.combinations(FOUND, n)]
+    best = min(placements, key=cost)
+    assert answer.money is not None
+    assert answer.money.total / BOARDS == pytest.approx(cost(best), rel=1e-9)
+    assert tuple(name for row in answer.rows for name in row.alternatives) == best

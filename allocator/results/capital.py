@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 from typing import TYPE_CHECKING
 
 from allocator.results.line import Caution
 from allocator.results.table import as_table
+from allocator.shown import shown
 
 if TYPE_CHECKING:
     import pandas
@@ -145,6 +147,7 @@ class CashCase:
     """Largest swing first."""
 
 
+@shown
 @dataclass(frozen=True)
 class CapitalCase:
     """The capital case of the plan (`subject` None), or of one purchase."""
@@ -169,6 +172,20 @@ class CapitalCase:
     assumed: tuple[str, ...]
     cautions: tuple[Caution, ...]
 
-    def table(self) -> pandas.DataFrame:
-        """Return the comparisons as a table, one row each."""
-        return as_table(CashCase, self.cases)
+    @cached_property
+    def figures(self) -> pandas.DataFrame:
+        """One row per comparison: what is paid, saved and earned."""
+        import pandas  # here, because only those who ask for a table should wait for it
+
+        names = (
+            "against", "keeps_promise", "capital", "equivalent_annual_capital", "worth_per_year", "npv",
+            "npv_with_escapes", "life_left", "irr", "payback_years", "discounted_payback_years",
+        )  # fmt: skip
+        return pandas.DataFrame({name: [getattr(case, name) for case in self.cases] for name in names})
+
+    @cached_property
+    def years(self) -> pandas.DataFrame:
+        """Cash by year, one row per year and comparison."""
+        table = as_table(CashYear, [year for case in self.cases for year in case.years])
+        table.insert(0, "against", [case.against for case in self.cases for _ in case.years])
+        return table

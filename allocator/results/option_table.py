@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 from typing import TYPE_CHECKING
 
 from allocator.results.line import Caution, Money, Yields
-from allocator.results.table import as_table
+from allocator.shown import shown
 
 if TYPE_CHECKING:
     import pandas
@@ -61,6 +62,7 @@ class ReviewedStep:
     defect_share: float
 
 
+@shown
 @dataclass(frozen=True)
 class Review:
     """The table of a design review."""
@@ -82,6 +84,13 @@ class Review:
     assumed: tuple[str, ...]
     cautions: tuple[Caution, ...]
 
-    def table(self) -> pandas.DataFrame:
-        """Return the options as a table."""
-        return as_table(ReviewRow, self.rows)
+    @cached_property
+    def options(self) -> pandas.DataFrame:
+        """One row per option: its figures with the rest of the line planned anew, and added alone to today's line."""
+        import pandas  # here, because only those who ask for a table should wait for it
+
+        names = ("total", "over_living", "over_plan", "capital", "allowed")
+        head = {name: [getattr(row, name) for row in self.rows] for name in ("step", "option", "kinds", "in_plan")}
+        planned = {name: [getattr(row.figures, name, None) for row in self.rows] for name in names}
+        alone = {f"{name}_alone": [getattr(row.alone, name, None) for row in self.rows] for name in names}
+        return pandas.DataFrame(head | planned | alone)
