@@ -22,11 +22,23 @@ if TYPE_CHECKING:
     from allocator.option_table import review_table
     from allocator.plan import make_plan
     from allocator.rehearsal import rehearse
-    from allocator.results import CapitalCase, Check, Comparison, Nines, Plan, Rehearsal, Review, Study, Today
+    from allocator.results import (
+        CapitalCase,
+        Check,
+        Comparison,
+        Nines,
+        Plan,
+        Rehearsal,
+        Review,
+        Study,
+        SupplierSheets,
+        Today,
+    )
     from allocator.review import review_page
     from allocator.scenario.book_out import write_workbook
     from allocator.scenario.model import Scenario
     from allocator.scenario.read import read_scenario, scenario_from_dict
+    from allocator.sheets import supplier_sheets
     from allocator.today import see_today
 
 _HOMES = {
@@ -41,6 +53,7 @@ _HOMES = {
     "Review": "results",
     "Scenario": "scenario.model",
     "Study": "results",
+    "SupplierSheets": "results",
     "Today": "results",
     "capital_case": "case",
     "check_scenario": "check",
@@ -54,6 +67,7 @@ _HOMES = {
     "review_table": "option_table",
     "scenario_from_dict": "scenario.read",
     "see_today": "today",
+    "supplier_sheets": "sheets",
     "write_workbook": "scenario.book_out",
 }
 
@@ -69,6 +83,7 @@ __all__ = [
     "Review",
     "Scenario",
     "Study",
+    "SupplierSheets",
     "Today",
     "capital_case",
     "check_scenario",
@@ -82,6 +97,7 @@ __all__ = [
     "review_table",
     "scenario_from_dict",
     "see_today",
+    "supplier_sheets",
     "write_workbook",
 ]
 __version__ = "0.1.0"

@@ -13,6 +13,7 @@ from allocator.rehearsal import rehearse
 from allocator.review import review_page
 from allocator.scenario.book_out import write_workbook
 from allocator.scenario.read import read_scenario
+from allocator.sheets import supplier_sheets
 from allocator.today import see_today
 
 __all__ = [
@@ -27,5 +28,6 @@ __all__ = [
     "review_page",
     "review_table",
     "see_today",
+    "supplier_sheets",
     "write_workbook",
 ]

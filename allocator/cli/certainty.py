@@ -1,4 +1,4 @@
-"""The commands about how sure a plan is: rehearse."""
+"""The commands about how sure a plan is, and what is asked of suppliers: rehearse, suppliers."""
 
 from __future__ import annotations
 
@@ -7,6 +7,7 @@ from typing import Annotated
 import typer
 
 from allocator.cli.app import AsCsv, AsJson, File, app, form_of, load, show
+from allocator.cli.asked import Of, name_of
 from allocator.cli.progress import progress
 
 
@@ -31,4 +32,16 @@ def rehearse(
     scenario = load(file)
     with progress("rehearsing") as watch:
         answer = api.rehearse(scenario, units=units, seed=seed, uncertain=uncertain, today=today, watch=watch)
+    show(answer, form)
+
+
+@app.command()
+def suppliers(file: File, of: Of = None, as_json: AsJson = False, as_csv: AsCsv = False) -> None:
+    """Write a target sheet per supplier, with the evidence that shows it and what it is worth."""
+    form = form_of(as_json, as_csv)
+    from allocator import api
+
+    scenario = load(file)
+    with progress("asking what each refusal costs") as watch:
+        answer = api.supplier_sheets(scenario, of=name_of(of), watch=watch)
     show(answer, form)

@@ -15,7 +15,7 @@ from allocator.report.words import YIELDS
 from allocator.results import BestReachable, Caution, Money, TodayLine, Yields
 
 
-def to_json(content: dict[str, Any]) -> str:
+def to_json(content: dict[str, Any] | list[dict[str, Any]]) -> str:
     return json.dumps(_finite(content), indent=2, allow_nan=False) + "\n"
 
 

@@ -23,8 +23,21 @@ from allocator.report.rehearsal_data import rehearsal_csv, rehearsal_json
 from allocator.report.rehearsal_text import rehearsal_text
 from allocator.report.review_data import review_csv, review_json
 from allocator.report.review_text import review_text
+from allocator.report.sheets_data import sheets_csv, sheets_json
+from allocator.report.sheets_text import sheets_text
 from allocator.report.today_text import today_text
-from allocator.results import CapitalCase, Check, Comparison, Nines, Plan, Rehearsal, Review, Study, Today
+from allocator.results import (
+    CapitalCase,
+    Check,
+    Comparison,
+    Nines,
+    Plan,
+    Rehearsal,
+    Review,
+    Study,
+    SupplierSheets,
+    Today,
+)
 
 Form = Literal["text", "json", "csv"]
 
@@ -32,7 +45,7 @@ Form = Literal["text", "json", "csv"]
 @dataclass(frozen=True)
 class _Renderers:
     text: Callable[[Any, int], str]
-    json: Callable[[Any], dict[str, Any]]
+    json: Callable[[Any], dict[str, Any] | list[dict[str, Any]]]
     csv: Callable[[Any], str]
 
 
@@ -42,6 +55,7 @@ _RENDERERS: dict[type, _Renderers] = {
     Today: _Renderers(today_text, today_json, today_csv),
     Check: _Renderers(check_text, check_json, check_csv),
     CapitalCase: _Renderers(case_text, case_json, case_csv),
+    SupplierSheets: _Renderers(sheets_text, sheets_json, sheets_csv),
     Rehearsal: _Renderers(rehearsal_text, rehearsal_json, rehearsal_csv),
     Study: _Renderers(measure_text, measure_json, measure_csv),
     Review: _Renderers(review_text, review_json, review_csv),

@@ -23,6 +23,7 @@ from allocator.results.review import (
     Stated,
     Stop,
 )
+from allocator.results.sheets import Sheet, SupplierSheet, SupplierSheets
 from allocator.results.study import Fit, Index, Indices, Outlier, Signal, Study
 from allocator.results.table import as_table, records
 from allocator.results.today import Check, StepToday, Today, Understood
@@ -68,6 +69,7 @@ __all__ = [
     "Savings",
     "ScrapView",
     "Share",
+    "Sheet",
     "Signal",
     "Sources",
     "Stated",
@@ -77,6 +79,8 @@ __all__ = [
     "StepToday",
     "Stop",
     "Study",
+    "SupplierSheet",
+    "SupplierSheets",
     "TakenAcross",
     "Today",
     "TodayLine",
