@@ -1,0 +1,1 @@
+"""How fast is the program, beside what anyone would otherwise write: `python -m tests.benchmarks`."""
