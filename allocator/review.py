@@ -4,16 +4,22 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
+from allocator.case import capital_case
+from allocator.errors import OutOfReachError
 from allocator.grouping import rows_of
 from allocator.picture import divide, picture
 from allocator.plan import binding_steps, make_plan, summarise
 from allocator.problem import Problem, pose
-from allocator.results import BestReachable, Plan, ReviewPage, Row
+from allocator.rehearsal import rehearse
+from allocator.results import BestReachable, CapitalCase, Plan, Rehearsal, ReviewPage, Row
 from allocator.scenario.model import Scenario
 from allocator.sources import sources_of
 from allocator.standing import levels_today
 from allocator.state import floor_words
 from allocator.stops import Answer, answers, describe_stops
+
+UNITS = 300_000
+"""Units that the plan is rehearsed with."""
 
 
 def review_page(scenario: Scenario) -> ReviewPage:
@@ -42,7 +48,27 @@ def review_page(scenario: Scenario) -> ReviewPage:
         line=picture(problem, steps, None if outcome is None else outcome.flow),
         division=divide(plan, steps, [name_of_row(row) for row in rows]),
         sources=sources_of(scenario),
+        case=_case(scenario, plan),
+        rehearsal=_rehearsal(scenario, plan),
     )
+
+
+def _case(scenario: Scenario, plan: Plan) -> CapitalCase | None:
+    """Return the capital case of the plan, where there is a plan to pay for and a rate to discount by."""
+    stated = scenario.demand.years is not None and scenario.demand.discount_rate is not None
+    if not (stated and plan.reached and plan.today.money is not None):
+        return None
+    return capital_case(scenario)
+
+
+def _rehearsal(scenario: Scenario, plan: Plan) -> Rehearsal | None:
+    """Return the plan played through; None where there is none, or where the line ships next to nothing."""
+    if not plan.reached:
+        return None
+    try:
+        return rehearse(scenario, units=UNITS)
+    except OutOfReachError:
+        return None
 
 
 def _opens_with(found: Sequence[Answer], plan: Plan) -> int:

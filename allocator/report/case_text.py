@@ -53,10 +53,10 @@ def _verdict(case: CapitalCase) -> str:
 
 def _write_cases(paper: Paper, case: CapitalCase) -> None:
     money = words.clean(case.currency)
-    _write_table(paper, f"What it earns ({money})", case, _FIGURES)
+    _write_table(paper, f"What it earns ({money})", case, EARNED)
     notes = [f"No rate of return against {c.against}: {c.irr_note}" for c in case.cases if c.irr is None]
     paper.bullets(notes)
-    _write_table(paper, f"Saved per year, negative where it costs more ({money}/year)", case, _SAVED)
+    _write_table(paper, f"Saved per year, negative where it costs more ({money}/year)", case, SAVED)
     main = case.cases[0]
     _write_years(paper, main, money)
     _write_assets(paper, main, money)
@@ -66,7 +66,7 @@ def _write_cases(paper: Paper, case: CapitalCase) -> None:
 
 
 Figure = tuple[str, Callable[[CashCase], str]]
-_FIGURES: tuple[Figure, ...] = (
+EARNED: tuple[Figure, ...] = (
     ("keeps the promise", lambda c: "yes" if c.keeps_promise else "no"),
     ("paid today, less trade-in", lambda c: words.money(c.capital)),
     ("the same per year, over its life", lambda c: words.money(c.equivalent_annual_capital)),
@@ -75,10 +75,10 @@ _FIGURES: tuple[Figure, ...] = (
     ("present value, escapes counted", lambda c: words.money(c.npv_with_escapes)),
     ("life left at the end, no cash", lambda c: words.money(c.life_left)),
     ("internal rate of return", lambda c: "-" if c.irr is None else words.share(c.irr)),
-    ("payback, years", lambda c: _years(c.payback_years)),
-    ("payback discounted, years", lambda c: _years(c.discounted_payback_years)),
+    ("payback, years", lambda c: years_in_words(c.payback_years)),
+    ("payback discounted, years", lambda c: years_in_words(c.discounted_payback_years)),
 )
-_SAVED: tuple[Figure, ...] = (
+SAVED: tuple[Figure, ...] = (
     ("scrap", lambda c: words.money(c.savings.scrap)),
     ("rework", lambda c: words.money(c.savings.rework)),
     ("inspection", lambda c: words.money(c.savings.inspection)),
@@ -97,7 +97,7 @@ _NARROW = {
 """How a long name stands over a column."""
 
 
-def _years(value: float | None) -> str:
+def years_in_words(value: float | None) -> str:
     return NEVER if value is None else words.fixed(value)
 
 

@@ -26,8 +26,8 @@ CHARGED = (
 def rehearsal_text(answer: Rehearsal, width: int = LOG_WIDTH) -> str:
     paper = Paper(width)
     blocks.write_title(paper, answer.title, answer.shipped_per_year)
-    paper.heading(_played(answer))
-    paper.say(_verdict(answer))
+    paper.heading(played(answer))
+    paper.say(verdict(answer))
     _write_yields(paper, answer)
     _write_money(paper, answer)
     _write_steps(paper, answer)
@@ -39,7 +39,7 @@ def rehearsal_text(answer: Rehearsal, width: int = LOG_WIDTH) -> str:
     return paper.text()
 
 
-def _played(answer: Rehearsal) -> str:
+def played(answer: Rehearsal) -> str:
     line = "The plan" if answer.line == "plan" else "The line as it stands"
     drawn = sum(row.drawn for row in answer.rows)
     softly = f", the capabilities of {drawn} steps drawn anew for each of 200 lines" if answer.uncertain else ""
@@ -49,7 +49,7 @@ def _played(answer: Rehearsal) -> str:
     )
 
 
-def _verdict(answer: Rehearsal) -> str:
+def verdict(answer: Rehearsal) -> str:
     missed = [words.yield_name(name) for name in answer.missed]
     count = len(answer.losses) + len(answer.money)
     said = (

@@ -4,8 +4,10 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+from allocator.results.capital import CapitalCase
 from allocator.results.line import Money, Yields
 from allocator.results.plan import BestReachable, Plan
+from allocator.results.rehearsal import Rehearsal
 
 
 @dataclass(frozen=True)
@@ -156,3 +158,7 @@ class ReviewPage:
     line: tuple[LinePart, ...]
     division: Division | None
     sources: Sources
+    case: CapitalCase | None
+    """None without a horizon and a rate, or where no plan keeps the promise."""
+    rehearsal: Rehearsal | None
+    """None where no plan keeps the promise."""

@@ -8,6 +8,8 @@ from typing import Any
 
 from allocator.errors import Fault, InputError
 from allocator.files import written_aside
+from allocator.report.page.case import case_said
+from allocator.report.page.certainty import played_said, proof_said
 from allocator.report.page.control import control
 from allocator.report.page.cost import cost_drawing
 from allocator.report.page.rails import line_drawing
@@ -30,6 +32,9 @@ def page_html(review: ReviewPage) -> str:
         "control": control(review),
         "cost": cost_drawing(review),
         "line": line_drawing(review),
+        "case": case_said(review.case),
+        "proof": proof_said(review.plan),
+        "played": played_said(review.rehearsal),
         "style": _read("page.css"),
         "script": _read("page.js"),
     }

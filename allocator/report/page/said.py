@@ -46,7 +46,6 @@ class Said:
     left_out: int
     cautions: list[tuple[str, str, str]]
     assumed: list[str]
-    proof: list[str]
     last_word: str
     index_note: str
     yields_note: str
@@ -85,7 +84,6 @@ def said(review: ReviewPage) -> Said:
         left_out=review.sources.left_out,
         cautions=[_caution(c) for c in plan.cautions],
         assumed=[words.clean(text) for text in plan.assumed],
-        proof=_proof(plan, currency),
         last_word=_last_word(plan),
         index_note=blocks.INDEX_NOTE,
         yields_note=blocks.YIELDS_NOTE.strip("()"),
@@ -312,22 +310,6 @@ def _caution(caution: Any) -> tuple[str, str, str]:
 
 def _opened(text: str) -> str:
     return text[:1].upper() + text[1:]
-
-
-def _proof(plan: Plan, currency: str) -> list[str]:
-    proof = plan.proof
-    if proof is None:
-        return []
-    total = f"This plan costs {words.per_year(proof.total, plan.currency)}."
-    if proof.lower_bound is None:
-        return [total, "No lower bound is proven.", words.clean(proof.note)] if proof.note else [total]
-    gap = words.UNKNOWN if proof.gap is None else f"{proof.gap:.1e}"
-    bound = f"{words.money(proof.lower_bound)} {currency} a year"
-    texts = [
-        f"{total} No plan that keeps the same promises can cost less than {bound}: the proven gap is {gap} of it.",
-        f"Found by: {words.clean(proof.method)}.",
-    ]
-    return [*texts, words.clean(proof.note)] if proof.note else texts
 
 
 def _last_word(plan: Plan) -> str:
