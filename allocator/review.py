@@ -16,25 +16,27 @@ from allocator.scenario.model import Scenario
 from allocator.sources import sources_of
 from allocator.standing import levels_today
 from allocator.state import floor_words
-from allocator.stops import Answer, answers, describe_stops
+from allocator.stops import Answer, Watch, answers, describe_stops
 
 UNITS = 300_000
 """Units that the plan is rehearsed with."""
 
 
-def review_page(scenario: Scenario) -> ReviewPage:
+def review_page(scenario: Scenario, *, watch: Watch | None = None) -> ReviewPage:
     """Return everything the page of a design review shows, all figures worked out.
 
     Parameters
     ----------
     scenario : Scenario
         As read by `read_scenario`.
+    watch : callable, optional
+        Told how many stops of how many are worked out.
     """
     problem = pose(scenario)
     plan = make_plan(scenario)
     steps = rows_of(problem.line.feeds.tolist())
     rows = _rows(problem, steps)
-    found = answers(problem)
+    found = answers(problem, watch)
     shown = _opens_with(found, plan)
     outcome = found[shown].outcome
     return ReviewPage(

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -20,6 +20,8 @@ from allocator.standing import flow_today, levels_today, line_today, load_shares
 from allocator.targets import step_targets
 
 Array = NDArray[np.float64]
+Watch = Callable[[int, int], None]
+END = "highest reachable"
 BETWEEN = 42
 """Stops spread evenly in nines, beside the named ones."""
 SAME = 1e-9
@@ -44,11 +46,11 @@ def nines_of(loss: float) -> float:
     return -math.log10(loss) if loss > 0.0 else math.inf
 
 
-def answers(problem: Problem) -> list[Answer]:
+def answers(problem: Problem, watch: Watch | None = None) -> list[Answer]:
     """Return today and the cheapest plan at every stop, in rising promise.
 
     Only today where nothing can be promised at all: no choice keeps the floors and limits, or another target cannot be
-    kept.
+    kept. `watch` is told how many promises of how many are answered.
     """
     today = Answer("today", _loss(line_today(problem).yields.__dict__, problem.split), None)
     best = None if problem.options.no_way else best_reachable(problem)
@@ -57,7 +59,10 @@ def answers(problem: Problem) -> list[Answer]:
     optimum = solve(problem.with_budget(problem.split, None), [rows_in(problem, best)])
     found = [today]
     before = optimum
-    for label, loss in _promises(problem, _reached(optimum, problem), _reached(best, problem), today.loss):
+    promises = _promises(problem, _reached(optimum, problem), _reached(best, problem), today.loss)
+    for done, (label, loss) in enumerate(promises):
+        if watch is not None:
+            watch(done, len(promises))
         solved = _solve(problem, label, loss, optimum, best, before)
         if solved is not None and solved.outcome is not None:
             found.append(Answer(label, loss, solved))
@@ -76,7 +81,7 @@ def _reached(solved: Solved, problem: Problem) -> float:
 
 def _promises(problem: Problem, optimum: float, highest: float, today: float) -> list[tuple[str, float]]:
     """Return label and loss of every stop but today, in rising promise, each loss once; the named ones win."""
-    named = [("economic optimum", optimum), ("highest reachable", highest)]
+    named = [("economic optimum", optimum), (END, highest)]
     if problem.split in problem.budgets:
         named.insert(0, ("target", -math.expm1(-problem.budgets[problem.split])))
     start, end = nines_of(optimum), nines_of(highest)
@@ -101,9 +106,10 @@ def _solve(problem: Problem, label: str, loss: float, optimum: Solved, best: Sol
     budget = -math.log1p(-loss)
     if within(optimum.outcome.loads[problem.split], budget):
         return optimum
-    if label == "highest reachable":
+    if label == END:
         return best
-    return solve(problem.with_budget(problem.split, budget), [rows_in(problem, before), rows_in(problem, best)])
+    asked = problem.with_budget(problem.split, budget)
+    return solve(asked, [rows_in(problem, before), rows_in(problem, best)], before.near)
 
 
 def describe_stops(problem: Problem, found: Sequence[Answer], rows: Sequence[Sequence[int]]) -> tuple[Stop, ...]:
@@ -135,7 +141,8 @@ def _stop(problem: Problem, answer: Answer, today: TodayLine, rows: Sequence[Seq
     asked = problem.with_budget(problem.split, -math.log1p(-answer.loss))
     ways = solved.problem.options.ways
     targets = step_targets(problem, ways, outcome)
-    price = price_of_budget(solved, asked)
+    # At the end nothing can be traded any more: every figure above the last slope would be a price.
+    price = None if answer.label == END else price_of_budget(solved, asked)
     total = outcome.money.total
     sigma = outcome.choice.z.tolist()
     kept = _figures(problem, outcome.flow, outcome.improvement)

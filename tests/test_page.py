@@ -14,7 +14,7 @@ from typing import Any
 import pytest
 from typer.testing import CliRunner
 
-from allocator import make_plan, read_scenario, review_page, scenario_from_dict
+from allocator import capital_case, make_plan, read_scenario, rehearse, review_page, scenario_from_dict
 from allocator.cli import app
 from allocator.grouping import feeds_of_rows, reading_order, rows_of
 from allocator.report.page import page_html
@@ -173,13 +173,21 @@ def test_every_stop_is_the_plan_of_its_promise() -> None:
 def test_price_per_ppm_is_the_slope_of_the_totals() -> None:
     """Between two stops the total rises by the ppm taken away times a price between those of the two ends."""
     stops = [stop for stop in review("latch").stops if stop.label != "today"]
-    for first, second in itertools.pairwise(stops[2:]):
+    assert stops[-1].price_per_ppm is None
+    for first, second in itertools.pairwise(stops[2:-1]):
         assert first.money is not None
         assert second.money is not None
         rise = (second.money.total - first.money.total) / (1e6 * (first.asked_loss - second.asked_loss))
         assert first.price_per_ppm is not None
         assert second.price_per_ppm is not None
         assert first.price_per_ppm * (1 - 1e-6) <= rise <= second.price_per_ppm * (1 + 1e-6)
+
+
+def test_case_and_rehearsal_are_those_of_the_commands() -> None:
+    scenario, page = scenario_from_dict(small_line()), review("small")
+    assert page.case == capital_case(scenario)
+    assert page.rehearsal is not None
+    assert page.rehearsal.losses == rehearse(scenario, units=page.rehearsal.units).losses
 
 
 def test_picture_keeps_every_defect() -> None:

@@ -8,6 +8,7 @@ from typing import Annotated
 import typer
 
 from allocator.cli.app import OUT_OF_REACH, File, app, load
+from allocator.cli.progress import progress
 
 
 @app.command()
@@ -24,7 +25,9 @@ def report(
     from allocator.report.page import page_html, refuse_lost_folder, write_page
 
     refuse_lost_folder(target)
-    review = api.review_page(load(file))
+    scenario = load(file)
+    with progress("working out the stops") as watch:
+        review = api.review_page(scenario, watch=watch)
     write_page(page_html(review), target)
     typer.echo(f"Wrote {target}. Open it in a browser; it needs no network.")
     if not review.plan.reached:

@@ -149,6 +149,8 @@ def price_words(stop: Stop, currency: str) -> str:
     """The local price of the promise, in words."""
     if stop.label == "today":
         return "Nothing is bought and nothing improved."
+    if stop.label == "highest reachable":
+        return "Nothing better can be reached with what the scenario offers."
     if stop.price_per_ppm is None:
         return "With these purchases nothing more can be gained step by step; the next gain is a purchase."
     if stop.price_per_ppm == 0.0:
