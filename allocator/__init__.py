@@ -20,6 +20,7 @@ if TYPE_CHECKING:
     from allocator.measure import measure_capability
     from allocator.nines import price_nines
     from allocator.option_table import review_table
+    from allocator.page import review_page
     from allocator.plan import make_plan
     from allocator.rehearsal import rehearse
     from allocator.results import (
@@ -34,7 +35,6 @@ if TYPE_CHECKING:
         SupplierSheets,
         Today,
     )
-    from allocator.review import review_page
     from allocator.scenario.book_out import write_workbook
     from allocator.scenario.model import Scenario
     from allocator.scenario.read import read_scenario, scenario_from_dict
@@ -63,7 +63,7 @@ _HOMES = {
     "price_nines": "nines",
     "read_scenario": "scenario.read",
     "rehearse": "rehearsal",
-    "review_page": "review",
+    "review_page": "page",
     "review_table": "option_table",
     "scenario_from_dict": "scenario.read",
     "see_today": "today",

@@ -8,9 +8,9 @@ from allocator.compare import compare_scenarios
 from allocator.measure import measure_capability
 from allocator.nines import price_nines
 from allocator.option_table import review_table
+from allocator.page import review_page
 from allocator.plan import make_plan
 from allocator.rehearsal import rehearse
-from allocator.review import review_page
 from allocator.scenario.book_out import write_workbook
 from allocator.scenario.read import read_scenario
 from allocator.sheets import supplier_sheets

@@ -9,9 +9,7 @@ from allocator.results.compare import Compared, Comparison, StepAcross, TakenAcr
 from allocator.results.line import Caution, Level, Money, TodayLine, Yields
 from allocator.results.nines import Nines, NinesPoint
 from allocator.results.option_table import LineFigures, Review, ReviewedStep, ReviewRow
-from allocator.results.plan import BestReachable, Binding, Bought, Plan, Proof, Restraint, RuleOutcome, StepTarget
-from allocator.results.rehearsal import Rehearsal, Rehearsed, StepRehearsed
-from allocator.results.review import (
+from allocator.results.page import (
     Carried,
     Division,
     LinePart,
@@ -23,6 +21,8 @@ from allocator.results.review import (
     Stated,
     Stop,
 )
+from allocator.results.plan import BestReachable, Binding, Bought, Plan, Proof, Restraint, RuleOutcome, StepTarget
+from allocator.results.rehearsal import Rehearsal, Rehearsed, StepRehearsed
 from allocator.results.sheets import Sheet, SupplierSheet, SupplierSheets
 from allocator.results.study import Fit, Index, Indices, Outlier, Signal, Study
 from allocator.results.table import as_table, records

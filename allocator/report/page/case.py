@@ -29,6 +29,8 @@ class CaseSaid:
     saved: list[list[str]]
     levers: list[LeverBar]
     zero: float
+    zero_side: str
+    """Which way its name runs: 'left', 'middle' or 'right' of it."""
     base: float
     base_words: str
     views: list[list[str]]
@@ -50,6 +52,7 @@ def case_said(case: CapitalCase | None) -> CaseSaid | None:
         saved=[[name.strip(), figure(main)] for name, figure in SAVED],
         levers=[_lever(lever, scale, money) for lever in main.levers],
         zero=scale.at(0.0),
+        zero_side="right" if scale.at(0.0) < 25.0 else "left" if scale.at(0.0) > 75.0 else "middle",
         base=scale.at(main.worth_per_year),
         base_words=words.money(main.worth_per_year),
         views=[
