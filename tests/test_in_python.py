@@ -15,7 +15,7 @@ import pytest
 import allocator
 from allocator.report.glance import MOST_ROWS
 from allocator.report.render import render
-from allocator.results import Check, Nines, Plan, StepTarget, Today, as_table
+from allocator.results import CashCase, Check, Nines, Plan, ReviewRow, StepTarget, Today, as_table
 from allocator.shown import shown
 from tests.test_report import NAMES, a_check, a_plan, a_today, nothing_possible, some_nines, step_target
 
@@ -140,3 +140,29 @@ def test_scenarios_compared_have_their_tables() -> None:
     assert list(both.steps.columns) == ["step", "latch", "latch (2)", "differs"]
     assert "2 scenarios side by side" in repr(both)
     Balanced().feed(both._repr_html_())
+
+
+def test_capital_case_and_review_have_their_tables() -> None:
+    scenario = allocator.read_scenario(FOLDER / "bracket.toml")
+    case, review = allocator.capital_case(scenario, "new shear"), allocator.review_table(scenario)
+    first = case.cases[0]
+    assert list(case.figures["npv"]) == [one.npv for one in case.cases]
+    assert list(case.years["net"])[: len(first.years)] == [year.net for year in first.years]
+    assert list(first.sensitivities["worth_low"]) == [lever.worth_low for lever in first.levers]
+    totals = [None if row.figures is None else row.figures.total for row in review.rows]
+    assert [None if pandas.isna(x) else x for x in review.options["total"]] == totals
+    assert review.options["total_alone"].notna().any()
+    for result in (case, review):
+        assert not re.findall(r"\w+\(\w+=", result._repr_html_()), "records do not show their insides"
+        Balanced().feed(result._repr_html_())
+
+
+def test_records_within_records_become_columns() -> None:
+    """A record that is not there leaves its columns empty; a list of records is a table of its own."""
+    review = allocator.review_table(allocator.read_scenario(FOLDER / "latch.toml"))
+    table = as_table(ReviewRow, review.rows)
+    there = [row for row in review.rows if row.figures is not None and row.figures.money is not None]
+    assert list(table["scrap"].dropna()) == [row.figures.money.scrap for row in there]
+    assert table["final_yield_alone"].isna().sum() == sum(row.alone is None for row in review.rows)
+    case = allocator.capital_case(allocator.read_scenario(FOLDER / "latch.toml"))
+    assert not {"years", "levers", "assets"} & set(as_table(CashCase, case.cases).columns)

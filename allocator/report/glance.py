@@ -11,9 +11,11 @@ from typing import Any
 
 from allocator.report import nines_text, plan_text, today_text, words
 from allocator.report.render import has_renderer, render
-from allocator.results import Check, Nines, Plan, StepTarget, Today, Understood
+from allocator.results import Check, Nines, Plan, Review, ReviewRow, StepTarget, Today, Understood
 
 MOST_ROWS = 40
+TABLES = ("steps", "points", "options", "figures")
+"""Names under which results give a DataFrame."""
 OPENING = 2
 """Paragraphs of the sheet that say the answer: its title, and the sentences below."""
 _RULE = re.compile(r"^-+( -+)* *$", re.MULTILINE)
@@ -53,18 +55,19 @@ def _opening(result: object) -> list[str]:
 
 
 def _whereabouts(result: object) -> list[str]:
-    rows = getattr(result, "rows", None)
+    rows = getattr(result, "rows", getattr(result, "cases", None))
     if rows is None:
         return []
-    name = next((name for name in ("steps", "points") if hasattr(type(result), name)), None)
-    return [f"{len(rows):,} rows: .rows as records" + (f", .{name} as a DataFrame" if name else "")]
+    kind = "rows" if hasattr(result, "rows") else "cases"
+    name = next((name for name in TABLES if hasattr(type(result), name)), None)
+    return [f"{len(rows):,} {kind}: .{kind} as records" + (f", .{name} as a DataFrame" if name else "")]
 
 
 def _table(result: object) -> str:
     rows: Sequence[object] = getattr(result, "rows", ())
     if not rows:
         return ""
-    heads, cells = _TABLES.get(type(result)) or _any_table(rows[0])
+    heads, cells = _TABLES.get(type(result)) or _any_table(rows)
     head = "".join(f"<th>{escape(title)}</th>" for title in heads)
     body = "\n".join(f"<tr>{''.join(map(_cell, cells(row)))}</tr>" for row in islice(rows, MOST_ROWS))
     rest = f"<p>… and {len(rows) - MOST_ROWS:,} more</p>" if len(rows) > MOST_ROWS else ""
@@ -75,9 +78,9 @@ def _cell(text: str) -> str:
     return f"<td>{escape(words.clean(text))}</td>"
 
 
-def _any_table(row: Any) -> Table:
-    """The plain figures of a record that has no table of its own here."""
-    names = [field.name for field in fields(row) if _is_plain(getattr(row, field.name))]
+def _any_table(rows: Sequence[Any]) -> Table:
+    """The plain figures of records that have no table of their own here."""
+    names = [f.name for f in fields(rows[0]) if all(_is_plain(getattr(row, f.name)) for row in rows[:MOST_ROWS])]
     return [name.replace("_", " ").strip() for name in names], lambda row: [_plain(getattr(row, n)) for n in names]
 
 
@@ -110,6 +113,26 @@ def _check_row(step: Understood) -> list[str]:
     ]  # fmt: skip
 
 
+def _review_row(row: ReviewRow) -> list[str]:
+    figures = row.figures
+    money = (
+        ("-",) * 3
+        if figures is None
+        else tuple(map(words.money, (figures.total, figures.over_living, figures.capital)))
+    )
+    taken = "in the plan" if row.in_plan else ""
+    return [row.step or "(whole line)", row.option or ", ".join(row.kinds), *money, taken, "; ".join(row.against)]
+
+
+_REVIEW = (
+    "step",
+    "option",
+    "total per year",
+    "more than living with the scrap",
+    "capital",
+    "",
+    "what speaks against it",
+)
 _PLAN = (
     "step", "choice", "sigma today", "sigma target", "Cpk today", "Cpk target", "Cpk after shift", "ppm today",
     "ppm target", "share of budget", "improvement per year", "scrap per year",
@@ -122,4 +145,5 @@ _TABLES: dict[type, Table] = {
     Nines: (_NINES, nines_text.point_row),
     Today: (_TODAY, today_text.level_row),
     Check: (_CHECK, _check_row),
+    Review: (_REVIEW, _review_row),
 }

@@ -146,6 +146,11 @@ class CashCase:
     levers: tuple[Lever, ...]
     """Largest swing first."""
 
+    @cached_property
+    def sensitivities(self) -> pandas.DataFrame:
+        """The figures changed alone as a table, the largest swing first."""
+        return as_table(Lever, self.levers)
+
 
 @shown
 @dataclass(frozen=True)

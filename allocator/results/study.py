@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+from allocator.shown import shown
+
 
 @dataclass(frozen=True)
 class Index:
@@ -54,6 +56,7 @@ class Fit:
     doubtful: bool
 
 
+@shown
 @dataclass(frozen=True)
 class Study:
     """A capability study: figures of all values in the file, none removed."""

@@ -2,41 +2,50 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import fields, is_dataclass
-from operator import attrgetter
-from typing import TYPE_CHECKING, Any, TypeVar, get_type_hints
+from typing import TYPE_CHECKING, Any, TypeVar, get_args, get_origin, get_type_hints
 
 if TYPE_CHECKING:
     import pandas
 
 
-PLAIN = ("level", "target")
-"""Nested records whose figures need no suffix: the level of which the whole row speaks."""
+PLAIN = ("level", "target", "figures", "money", "yields", "savings")
+"""Nested records whose figures need no suffix: those of which the whole row speaks."""
 
 
 def as_table(kind: type[Any], rows: Sequence[Any]) -> pandas.DataFrame:
     """Return records of a kind as a table, one row each, one column per field.
 
-    The figures of a nested record become columns of their own; those of the level that the row speaks of keep their
-    names (`cpk`), those of any other bear its name too (`cpk_today`). Without rows the columns are still there.
+    The figures of a nested record become columns of their own; those that the row speaks of keep their names (`cpk`),
+    those of any other bear its name too (`cpk_today`). Lists of records are tables of their own and left out. Without
+    rows the columns are still there.
     """
     import pandas  # here, because only those who ask for a table should wait for it
 
-    getters = {name: attrgetter(path) for name, path in _columns(kind).items()}
-    return pandas.DataFrame({name: [get(row) for row in rows] for name, get in getters.items()})
+    columns = dict(_columns(kind))
+    return pandas.DataFrame({name: [_get(row, path) for row in rows] for name, path in columns.items()})
 
 
-def _columns(kind: type[Any]) -> dict[str, str]:
-    """Return the columns of a table, each with the path to its figure."""
-    hints, found = get_type_hints(kind), {}
+def _columns(kind: type[Any], path: tuple[str, ...] = (), suffix: str = "") -> Iterator[tuple[str, tuple[str, ...]]]:
+    """Yield the columns of a table, each with the path to its figure."""
+    hints = get_type_hints(kind)
     for field in fields(kind):
-        if not is_dataclass(hints[field.name]):
-            found[field.name.rstrip("_")] = field.name
-            continue
-        suffix = "" if field.name in PLAIN else f"_{field.name}"
-        found |= {f"{inner.name}{suffix}": f"{field.name}.{inner.name}" for inner in fields(hints[field.name])}
-    return found
+        hint, here = hints[field.name], (*path, field.name)
+        inner: list[type[Any]] = [
+            part for part in (hint, *get_args(hint)) if isinstance(part, type) and is_dataclass(part)
+        ]
+        if not inner:
+            yield field.name.rstrip("_") + suffix, here
+        elif get_origin(hint) is not tuple:
+            yield from _columns(inner[0], here, suffix if field.name in PLAIN else f"{suffix}_{field.name}")
+
+
+def _get(row: Any, path: tuple[str, ...]) -> Any:
+    """Return the figure at a path, None where a record on the way is not there."""
+    for name in path:
+        row = None if row is None else getattr(row, name)
+    return row
 
 
 Record = TypeVar("Record")
