@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Iterable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from pathlib import Path
 
 from allocator.errors import RangeError
@@ -17,13 +17,15 @@ IMPROVE = "improve"
 TAKEN, LEFT, NOT_OFFERED = "taken", "left", "not offered"
 
 
-def compare_scenarios(scenarios: Sequence[Scenario]) -> Comparison:
+def compare_scenarios(scenarios: Sequence[Scenario], *, watch: Callable[[int, int], None] | None = None) -> Comparison:
     """Return the plans of several scenarios side by side; the first is the one that the others are held against.
 
     Parameters
     ----------
     scenarios : sequence of Scenario
         Two or more, each with its own demand, targets and limits.
+    watch : callable, optional
+        Told how many plans of how many are made.
 
     Raises
     ------
@@ -34,7 +36,11 @@ def compare_scenarios(scenarios: Sequence[Scenario]) -> Comparison:
     """
     if len(scenarios) < 2:
         raise RangeError(f"a comparison needs two scenarios or more, got {len(scenarios)}")
-    plans = [make_plan(scenario) for scenario in scenarios]
+    plans = []
+    for scenario in scenarios:
+        plans.append(make_plan(scenario))
+        if watch is not None:
+            watch(len(plans), len(scenarios))
     cases = tuple(
         Compared(
             label=label,

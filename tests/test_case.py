@@ -24,6 +24,7 @@ from allocator.report.render import render
 from allocator.results import CapitalCase, CashCase, Lever
 from allocator.scenario.read import read_scenario, scenario_from_dict
 from tests.published.lines import line, step, with_defects
+from tests.reference.generate import random_scenario
 
 FOLDER = Path(__file__).parent.parent / "scenarios"
 RATE, YEARS, VOLUME = 0.08, 10, 10_000
@@ -132,6 +133,21 @@ def test_the_plan_is_argued_against_today() -> None:
     assert case.total_without == pytest.approx(plan.today.money.total, rel=1e-12)
     assert only(case).capital == pytest.approx(plan.capital, rel=1e-12)
     assert (case.subject, case.verdict, only(case).against) == (None, None, "today")
+
+
+@pytest.mark.parametrize("seed", range(0, 40, 4))
+def test_on_random_lines_the_money_adds_up_both_ways(seed: int) -> None:
+    """The split less the yearly capital is the difference of the totals, and the cash by year its present value."""
+    scenario = scenario_from_dict(random_scenario(seed))
+    if scenario.demand.years is None or scenario.demand.discount_rate is None:
+        pytest.skip("nothing has a price")
+    case = capital_case(scenario)
+    for found in case.cases:
+        allowed = 1e-9 * max(abs(case.total_with or 0.0), abs(case.total_without or 0.0), 1.0)
+        split = found.savings.cash + found.savings.escapes - found.equivalent_annual_capital
+        assert split == pytest.approx(found.worth_per_year, rel=0, abs=allowed)
+        assert npv(case.discount_rate, net_of(found)) == pytest.approx(found.npv, rel=1e-12, abs=allowed)
+        assert all(one.worth_base == pytest.approx(found.worth_per_year, rel=0, abs=allowed) for one in found.levers)
 
 
 # ---------------------------------------------------------------- what the verdict rests on

@@ -17,7 +17,7 @@ from allocator.results import Plan
 
 FOLDER = Path(__file__).parent.parent / "scenarios"
 SCENARIOS = sorted(FOLDER.glob("*.toml"), key=lambda path: path.name)
-COMMANDS = ("check", "today", "plan", "nines")
+COMMANDS = ("check", "today", "plan", "nines", "case")
 WIDTH = 80
 """Columns of a terminal, and of a log."""
 MONEY = 0.01

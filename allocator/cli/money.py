@@ -21,7 +21,9 @@ def compare(files: Files, as_json: AsJson = False, as_csv: AsCsv = False) -> Non
         raise refused("FILE", str(files[0]), "name two scenario files or more")
     from allocator import api
 
-    answer = api.compare_scenarios([load(file) for file in files])
+    scenarios = [load(file) for file in files]
+    with progress("planning each") as watch:
+        answer = api.compare_scenarios(scenarios, watch=watch)
     show(answer, form)
     if not all(case.plan.reached for case in answer.cases):
         raise typer.Exit(OUT_OF_REACH)
