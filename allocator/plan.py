@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from allocator.cautions import cautions_of_plan, what_is_assumed
+from allocator.confidence import confident_plan
 from allocator.errors import RangeError
 from allocator.flow import yields
 from allocator.problem import CAPITAL, COST, Problem, pose
@@ -37,6 +38,7 @@ def make_plan(
     hold: Mapping[str, Mapping[str, float]] | None = None,
     without: Sequence[str] = (),
     with_: Sequence[str] = (),
+    confidence: float | None = None,
 ) -> Plan:
     """Return the cheapest plan that meets the scenario's targets, floors and limits.
 
@@ -55,6 +57,9 @@ def make_plan(
     without, with_ : sequence of str, optional
         Alternatives, purchases or laws ("STEP: improve") that are not to be had, or to be had whatever they cost.
 
+    confidence : float, optional
+        Ask for the cheapest plan found that meets every target with this probability under the error of the estimates.
+
     Returns
     -------
     Plan
@@ -69,21 +74,25 @@ def make_plan(
     """
     if spend is not None and capital is not None:
         raise RangeError("ask for the best yield for a yearly spend or for a capital, not both at once")
-    problem = pose(scenario, of, targets)
+    if confidence is not None and (spend is not None or capital is not None):
+        raise RangeError("a confidence is asked of a target: leave out the yearly spend or the capital")
+    problem, asked = pose(scenario, of, targets), (spend, capital, confidence)
     if not (hold or without or with_):
-        return _plan_of(problem, spend, capital)
-    plan = min((_plan_of(one, spend, capital) for one in restrained(problem, hold, without, with_)), key=_rank)
-    free = _plan_of(problem, spend, capital)
+        return _plan_of(problem, *asked)
+    plan = min((_plan_of(one, *asked) for one in restrained(problem, hold, without, with_)), key=_rank)
+    free = _plan_of(problem, *asked)
     total = free.money.total if free.reached and free.money is not None else None
     loss = split_loss(free) if free.reached else None
     return replace(plan, restraint=Restraint(restraint_words(hold, without, with_), total, loss))
 
 
-def _plan_of(problem: Problem, spend: float | None, capital: float | None) -> Plan:
+def _plan_of(problem: Problem, spend: float | None, capital: float | None, confidence: float | None) -> Plan:
     if problem.options.no_way:
         return _no_plan(problem, tuple(Binding(step, reason) for step, reason in problem.options.no_way))
     if spend is not None or capital is not None:
         return _best_for_the_money(problem, spend, capital)
+    if confidence is not None:
+        return _with_confidence(problem, confidence)
     solved = solve(problem)
     if solved.outcome is None:
         return _out_of_reach(problem, solved)
@@ -91,6 +100,19 @@ def _plan_of(problem: Problem, spend: float | None, capital: float | None) -> Pl
     plan = _with_next_nine(plan, problem, solved)
     rules, note = simpler_rules(problem, solved.outcome)
     return _with_cautions(replace(plan, rules=rules, rules_note=note), problem)
+
+
+def _with_confidence(problem: Problem, confidence: float) -> Plan:
+    found = confident_plan(problem, confidence)
+    if found is None:
+        return _out_of_reach(problem, solve(problem))
+    solved, told = found
+    plan = describe(solved, "confident", problem)
+    assert plan.proof is not None
+    proof = replace(plan.proof, lower_bound=None, gap=None, note=f"{told.asked} plans compared: {told.method}.")
+    note = "left out, since none of them allows for the error of the estimates"
+    plan = replace(plan, reached=told.reached, proof=proof, rules_note=note, confidence=told)
+    return _with_cautions(plan, problem)
 
 
 def _rank(plan: Plan) -> tuple[bool, float, float]:

@@ -127,3 +127,15 @@ def _number(text: str) -> float | None:
         return float(text)
     except ValueError:
         return None
+
+
+def refuse_unfit_confidence(confidence: float | None, spend: float | None, capital: float | None) -> None:
+    if confidence is None:
+        return
+    if not 0.5 <= confidence <= 0.999:
+        raise refused("--confidence", f"{confidence:g}", "give a probability from 0.5 to 0.999 (90 % is 0.9)")
+    if spend is not None or capital is not None:
+        given = "--spend" if spend is not None else "--capital"
+        raise refused(
+            "--confidence", f"{given} beside it", "a confidence is asked of a target; leave out one of the two"
+        )

@@ -18,6 +18,7 @@ from allocator.cli.asked import (
     losses_asked,
     name_of,
     named,
+    refuse_unfit_confidence,
     refuse_unfit_money,
     split_of,
     yield_option,
@@ -72,6 +73,9 @@ def plan(
     of: Of = None,
     spend: Annotated[float | None, typer.Option(help="The best yield for at most this total cost per year.")] = None,
     capital: Annotated[float | None, typer.Option(help="The best yield for at most this much capital.")] = None,
+    confidence: Annotated[
+        float | None, typer.Option(help="Meet the targets with this probability under the error of the estimates.")
+    ] = None,
     hold: Hold = None,
     without: Without = None,
     with_: With = None,
@@ -87,6 +91,7 @@ def plan(
     refuse_unfit_money(spend, capital)
     if xlsx is not None and xlsx.suffix.lower() != ".xlsx":
         raise refused("--xlsx", str(xlsx), "name a workbook, as plan.xlsx")
+    refuse_unfit_confidence(confidence, spend, capital)
     levels = levels_held(hold or [])
     from allocator import api
 
@@ -94,7 +99,7 @@ def plan(
     targets = named(losses, of or split_of(scenario, losses))
     answer = api.make_plan(
         scenario, of=name_of(of), targets=targets, spend=spend, capital=capital, hold=levels, without=without or (),
-        with_=with_ or (),
+        with_=with_ or (), confidence=confidence,
     )  # fmt: skip
     show(answer, form)
     if xlsx is not None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import asdict
 from typing import Any
 
 from allocator.report.plain import best_json as _best
@@ -12,6 +13,7 @@ from allocator.report.plain import today_line_json, yields_json
 from allocator.report.words import nines_of
 from allocator.results import (
     Check,
+    Confidence,
     Nines,
     NinesPoint,
     Plan,
@@ -47,7 +49,25 @@ def plan_json(plan: Plan) -> dict[str, Any]:
         "rules": [_pick(rule, rules) for rule in plan.rules],
         "rules_note": plan.rules_note,
         "restraint": _restraint(plan),
+        "confidence": _confidence(plan.confidence),
         "cautions": _cautions(plan.cautions),
+    }
+
+
+def _confidence(sure: Confidence | None) -> dict[str, Any] | None:
+    if sure is None:
+        return None
+    return {
+        **_pick(sure, ("confidence", "reached", "draws")),
+        **asdict(sure.trial),
+        "price_of_confidence": sure.price,
+        "plain": asdict(sure.plain),
+        "own_bounds": None if sure.own_bounds is None else asdict(sure.own_bounds),
+        "cost": {"share": sure.cost_share, "low": sure.cost_low, "high": sure.cost_high},
+        "improvement": {"share": sure.cost_share, "low": sure.improvement_low, "high": sure.improvement_high},
+        **_pick(sure, ("ranges", "in_doubt", "exact", "asked")),
+        "what_to_measure": [asdict(study) for study in sure.studies],
+        **_pick(sure, ("studies_left_out", "law", "method", "studies_method")),
     }
 
 

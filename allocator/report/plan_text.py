@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 
 from allocator.report import blocks, words
+from allocator.report.confidence_text import write_confidence
 from allocator.report.paper import LOG_WIDTH, Paper, columns
 from allocator.results import Plan, Restraint, RuleOutcome, StepTarget
 
@@ -19,6 +20,8 @@ def plan_text(plan: Plan, width: int = LOG_WIDTH) -> str:
     _write_answer(paper, plan)
     if plan.yields is not None:
         _write_tables(paper, plan)
+    if plan.confidence is not None:
+        write_confidence(paper, plan, plan.confidence)
     _write_rules(paper, plan)
     _write_next_nine(paper, plan)
     _write_proof(paper, plan)
@@ -62,14 +65,25 @@ def _restraint(plan: Plan, kept: Restraint) -> str:
 def answer(plan: Plan) -> str:
     """The answer in one sentence, or for a target out of reach, that it is out of reach."""
     wanted = words.targets_in_full(plan.targets, plan.target_losses, plan.split)
+    if not plan.reached and plan.confidence is not None:
+        return f"No plan was found that is {_percent(plan.confidence.confidence)} sure of {wanted}."
     if not plan.reached:
         return f"The target cannot be met: {wanted or 'what was asked'} is out of reach."
     opening = {
         "cheapest": f"For {wanted}",
+        "confident": f"To be {_sureness(plan)} sure of {wanted}",
         "best yield": f"The best {words.yield_name(plan.split)} for the money is {_reached(plan)}",
         "optimum": f"No target is set; the least cost is at a {words.yield_name(plan.split)} of {_reached(plan)}",
     }.get(plan.question, f"For {wanted}")
     return f"{opening}: {_actions(plan)}; it costs {_cost(plan)}."
+
+
+def _percent(share: float) -> str:
+    return f"{share * 100:g} %"
+
+
+def _sureness(plan: Plan) -> str:
+    return "" if plan.confidence is None else _percent(plan.confidence.confidence)
 
 
 def _reached(plan: Plan) -> str:
@@ -112,7 +126,8 @@ def _write_out_of_reach(paper: Paper, plan: Plan) -> None:
         paper.heading("What holds it out of reach")
         blocks.write_binding(paper, plan.binding)
     if plan.yields is not None:
-        paper.heading(f"The best reachable plan: {_actions(plan)}; it costs {_cost(plan)}. The tables show this plan.")
+        which = "best reachable" if plan.confidence is None else "surest"
+        paper.heading(f"The {which} plan: {_actions(plan)}; it costs {_cost(plan)}. The tables show this plan.")
 
 
 def _write_tables(paper: Paper, plan: Plan) -> None:
@@ -206,7 +221,7 @@ def _rule_row(rule: RuleOutcome) -> list[str]:
 
 
 def _write_next_nine(paper: Paper, plan: Plan) -> None:
-    if not (plan.reached and plan.targets):
+    if not (plan.reached and plan.targets) or plan.confidence is not None:
         return
     if plan.cost_of_next_nine is None:
         said = "out of reach with what the scenario offers."

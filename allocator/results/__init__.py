@@ -6,6 +6,7 @@ made when it is first asked for.
 
 from allocator.results.capital import Asset, Capacity, CapitalCase, CashCase, CashYear, Lever, Savings, ScrapView
 from allocator.results.compare import Compared, Comparison, StepAcross, TakenAcross
+from allocator.results.confidence import Confidence, StudyWorth, Trial
 from allocator.results.line import Caution, Level, Money, TodayLine, Yields
 from allocator.results.nines import Nines, NinesPoint
 from allocator.results.option_table import LineFigures, Review, ReviewedStep, ReviewRow
@@ -42,6 +43,7 @@ __all__ = [
     "Check",
     "Compared",
     "Comparison",
+    "Confidence",
     "Division",
     "Fit",
     "Index",
@@ -79,11 +81,13 @@ __all__ = [
     "StepToday",
     "Stop",
     "Study",
+    "StudyWorth",
     "SupplierSheet",
     "SupplierSheets",
     "TakenAcross",
     "Today",
     "TodayLine",
+    "Trial",
     "Understood",
     "Yields",
     "as_table",

@@ -6,6 +6,7 @@ from dataclasses import dataclass
 from functools import cached_property
 from typing import TYPE_CHECKING
 
+from allocator.results.confidence import Confidence
 from allocator.results.line import Caution, Level, Money, TodayLine, Yields
 from allocator.results.table import as_table
 from allocator.shown import shown
@@ -125,7 +126,7 @@ class Plan:
     currency: str
     shipped_per_year: float
     question: str
-    """'cheapest' (meet the target at least cost), 'optimum' (no target), 'best yield' (for the money)."""
+    """'cheapest' (meet the target at least cost), 'optimum' (no target), 'best yield' (for the money), 'confident'."""
     reached: bool
     split: str
     """The yield whose budget is split: 'final_yield', 'rolled_yield' or 'shipped_yield'."""
@@ -152,6 +153,8 @@ class Plan:
     spend_limit: float | None = None
     capital_limit: float | None = None
     restraint: Restraint | None = None
+    confidence: Confidence | None = None
+    """How sure the plan is, where that was asked."""
 
     @property
     def cost_of_restraint(self) -> float | None:

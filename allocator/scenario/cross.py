@@ -9,7 +9,7 @@ from math import prod
 from allocator.scenario.faults import Damage, Finding, Owner, did_you_mean, listed
 from allocator.scenario.forms import Remark, form_remarks
 from allocator.scenario.keys import NAMELESS
-from allocator.scenario.law_rules import law_remarks, start_remarks, start_remarks_of
+from allocator.scenario.law_rules import law_remarks, range_remarks, start_remarks, start_remarks_of
 from allocator.scenario.level import ATTRIBUTE, given
 from allocator.scenario.line_rules import cost_key_findings, feeds_findings, net_cost_findings
 from allocator.scenario.model import Alternative, Capability, Costs, Floor, Law, Scenario, Step
@@ -33,6 +33,8 @@ def cross_findings(scenario: Scenario, damage: Damage = NO_DAMAGE) -> list[Findi
     topics = {topic for _, topic in damage}
     findings = _repeated("step", [step.name for step in scenario.step])
     findings += _repeated("purchase", [purchase.name for purchase in scenario.purchase])
+    for i, purchase in enumerate(scenario.purchase):
+        findings += _under("", ("purchase", i), range_remarks(purchase))
     findings += feeds_findings(scenario, "name" not in topics)
     for i, step in enumerate(scenario.step):
         findings += _step_findings(i, step, scenario)
@@ -78,7 +80,7 @@ def _step_findings(i: int, step: Step, scenario: Scenario) -> Iterator[Finding]:
 
 def _under(key: str, owner: Owner, remarks: Sequence[Remark]) -> Iterator[Finding]:
     for below, found, allowed in remarks:
-        yield Finding(owner, f"{key}.{below}".rstrip("."), found, allowed)
+        yield Finding(owner, f"{key}.{below}".strip("."), found, allowed)
 
 
 def _floor_findings(owner: Owner, floor: Floor) -> Iterator[Finding]:
@@ -103,6 +105,7 @@ def _alternatives_findings(i: int, step: Step, scenario: Scenario, sound: bool) 
     purchases = [purchase.name for purchase in scenario.purchase]
     for j, alternative in enumerate(step.alternative):
         owner = ("alternative", i, j)
+        yield from _under("", owner, range_remarks(alternative))
         if alternative.capability is not None:
             remarks = form_remarks(alternative.capability, step.opportunities)
             if not remarks and sound:

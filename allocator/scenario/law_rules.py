@@ -7,7 +7,7 @@ from collections.abc import Sequence
 from allocator.errors import RangeError
 from allocator.scenario.forms import Remark, form_remarks
 from allocator.scenario.level import Level, given, resolve
-from allocator.scenario.model import Capability, Law, Step
+from allocator.scenario.model import Capability, Costs, Law, Step
 
 SCALES = ("price", "per_year", "per_item")
 PARAMETER = {"power": "exponent", "exponential": "rate"}
@@ -18,9 +18,29 @@ def law_remarks(law: Law, opportunities: float) -> list[Remark]:
     """Return what is wrong with the keys of a law, taken by itself."""
     remarks = _parameter_remarks(law)
     remarks += _quote_remarks(law, opportunities) if law.law == "quotes" else _scale_remarks(law)
+    remarks += range_remarks(law)
     for key, level in (("at", law.at), ("up_to", law.up_to)):
         if isinstance(level, Capability):
             remarks += quoted_remarks(key, level, opportunities)
+    return remarks
+
+
+def range_remarks(costs: Law | Costs) -> list[Remark]:
+    """Return what is wrong with how far the amounts of a law, an alternative or a purchase may turn out otherwise."""
+    remarks: list[Remark] = []
+    for key in SCALES:
+        amount = getattr(costs, key, None)
+        for end, sign in (("low", 1.0), ("high", -1.0)):
+            bound = getattr(costs, f"{key}_{end}", None)
+            if bound is None:
+                continue
+            if amount is None:
+                remarks.append((f"{key}_{end}", f"{bound:g} without {key}", f"give {key} itself beside it"))
+            elif sign * (amount - bound) < 0.0:
+                side = "at most" if end == "low" else "at least"
+                remarks.append((f"{key}_{end}", f"{bound:g} with {key} {amount:g}", f"give {side} the {key} itself"))
+            elif amount == 0.0 != bound and isinstance(costs, Law):
+                remarks.append((f"{key}_{end}", f"{bound:g} with {key} 0", f"give a {key} above 0: the law is scaled"))
     return remarks
 
 

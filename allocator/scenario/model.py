@@ -121,6 +121,12 @@ class Law(Table):
     price: Nonnegative | None = None
     per_year: Nonnegative | None = None
     per_item: Nonnegative | None = None
+    price_low: Nonnegative | None = None
+    price_high: Nonnegative | None = None
+    per_year_low: Nonnegative | None = None
+    per_year_high: Nonnegative | None = None
+    per_item_low: Nonnegative | None = None
+    per_item_high: Nonnegative | None = None
     life_years: Positive | None = None
     at: Capability | None = None
     up_to: (
@@ -141,13 +147,17 @@ class Copies(Table):
 
 
 class Costs(Table):
-    """What a purchase or an alternative costs."""
+    """What a purchase or an alternative costs; `…_low` and `…_high` say how far an amount may turn out otherwise."""
 
     price: Nonnegative = 0.0
+    price_low: Nonnegative | None = None
+    price_high: Nonnegative | None = None
     trade_in: Nonnegative = 0.0
     life_years: Positive | None = None
     resale: Nonnegative = 0.0
     per_year: Finite = 0.0
+    per_year_low: Finite | None = None
+    per_year_high: Finite | None = None
 
 
 class Purchase(Costs):
@@ -163,6 +173,8 @@ class Alternative(Costs):
     group: Name = "machine"
     uses: str | None = None
     per_item: Finite = 0.0
+    per_item_low: Finite | None = None
+    per_item_high: Finite | None = None
     price_allowance: Finite = 0.0
     capability: Capability | None = None
     k: BelowOne | None = None
