@@ -14,6 +14,7 @@ from allocator.choice import Outcome
 from allocator.cost_range import improvement_drawn, totals_drawn
 from allocator.doubt import EXACT, Doubts, budget_used, draw_nature, find_doubts, sample_of, seen_in
 from allocator.errors import RangeError
+from allocator.intervals import share_interval
 from allocator.problem import Problem
 from allocator.results import Confidence, StudyWorth, Trial
 from allocator.solve.road import Solved, solve
@@ -23,7 +24,6 @@ Array = NDArray[np.float64]
 LEAST, MOST = 0.5, 0.999
 FRESH_SEED, PRICE_SEED = 77_003, 77_004
 MOST_FRESH, FEWEST_FRESH, FRESH_CELLS = 100_000, 10_000, 4_000_000
-Z_95 = 1.959963984540054
 COST_SHARE = 0.90
 TIMES = 4.0
 """A further study is taken to make the sample this many times larger."""
@@ -136,7 +136,7 @@ class _Tried:
     def trial(self, outcome: Outcome) -> Trial:
         shown = seen_in(self.nature, self.doubts, self.problem, outcome)
         kept = int(np.sum(budget_used(shown, self.problem, outcome) <= 1.0 + 1e-9))
-        return Trial(outcome.money.total, kept / self.draws, *share_limits(kept, self.draws))
+        return Trial(outcome.money.total, kept / self.draws, *share_interval(kept, self.draws))
 
     def costs(self, outcome: Outcome) -> tuple[float, float, tuple[float, float], int]:
         shown = seen_in(self.nature, self.doubts, self.problem, outcome)
@@ -146,19 +146,6 @@ class _Tried:
         low, high = np.quantile(totals, [tail, 1.0 - tail])
         least, most = np.quantile(improvement, [tail, 1.0 - tail])
         return float(low), float(high), (float(least), float(most)), ranges
-
-
-def share_limits(kept: int, draws: int) -> tuple[float, float]:
-    """Return 95 % limits of a share from so many draws (Wilson, J. American Statistical Association 22, 1927).
-
-    >>> low, high = share_limits(0, 100)
-    >>> round(low, 4), round(high, 4)
-    (0.0, 0.037)
-    """
-    share, square = kept / draws, Z_95**2 / draws
-    middle = share + 0.5 * square
-    half = Z_95 * math.sqrt(share * (1.0 - share) / draws + square / (4.0 * draws))
-    return max((middle - half) / (1.0 + square), 0.0), min((middle + half) / (1.0 + square), 1.0)
 
 
 def what_to_measure(search: Search, best: Found) -> tuple[tuple[StudyWorth, ...], int]:

@@ -17,7 +17,6 @@ from typer.testing import CliRunner
 
 from allocator.choice import Choice, evaluate
 from allocator.cli import app
-from allocator.confidence import share_limits
 from allocator.demonstrate import lower_bound_cpk, parts_needed
 from allocator.doubt import Nature, draw_nature, find_doubts, seen_in, true_intensity
 from allocator.errors import RangeError
@@ -347,11 +346,3 @@ def test_the_command_line_refuses_in_its_own_words() -> None:
     answer = CliRunner().invoke(app, ["plan", "x.toml", "--confidence", "90"])
     assert answer.exit_code == 2
     assert "give a probability from 0.5 to 0.999 (90 % is 0.9)" in answer.stderr
-
-
-def test_limits_of_a_share_cover() -> None:
-    """Wilson's limits: 93.5 to 96.5 % over 10,000 draws (exact binomial shares of the same)."""
-    for share in (0.1, 0.9):
-        kept = np.random.default_rng(2).binomial(2000, share, 10_000)
-        inside = [low <= share <= high for low, high in map(lambda k: share_limits(int(k), 2000), kept)]  # noqa: C417
-        assert 0.935 <= np.mean(inside) <= 0.965

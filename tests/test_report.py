@@ -53,7 +53,8 @@ PLAN_KEYS = keys(
     "lower_bound gap price_of_defect_budget cost_of_next_nine assumed best_reachable binding steps"
 )
 PLAN_ADDED = keys(
-    "title currency question split_yield dpu method seconds binding_reasons rules rules_note restraint confidence cautions"
+    "title currency question split_yield dpu method seconds binding_reasons rules rules_note restraint "
+    "confidence cautions"
 )
 STEP_KEYS = keys(
     "step supplier alternatives sigma_level shift k cp cpk cpk_after_shift dpmo ppm budget_share starts_per_year scrap "

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from contextlib import nullcontext
 from pathlib import Path
 from typing import Annotated
 
@@ -23,6 +24,7 @@ from allocator.cli.asked import (
     split_of,
     yield_option,
 )
+from allocator.cli.progress import progress
 from allocator.errors import Fault, InputError
 
 
@@ -97,10 +99,11 @@ def plan(
 
     scenario = load(file)
     targets = named(losses, of or split_of(scenario, losses))
-    answer = api.make_plan(
-        scenario, of=name_of(of), targets=targets, spend=spend, capital=capital, hold=levels, without=without or (),
-        with_=with_ or (), confidence=confidence,
-    )  # fmt: skip
+    with progress("looking for a plan that holds") if confidence is not None else nullcontext():
+        answer = api.make_plan(
+            scenario, of=name_of(of), targets=targets, spend=spend, capital=capital, hold=levels,
+            without=without or (), with_=with_ or (), confidence=confidence,
+        )  # fmt: skip
     show(answer, form)
     if xlsx is not None:
         from allocator.report.plan_book import write_plan_book
