@@ -101,6 +101,7 @@ def test_plan_passes_targets_as_losses_by_name(api: Api) -> None:
             "hold": {},
             "without": (),
             "with_": (),
+            "confidence": None,
         }
     ]
 
