@@ -34,12 +34,14 @@ if TYPE_CHECKING:
         Study,
         SupplierSheets,
         Today,
+        Weighed,
     )
     from allocator.scenario.book_out import write_workbook
     from allocator.scenario.model import Scenario
     from allocator.scenario.read import read_scenario, scenario_from_dict
     from allocator.sheets import supplier_sheets
     from allocator.today import see_today
+    from allocator.weigh import weigh_purchases
 
 _HOMES = {
     "AllocatorError": "errors",
@@ -55,6 +57,7 @@ _HOMES = {
     "Study": "results",
     "SupplierSheets": "results",
     "Today": "results",
+    "Weighed": "results",
     "capital_case": "case",
     "check_scenario": "check",
     "compare_scenarios": "compare",
@@ -68,6 +71,7 @@ _HOMES = {
     "scenario_from_dict": "scenario.read",
     "see_today": "today",
     "supplier_sheets": "sheets",
+    "weigh_purchases": "weigh",
     "write_workbook": "scenario.book_out",
 }
 
@@ -85,6 +89,7 @@ __all__ = [
     "Study",
     "SupplierSheets",
     "Today",
+    "Weighed",
     "capital_case",
     "check_scenario",
     "compare_scenarios",
@@ -98,6 +103,7 @@ __all__ = [
     "scenario_from_dict",
     "see_today",
     "supplier_sheets",
+    "weigh_purchases",
     "write_workbook",
 ]
 __version__ = "0.1.0"

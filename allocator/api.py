@@ -15,6 +15,7 @@ from allocator.scenario.book_out import write_workbook
 from allocator.scenario.read import read_scenario
 from allocator.sheets import supplier_sheets
 from allocator.today import see_today
+from allocator.weigh import weigh_purchases
 
 __all__ = [
     "capital_case",
@@ -29,5 +30,6 @@ __all__ = [
     "review_table",
     "see_today",
     "supplier_sheets",
+    "weigh_purchases",
     "write_workbook",
 ]

@@ -92,7 +92,7 @@ def without(problem: Problem, thing: Thing) -> Problem:
     ways = problem.options.ways
     if thing.kind != LAW:
         return _with_ways(
-            problem, ways.take(np.flatnonzero(~_takes(problem, thing))), f"'{thing.name}' is not to be had"
+            problem, ways.take(np.flatnonzero(~ways_that_take(problem, thing))), f"'{thing.name}' is not to be had"
         )
     mine = ways.step == thing.step
     first = np.flatnonzero(mine & _first_of_pick(ways))
@@ -111,7 +111,7 @@ def forced(problem: Problem, thing: Thing) -> tuple[Problem, ...]:
     """
     if thing.kind == LAW:
         return (problem,)
-    ways, taken = problem.options.ways, _takes(problem, thing)
+    ways, taken = problem.options.ways, ways_that_take(problem, thing)
     asked = []
     for step in np.unique(ways.step[taken]).tolist():
         table = ways.take(np.flatnonzero(taken | (ways.step != step)))
@@ -119,8 +119,8 @@ def forced(problem: Problem, thing: Thing) -> tuple[Problem, ...]:
     return tuple(asked)
 
 
-def _takes(problem: Problem, thing: Thing) -> Flags:
-    """Return which ways take an alternative or use a purchase."""
+def ways_that_take(problem: Problem, thing: Thing) -> Flags:
+    """Return which ways take an alternative or use a purchase, bool, shape (n_ways,)."""
     ways = problem.options.ways
     if thing.kind == PURCHASE:
         return ways.uses[:, thing.place]

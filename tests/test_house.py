@@ -12,9 +12,10 @@ ROOT = Path(__file__).parent.parent
 LONGEST_FILE = 400
 PUBLIC = {
     "AllocatorError", "CapitalCase", "Check", "Comparison", "InputError", "Nines", "Plan", "Rehearsal", "Review",
-    "Scenario", "Study", "SupplierSheets", "Today", "capital_case", "check_scenario", "compare_scenarios", "make_plan",
+    "Scenario", "Study", "SupplierSheets", "Today", "Weighed", "capital_case", "check_scenario", "compare_scenarios",
+    "make_plan",
     "measure_capability", "price_nines", "read_scenario", "rehearse", "review_page", "review_table",
-    "scenario_from_dict", "see_today", "supplier_sheets", "write_workbook",
+    "scenario_from_dict", "see_today", "supplier_sheets", "weigh_purchases", "write_workbook",
 }  # fmt: skip
 HEAVY = ("numpy", "scipy", "cvxpy", "pandas", "pydantic", "rich", "matplotlib", "openpyxl")
 

@@ -1,4 +1,4 @@
-"""The commands of those who answer for the money: compare, case, review."""
+"""The commands of those who answer for the money: compare, case, review, weigh."""
 
 from __future__ import annotations
 
@@ -65,6 +65,20 @@ def review(
     scenario = load(file)
     with progress("weighing the options") as watch:
         answer = api.review_table(scenario, step, watch=watch)
+    show(answer, form)
+    if not answer.reached:
+        raise typer.Exit(OUT_OF_REACH)
+
+
+@app.command()
+def weigh(file: File, as_json: AsJson = False, as_csv: AsCsv = False) -> None:
+    """Say for everything that could be bought or changed whether to buy or leave it: allocator weigh line.toml"""
+    form = form_of(as_json, as_csv)
+    from allocator import api
+
+    scenario = load(file)
+    with progress("weighing") as watch:
+        answer = api.weigh_purchases(scenario, watch=watch)
     show(answer, form)
     if not answer.reached:
         raise typer.Exit(OUT_OF_REACH)

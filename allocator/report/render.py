@@ -26,6 +26,8 @@ from allocator.report.review_text import review_text
 from allocator.report.sheets_data import sheets_csv, sheets_json
 from allocator.report.sheets_text import sheets_text
 from allocator.report.today_text import today_text
+from allocator.report.weigh_data import weigh_csv, weigh_json
+from allocator.report.weigh_text import weigh_text
 from allocator.results import (
     CapitalCase,
     Check,
@@ -37,6 +39,7 @@ from allocator.results import (
     Study,
     SupplierSheets,
     Today,
+    Weighed,
 )
 
 Form = Literal["text", "json", "csv"]
@@ -59,6 +62,7 @@ _RENDERERS: dict[type, _Renderers] = {
     Rehearsal: _Renderers(rehearsal_text, rehearsal_json, rehearsal_csv),
     Study: _Renderers(measure_text, measure_json, measure_csv),
     Review: _Renderers(review_text, review_json, review_csv),
+    Weighed: _Renderers(weigh_text, weigh_json, weigh_csv),
     Comparison: _Renderers(compare_text, compare_json, compare_csv),
 }
 

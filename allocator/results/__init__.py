@@ -28,12 +28,14 @@ from allocator.results.sheets import Sheet, SupplierSheet, SupplierSheets
 from allocator.results.study import Fit, Index, Indices, Outlier, Signal, Study
 from allocator.results.table import as_table, records
 from allocator.results.today import Check, StepToday, Today, Understood
+from allocator.results.weigh import BreakEvenLevel, Weighed, Weighing
 
 __all__ = [
     "Asset",
     "BestReachable",
     "Binding",
     "Bought",
+    "BreakEvenLevel",
     "Capacity",
     "CapitalCase",
     "Carried",
@@ -89,6 +91,8 @@ __all__ = [
     "TodayLine",
     "Trial",
     "Understood",
+    "Weighed",
+    "Weighing",
     "Yields",
     "as_table",
     "records",

@@ -1,0 +1,271 @@
+"""Where does the verdict on a purchase turn: the price, the volume and the capability at which it is worth nothing."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from allocator.asker import ask, law_slope_at_start, takes, total_at, total_of, value_of_defects
+from allocator.capability import log_defects, sigma_from_log_defects
+from allocator.changed import at_law_price, at_level, at_price, at_volume, level_of
+from allocator.problem import Problem, within
+from allocator.scenario.level import Level
+from allocator.solve.road import Solved
+from allocator.variants import LAW, Thing, forced
+
+FURTHEST_VOLUME = 100.0
+"""Volumes are looked at from a hundredth to a hundred times today's."""
+PER_DECADE = 4
+"""Volumes per decade at which the plan is made to see where it changes."""
+FOUND = 1e-5
+"""A volume or a price factor is found when the verdict turns within this share of it."""
+SAME = 2e-7
+"""Totals that differ by less than this share are the same: each is solved to 1e-7."""
+CHEAPEST = 1e-4
+"""Share of its stated scale below which a law is as good as free."""
+TURNS = 24
+FLAWLESS = math.log(1e-12)
+"""ln of the defect probability that stands for a machine that makes no mistakes."""
+
+
+@dataclass
+class Plans:
+    """The plan at other volumes, each made once, and what is known of the plan at today's."""
+
+    problem: Problem
+    plan: Solved
+    known: dict[float, Solved] = field(default_factory=dict)
+    asked: dict[float, Problem] = field(default_factory=dict)
+
+    def at(self, factor: float) -> Solved:
+        """Return the plan at `factor` times today's volume; yields, floors and capital allow the same choices there."""
+        if factor == 1.0:
+            return self.plan
+        if factor not in self.known:
+            nearest = min([1.0, *self.known], key=lambda f: abs(math.log(f / factor)))
+            solved = ask(self.question(factor), self.plan if nearest == 1.0 else self.known[nearest])
+            assert solved is not None, "what can be reached does not depend on the volume"
+            self.known[factor] = solved
+        return self.known[factor]
+
+    def question(self, factor: float) -> Problem:
+        """Return the question at `factor` times today's volume."""
+        if factor not in self.asked:
+            self.asked[factor] = self.problem if factor == 1.0 else at_volume(self.problem, factor)
+        return self.asked[factor]
+
+    def grid(self) -> list[float]:
+        """Return the volumes looked at first, as factors of today's."""
+        decades = int(math.log10(FURTHEST_VOLUME))
+        return [10.0 ** (k / PER_DECADE) for k in range(-decades * PER_DECADE, decades * PER_DECADE + 1)]
+
+
+def break_even_volume(plans: Plans, thing: Thing) -> float | None:
+    """Return the smallest factor of today's volume from which the plan takes a thing.
+
+    0 where it does at the smallest volume looked at, None where it does at none.
+    """
+    grid = sorted({*plans.grid(), *plans.known})
+    first = next((i for i, factor in enumerate(grid) if takes(plans.at(factor), thing)), None)
+    if first is None:
+        return None
+    return 0.0 if first == 0 else _turn(plans, thing, grid[first - 1], grid[first])
+
+
+def _turn(plans: Plans, thing: Thing, low: float, high: float) -> float:
+    """Narrow the volumes between which a thing enters the plan, from the side where it is in."""
+    for turn in range(TURNS):
+        if high / low <= 1.0 + FOUND:
+            break
+        guess = _guess(plans, thing, low, high) if turn % 3 < 2 else None
+        middle = math.sqrt(low * high)
+        factor = middle if guess is None else min(max(guess, low * (high / low) ** 0.001), high * (low / high) ** 0.001)
+        here = plans.at(factor)
+        if guess == factor and thing.kind != LAW and _both_hold(plans, factor, low, high):
+            return factor
+        low, high = (low, factor) if takes(here, thing) else (factor, high)
+    return high
+
+
+def _both_hold(plans: Plans, here: float, low: float, high: float) -> bool:
+    """Return whether the choices of both sides are as good as the best where their costs meet."""
+    best = total_of(plans.at(here))
+    sides = [total_at(plans.question(here), plans.at(factor)) for factor in (low, high)]
+    return max(sides) - best <= SAME * abs(best)
+
+
+def _guess(plans: Plans, thing: Thing, low: float, high: float) -> float | None:
+    """Return where both sides meet if their choices are kept; None where that cannot be said.
+
+    A choice with its levels costs a fixed amount and an amount per unit, so two of them meet at one volume. A law
+    starts to be used where its first step costs what a defect less is worth.
+    """
+    if thing.kind == LAW:
+        ends = [_law_pull(plans, thing, factor) for factor in (low, high)]
+    else:
+        out, taken = plans.at(low), plans.at(high)
+        ends = [
+            total_of(out) - total_at(plans.question(low), taken),
+            total_at(plans.question(high), out) - total_of(taken),
+        ]
+    left, right = ends
+    if left is None or right is None or not left < 0.0 < right:
+        return None
+    if thing.kind == LAW:
+        share = left / (left - right)
+        return float(low * (high / low) ** share)
+    return float(low + (high - low) * left / (left - right))
+
+
+def _law_pull(plans: Plans, thing: Thing, factor: float) -> float | None:
+    """Return how far a defect less is worth more than the law's first step costs there, as a share."""
+    return _pull(plans.at(factor), plans.question(factor), thing)
+
+
+def _pull(solved: Solved, problem: Problem, thing: Thing) -> float | None:
+    """Return (worth of a defect less)/(cost of the law's first step) − 1; None where one of them is unknown.
+
+    `problem` is the question in which the law is on offer.
+    """
+    assert solved.outcome is not None
+    row = _row_with_law(solved, problem, thing)
+    slope = None if row is None else law_slope_at_start(problem.options.ways, row, solved)
+    worth = value_of_defects(solved, thing.step)
+    return None if slope is None or worth is None else worth / slope - 1.0
+
+
+def _row_with_law(solved: Solved, problem: Problem, thing: Thing) -> int | None:
+    """Return the first way that offers the law on top of what an answer chooses in the step."""
+    assert solved.outcome is not None
+    ways = problem.options.ways
+    pick = solved.problem.options.ways.text.pick[solved.outcome.choice.rows[thing.step]]
+    row = int(np.searchsorted(ways.text.pick, pick))
+    return row if row < len(ways) and bool(ways.text.pick[row] == pick and ways.moves[row]) else None
+
+
+def break_even_law(problem: Problem, banned: Solved, thing: Thing) -> float | None:
+    """Return the factor of its scale up to which a law is worth using; None where it never is.
+
+    Parameters
+    ----------
+    problem : Problem
+        With the law on offer.
+    banned : Solved
+        The best plan without the law.
+    """
+    pull = _pull(banned, problem, thing)
+    without, factor = total_of(banned), CHEAPEST if pull is None else 1.0 + pull
+    if factor <= 0.0:
+        return None
+    for _ in range(TURNS):
+        tried = factor * (1.0 + FOUND)
+        offered = ask(at_law_price(problem, thing.step, tried), banned)
+        assert offered is not None, "the plan without the law keeps every limit"
+        saved = without - total_of(offered)
+        if not takes(offered, thing) or saved <= SAME * abs(without):
+            break
+        # The least total is concave in the factor, so its tangent meets the plan without the law too early, never late.
+        spent = total_of(offered) - total_at(at_law_price(problem, thing.step, 0.0), offered)
+        factor = tried * (1.0 + saved / spent)
+    return factor if factor > CHEAPEST else None
+
+
+def break_even_price(
+    problem: Problem, thing: Thing, price: float, per_price: float, without: float, taken: Solved
+) -> float | None:
+    """Return the price at which a thing is worth nothing, None where it would not be taken for nothing.
+
+    The yearly cost of the plan that takes it is linear in the price, unless a limit on capital binds before.
+    """
+    even = price + (without - total_of(taken)) / per_price
+    if even < 0.0:
+        return None
+    assert taken.outcome is not None
+    if problem.capital is None or within(taken.outcome.capital + max(even - price, 0.0), problem.capital):
+        return even
+    low, high = (price, even) if even > price else (0.0, price)
+    for _ in range(TURNS):
+        middle = 0.5 * (low + high)
+        solved = with_it(at_price(problem, thing, middle), thing, taken)
+        pays = solved is not None and total_of(solved) <= without
+        low, high = (middle, high) if pays else (low, middle)
+        if high - low <= FOUND * high:
+            break
+    return low if low > 0.0 else None
+
+
+def with_it(problem: Problem, thing: Thing, near: Solved) -> Solved | None:
+    """Return the best plan that takes a thing; None where no choice that takes it keeps the limits."""
+    answers = [ask(one, near) for one in forced(problem, thing)]
+    return min((a for a in answers if a is not None), key=total_of, default=None)
+
+
+def break_even_level(problem: Problem, thing: Thing, without: float, taken: Solved) -> Level | None:
+    """Return how good an alternative must really be to be worth its price.
+
+    None where it pays even at today's level, or where even a flawless one does not.
+
+    Parameters
+    ----------
+    problem : Problem
+    thing : Thing
+        An alternative that brings a capability.
+    without : float [currency/year]
+        Total of the best plan without it.
+    taken : Solved
+        The best plan with it, as quoted.
+    """
+    stated = level_of(problem, thing)[0]
+    today = float(problem.options.today.levels.sigma_level[thing.step])
+    gain = without - total_of(taken)
+    if gain >= 0.0:
+        low, high = min(today, stated.sigma_level - 0.5), stated.sigma_level
+        lower = _gain_at(problem, thing, low, without, taken)
+        if lower >= 0.0:
+            return None
+        ends = (low, lower, high, gain)
+    else:
+        low, high = stated.sigma_level, max(_flawless(stated), stated.sigma_level)
+        upper = _gain_at(problem, thing, high, without, taken)
+        if upper < 0.0:
+            return None
+        ends = (low, gain, high, upper)
+    z = _level_between(lambda z: _gain_at(problem, thing, z, without, taken), stated, ends, SAME * abs(without))
+    return Level(z, stated.shift, stated.k, stated.sides, stated.attribute)
+
+
+def _flawless(level: Level) -> float:
+    return float(sigma_from_log_defects(FLAWLESS, level.k, level.shift, level.sides))
+
+
+def _gain_at(problem: Problem, thing: Thing, z: float, without: float, near: Solved) -> float:
+    solved = with_it(at_level(problem, thing, z), thing, near)
+    return -math.inf if solved is None else without - total_of(solved)
+
+
+def _level_between(
+    gain: Callable[[float], float], level: Level, ends: tuple[float, float, float, float], enough: float
+) -> float:
+    """Return the level at which the gain is 0; it is nearly straight in the defect probability, so that is halved."""
+    low, below, high, above = ends
+    for turn in range(TURNS):
+        if abs(above) <= enough or high - low <= FOUND:
+            break
+        p_low, p_high = (math.exp(float(log_defects(z, level.k, level.shift, level.sides))) for z in (low, high))
+        share = above / (above - below) if math.isfinite(below) and turn % 3 < 2 else 0.5
+        z = _sigma(level, p_high + (p_low - p_high) * min(max(share, 0.001), 0.999))
+        if not low < z < high:
+            z = 0.5 * (low + high)
+        found = gain(z)
+        if found >= 0.0:
+            high, above = z, found
+        else:
+            low, below = z, found
+    return high
+
+
+def _sigma(level: Level, p: float) -> float:
+    return float(sigma_from_log_defects(math.log(p), level.k, level.shift, level.sides))

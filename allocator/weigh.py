@@ -1,0 +1,214 @@
+"""Buy or leave: what is every alternative, shared purchase and law worth, all else planned anew, and why?"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+
+from allocator.asker import ask, takes, total_of
+from allocator.breakeven import (
+    FURTHEST_VOLUME,
+    Plans,
+    break_even_law,
+    break_even_level,
+    break_even_price,
+    break_even_volume,
+    with_it,
+)
+from allocator.capability import study_index
+from allocator.cautions import cautions_of_input, what_is_assumed
+from allocator.cautions.input import is_judged
+from allocator.changed import alternative_of, cost_per_price, costs_of, level_of
+from allocator.problem import Problem, pose
+from allocator.results import BreakEvenLevel, Weighed, Weighing
+from allocator.scenario.model import Alternative, Law, Scenario
+from allocator.solve.road import Solved, solve
+from allocator.variants import ALTERNATIVE, LAW, PURCHASE, Thing, things, without
+
+Watch = Callable[[int, int], None]
+
+
+def weigh_purchases(scenario: Scenario, *, watch: Watch | None = None) -> Weighed:
+    """Return what everything that could be bought or changed is worth, each by the best plan with it and without it.
+
+    Parameters
+    ----------
+    scenario : Scenario
+        As read by `read_scenario`; without a target the economic optimum is the plan.
+    watch : callable, optional
+        Told how many things of how many are weighed.
+
+    Returns
+    -------
+    Weighed
+        `reached` is False, and nothing is weighed, when no choice meets the targets.
+    """
+    problem = pose(scenario)
+    plan = None if problem.options.no_way else solve(problem)
+    rows: list[Weighing] = []
+    if plan is not None and plan.outcome is not None:
+        known, plans = things(problem), Plans(problem, plan)
+        for place, thing in enumerate(known):
+            rows.append(_weighed(plans, thing))
+            if watch is not None:
+                watch(place + 1, len(known))
+    reached = plan is not None and plan.outcome is not None
+    volume = scenario.demand.shipped_per_year
+    return Weighed(
+        title=scenario.title,
+        currency=scenario.currency,
+        shipped_per_year=volume,
+        reached=reached,
+        targets={name: math.exp(-budget) for name, budget in problem.budgets.items()},
+        target_losses={name: -math.expm1(-budget) for name, budget in problem.budgets.items()},
+        split=problem.split,
+        total=total_of(plan) if plan is not None and reached else None,
+        gap=plan.gap if plan is not None and reached else None,
+        rows=tuple(sorted(rows, key=_order)),
+        volumes=(volume / FURTHEST_VOLUME, volume * FURTHEST_VOLUME),
+        assumed=what_is_assumed(problem),
+        cautions=cautions_of_input(problem),
+    )
+
+
+def _order(row: Weighing) -> tuple[bool, float]:
+    """Order free moves first, then by worth; what is needed leads, what cannot be had comes last."""
+    worth = row.worth_per_year
+    if worth is None:
+        worth = math.inf if row.verdict == "needed" else -math.inf
+    return not row.free, -worth
+
+
+def _weighed(plans: Plans, thing: Thing) -> Weighing:
+    problem, plan = plans.problem, plans.plan
+    in_plan = takes(plan, thing)
+    banned = ask(without(problem, thing), plan) if in_plan else plan
+    taken = plan if in_plan or thing.kind == LAW else with_it(problem, thing, plan)
+    worth = None if banned is None or taken is None else total_of(banned) - total_of(taken)
+    volume = break_even_volume(plans, thing)
+    price, even, factor = _prices(problem, thing, banned, taken)
+    return Weighing(
+        step=None if thing.kind == PURCHASE else problem.scenario.step[thing.step].name,
+        alternative=thing.name,
+        kind=thing.kind,
+        verdict="needed" if banned is None else "buy" if in_plan else "leave",
+        in_plan=in_plan,
+        total_without=None if banned is None else total_of(banned),
+        total_with=None if taken is None else total_of(taken),
+        worth_per_year=worth,
+        free=_is_free(problem, thing),
+        capital=_capital(problem, thing, plan),
+        stated_price=price,
+        break_even_price=even,
+        break_even_price_factor=factor,
+        break_even_volume=volume * problem.line.shipped if volume else None,
+        pays_from="no volume" if volume is None else "a volume" if volume > 0.0 else "any volume",
+        break_even_capability=_level(problem, thing, banned, taken),
+        against=_against(problem, thing),
+    )
+
+
+def _prices(
+    problem: Problem, thing: Thing, banned: Solved | None, taken: Solved | None
+) -> tuple[float | None, float | None, float | None]:
+    """Return the stated price, the price at which the thing is worth nothing, and for a law the factor to get there."""
+    if thing.kind == LAW:
+        law = problem.scenario.step[thing.step].improve
+        assert law is not None
+        stated = next((x for x in (law.price, law.per_year, law.per_item) if x is not None), None)
+        factor = None if banned is None else break_even_law(problem, banned, thing)
+        return stated, None if stated is None or factor is None else stated * factor, factor
+    price, per_price = costs_of(problem, thing).price, cost_per_price(problem, thing)
+    if banned is None or taken is None or per_price is None:
+        return price, None, None
+    return price, break_even_price(problem, thing, price, per_price, total_of(banned), taken), None
+
+
+def _level(problem: Problem, thing: Thing, banned: Solved | None, taken: Solved | None) -> BreakEvenLevel | None:
+    if (
+        thing.kind != ALTERNATIVE
+        or alternative_of(problem, thing).capability is None
+        or banned is None
+        or taken is None
+    ):
+        return None
+    level = break_even_level(problem, thing, total_of(banned), taken)
+    if level is None:
+        return None
+    index = float(study_index(level.sigma_level, level.k))
+    return BreakEvenLevel(level.sigma_level, index, 1e6 * math.exp(level.log_p))
+
+
+def _capital(problem: Problem, thing: Thing, plan: Solved) -> float:
+    """Return what a thing ties up: price less trade-in, shared purchase included; a law, what the plan spends on it."""
+    if thing.kind == LAW:
+        assert plan.outcome is not None
+        row, ways = plan.outcome.choice.rows[thing.step], plan.problem.options.ways
+        own = float(ways.capital[row])
+        return max(float(plan.outcome.capital_by_step[thing.step]) - own, 0.0)
+    return _capital_stated(problem, thing)
+
+
+def _capital_stated(problem: Problem, thing: Thing) -> float:
+    costs = costs_of(problem, thing)
+    shared = 0.0
+    if isinstance(costs, Alternative) and costs.uses is not None:
+        shared = float(problem.options.purchase_capital[problem.options.purchase_names.index(costs.uses)])
+    return max(costs.price - costs.trade_in + shared, 0.0)
+
+
+def _is_free(problem: Problem, thing: Thing) -> bool:
+    if thing.kind != LAW:
+        return _capital_stated(problem, thing) == 0.0
+    law = problem.scenario.step[thing.step].improve
+    return law is None or not _is_priced(law)
+
+
+def _is_priced(law: Law) -> bool:
+    return law.price is not None or any(point.price is not None for point in law.points)
+
+
+def _against(problem: Problem, thing: Thing) -> tuple[str, ...]:
+    """Say what speaks against a thing, money apart."""
+    said = []
+    if thing.kind == PURCHASE:
+        return ("its price rests on a judged figure",) if is_judged(costs_of(problem, thing)) else ()
+    step = problem.scenario.step[thing.step]
+    table = step.improve if thing.kind == LAW else alternative_of(problem, thing)
+    assert table is not None
+    if is_judged(table) or is_judged(step.capability):
+        said.append("it rests on judged figures: get a quotation or a trial first")
+    if step.safety:
+        said.append(
+            "it changes a safety characteristic: validate and release it anew; its floor stays whatever is bought"
+        )
+    if isinstance(table, Alternative):
+        said += _against_alternative(table)
+        if table.capability is not None and _off_centre(problem, thing):
+            said.append("it does not centre the process: the offset stays as it is")
+    return tuple(said)
+
+
+def _against_alternative(table: Alternative) -> list[str]:
+    said = []
+    if table.copies is not None:
+        share = table.copies.common_cause
+        said.append(
+            f"{share:.0%} of the failures are assumed to take all copies at once"
+            if share > 0.0
+            else "no failure is assumed to take all copies at once, which is rarely true"
+        )
+    if table.widen is not None:
+        said.append("the customer has to agree to the wider limits")
+    if table.k is not None and table.capability is None:
+        said.append("a mean that is set once drifts again unless somebody keeps it there")
+    if table.inspection is not None and table.inspection.rejects_good > 0.0:
+        said.append(f"it rejects {table.inspection.rejects_good:.2%} of good items")
+    return said
+
+
+def _off_centre(problem: Problem, thing: Thing) -> bool:
+    """Return whether a better machine leaves the mean where it is, beside the middle."""
+    level = level_of(problem, thing)[0]
+    today = problem.options.today.levels[thing.step]
+    return level.k == today.k > 0.0 and not level.attribute
