@@ -13,7 +13,8 @@ if TYPE_CHECKING:
 
 REACH = 0.18
 """Half-length of the line that shows a local price [nines]."""
-ROOM_BELOW, ROOM_ABOVE = 0.22, 0.16
+ROOM = 0.22
+"""Room above and below the curve, for the names of its points."""
 NAMED = ("today", "target", "highest reachable")
 
 
@@ -52,9 +53,7 @@ def frontier(nines: Nines, ax: Axes | None = None) -> Axes:
         _draw_price(ax, point)
     _name_points(ax, nines, currency)
     _mark_end(ax, nines)
-    low, high = min(y), max(y)
-    room = (high - low) or abs(high) or 1.0
-    ax.set_ylim(low - ROOM_BELOW * room, high + ROOM_ABOVE * room)
+    ax.margins(y=ROOM)
     return ax
 
 

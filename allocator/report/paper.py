@@ -47,6 +47,7 @@ class Paper:
             width=width,
             color_system=None,
             force_terminal=False,
+            force_jupyter=False,  # In a notebook too this writes to its own sheet, not to the cell.
             legacy_windows=False,
             markup=False,
             highlight=False,
