@@ -14,7 +14,7 @@ from allocator.report.render import has_renderer, render
 from allocator.results import Check, Nines, Plan, Review, ReviewRow, StepTarget, Today, Understood
 
 MOST_ROWS = 40
-TABLES = ("steps", "points", "options", "figures")
+TABLES = ("steps", "points", "options", "things", "figures")
 """Names under which results give a DataFrame."""
 OPENING = 2
 """Paragraphs of the sheet that say the answer: its title, and the sentences below."""
