@@ -28,8 +28,18 @@ PIPE_CLOSED = 141  # What a shell reports for a program that a closed pipe ended
 COMMAND_LINE = "command line"
 
 
+ORDER = (
+    "new", "check", "today", "plan", "nines", "weigh", "case", "review", "compare", "suppliers", "measure", "rehearse",
+    "report",
+)  # fmt: skip
+"""The commands in the order of the work, as `--help` lists them."""
+
+
 class Boundary(TyperGroup):
     """The one place where an error turns into lines on stderr and an exit code."""
+
+    def list_commands(self, ctx: Any) -> list[str]:
+        return sorted(super().list_commands(ctx), key=ORDER.index)
 
     def invoke(self, ctx: Any) -> Any:
         for stream in (sys.stdout, sys.stderr):

@@ -25,7 +25,7 @@ def rehearse(
     as_json: AsJson = False,
     as_csv: AsCsv = False,
 ) -> None:
-    """Play the plan through, unit by unit, beside what was worked out: allocator rehearse line.toml --seed 7"""
+    """Play the plan through, unit by unit. As in: allocator rehearse line.toml --seed 7"""
     form = form_of(as_json, as_csv)
     from allocator import api
 
@@ -37,7 +37,7 @@ def rehearse(
 
 @app.command()
 def suppliers(file: File, of: Of = None, as_json: AsJson = False, as_csv: AsCsv = False) -> None:
-    """Write a target sheet per supplier, with the evidence that shows it and what it is worth."""
+    """Write a target sheet per supplier, with what shows it."""
     form = form_of(as_json, as_csv)
     from allocator import api
 

@@ -35,7 +35,7 @@ def new(
         bool, typer.Option("--xlsx", help="Write a workbook to be filled in, with a sheet per table.")
     ] = False,
 ) -> None:
-    """Write a small commented scenario to start from, as in: allocator new line.toml"""
+    """Write a small commented scenario to start from. As in: allocator new line.toml"""
     if file.exists():
         raise InputError([Fault(str(file), "", "a file of that name", "name a new file; nothing was overwritten")])
     from allocator.scenario.starter import write_starter
@@ -46,7 +46,7 @@ def new(
 
 @app.command()
 def check(file: File, as_json: AsJson = False, as_csv: AsCsv = False) -> None:
-    """Say whether a scenario is sound, what was understood and which cautions apply."""
+    """Say whether a scenario is sound, and what to be careful of."""
     form = form_of(as_json, as_csv)
     from allocator import api
 
@@ -55,7 +55,7 @@ def check(file: File, as_json: AsJson = False, as_csv: AsCsv = False) -> None:
 
 @app.command()
 def today(file: File, figures: Figures = None, as_json: AsJson = False, as_csv: AsCsv = False) -> None:
-    """Show where the line stands: its yields, its defects and where the money goes."""
+    """Show where the line stands and where its money goes."""
     form = form_of(as_json, as_csv)
     from allocator import api
 
@@ -86,7 +86,7 @@ def plan(
     as_json: AsJson = False,
     as_csv: AsCsv = False,
 ) -> None:
-    """Find the cheapest plan that meets the target, as in: allocator plan line.toml --nines 3"""
+    """Find the cheapest plan that meets the target. As in: allocator plan line.toml --nines 3"""
     form = form_of(as_json, as_csv)
     yields = {Which.final: final_yield, Which.rolled: rolled_yield, Which.shipped: shipped_yield}
     losses = losses_asked({which: text for which, text in yields.items() if text is not None}, nines, ppm)

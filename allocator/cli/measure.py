@@ -28,7 +28,7 @@ def measure(
     as_json: AsJson = False,
     as_csv: AsCsv = False,
 ) -> None:
-    """Find the capability in measurements, as in: allocator measure bores.csv --column bore_mm --lsl 20 --usl 20.033"""
+    """Find the capability in measurements. As in: allocator measure bores.csv --column bore_mm --lsl 20 --usl 20.033"""
     form = form_of(as_json, as_csv)
     from allocator import api
 

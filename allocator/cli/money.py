@@ -15,7 +15,7 @@ Files = Annotated[list[Path], typer.Argument(metavar="FILE FILE...", help="Scena
 
 @app.command()
 def compare(files: Files, as_json: AsJson = False, as_csv: AsCsv = False) -> None:
-    """Set the plans of several scenarios side by side, as in: allocator compare now.toml other_supplier.toml"""
+    """Set the plans of several scenarios side by side. As in: allocator compare now.toml other_supplier.toml"""
     form = form_of(as_json, as_csv)
     if len(files) < 2:
         raise refused("FILE", str(files[0]), "name two scenario files or more")
@@ -40,7 +40,7 @@ def case(
     as_json: AsJson = False,
     as_csv: AsCsv = False,
 ) -> None:
-    """Make the capital case of the plan, or of one purchase, as in: allocator case line.toml 'new press'"""
+    """Make the capital case of the plan, or of one purchase. As in: allocator case line.toml 'new press'"""
     form = form_of(as_json, as_csv)
     from allocator import api
 
@@ -58,7 +58,7 @@ def review(
     as_json: AsJson = False,
     as_csv: AsCsv = False,
 ) -> None:
-    """Set all options in one table for a design review, as in: allocator review line.toml --step weld"""
+    """Set all options in one table for a design review. As in: allocator review line.toml --step weld"""
     form = form_of(as_json, as_csv)
     from allocator import api
 
@@ -72,7 +72,7 @@ def review(
 
 @app.command()
 def weigh(file: File, as_json: AsJson = False, as_csv: AsCsv = False) -> None:
-    """Say for everything that could be bought or changed whether to buy or leave it: allocator weigh line.toml"""
+    """Say what to buy and what to leave. As in: allocator weigh line.toml"""
     form = form_of(as_json, as_csv)
     from allocator import api
 

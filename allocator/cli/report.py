@@ -19,7 +19,7 @@ def report(
         typer.Option("-o", "--output", metavar="PAGE", help="The page to write (default: FILE's name with .html)."),
     ] = None,
 ) -> None:
-    """Write the page for the design review, as in: allocator report line.toml -o review.html"""
+    """Write the page for the design review. As in: allocator report line.toml -o review.html"""
     target = output if output is not None else Path(f"{file.stem}.html")
     from allocator import api
     from allocator.report.page import page_html, refuse_lost_folder, write_page
