@@ -27,7 +27,7 @@ from allocator.states import States
 Array = NDArray[np.float64]
 UNITS, UNITS_UNCERTAIN = 1_000_000, 10_000_000
 LEAST_UNITS = 1_000
-HOPELESS = 1_000.0
+HOPELESS = 100.0
 """A line that starts more items than this for one that is shipped is not played through: it would take for ever."""
 
 

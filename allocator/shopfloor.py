@@ -15,6 +15,8 @@ from numpy.typing import NDArray
 
 Array = NDArray[np.float64]
 Items = NDArray[np.int64]
+BEYOND_DOUBT = 6.0
+"""Standard errors; what is started that safely is left over once in a thousand million times, and then not counted."""
 WHOLE = 1e-12
 """Share by which a number of items may miss a whole one and still be it: the rounding of a per_unit such as 0.1."""
 
@@ -110,9 +112,9 @@ def ship(rng: np.random.Generator, shop: Shop, units: int) -> Shipped:
     """
     run = _Run(rng, shop)
     while run.good[-1] < units:
-        wanted = run.wanted(units)
+        planned = run.planned(units)
         for j in range(shop.n_steps):
-            run.make(j, min([wanted[j], *(run.enough_for(child) - run.started[j] for child in run.fed_by[j])]))
+            run.make(j, min([planned[j], *(run.enough_for(child) - run.started[j] for child in run.fed_by[j])]))
     used = run.used()
     started, lost, mended = (np.array(count) * used for count in (run.started, run.lost, run.mended))
     return Shipped(units, started, lost, mended, run.escaped)
@@ -130,22 +132,41 @@ class _Run:
         """Per step, the hidden defects in what was delivered to it, by the number of the item that will hold them."""
         self.fed_by = [np.flatnonzero(shop.feeds == j).tolist() for j in range(n)]
 
-    def wanted(self, units: int) -> list[int]:
-        """Return how many good items each step still has to deliver, taking it that nothing will be lost after it."""
-        wanted = [0] * self.shop.n_steps
-        wanted[-1] = units - self.good[-1]
+    def planned(self, units: int) -> list[int]:
+        """Return how many items each step is to start next: as many as will be needed beyond all doubt."""
+        planned = [0] * self.shop.n_steps
+        planned[-1] = self._safe_start(-1, units - self.good[-1])
         for c in range(self.shop.n_steps - 2, -1, -1):
             fed = int(self.shop.feeds[c])
-            goes_in = float(self.shop.per_unit[c]) * (self.started[fed] + wanted[fed])
-            wanted[c] = max(math.ceil(goes_in * (1.0 - WHOLE)) - self.good[c], 0)
-        return wanted
+            goes_in = float(self.shop.per_unit[c]) * (self.started[fed] + planned[fed])
+            planned[c] = self._safe_start(c, math.ceil(goes_in * (1.0 - WHOLE)) - self.good[c])
+        return planned
+
+    def _safe_start(self, j: int, wanted: int) -> int:
+        """Return how many items of a step to start for so many good ones: never so many that some are left over.
+
+        As many as are wanted are always needed. How many more follows from the share that has passed so far, taken
+        `BEYOND_DOUBT` standard errors too high, and from as many standard errors of what will pass.
+        """
+        if wanted <= 0 or self.started[j] == 0:
+            return max(wanted, 0)
+        seen, room = self.started[j], BEYOND_DOUBT**2 / self.started[j]
+        share = self.good[j] / seen
+        half = BEYOND_DOUBT * math.sqrt(share * (1.0 - share) / seen + room / (4.0 * seen))
+        high = min((share + 0.5 * room + half) / (1.0 + room), 1.0)
+        spread = BEYOND_DOUBT * math.sqrt(high * (1.0 - high))
+        root = (math.sqrt(spread**2 + 4.0 * high * wanted) - spread) / (2.0 * high)
+        return max(wanted, math.floor(root**2))
 
     def enough_for(self, c: int) -> int:
         """Return how many items of the step that `c` feeds all the good items of `c` so far are enough for."""
         return math.floor(self.good[c] / float(self.shop.per_unit[c]) * (1.0 + 2.0 * WHOLE))
 
     def used(self) -> Array:
-        """Return the share of each step's items that the units shipped used, 1 but where per_unit is not whole."""
+        """Return the share of each step's good items that went into the units shipped or into what was lost after it.
+
+        It is 1, or just below where per_unit is not whole.
+        """
         used = np.ones(self.shop.n_steps)
         for c in range(self.shop.n_steps - 2, -1, -1):
             fed = int(self.shop.feeds[c])

@@ -61,6 +61,7 @@ MEANINGS: dict[str, str] = {
     "feeds": "the later step that the item goes into; empty: the next one",
     "per_unit": "items of this step in one item of the step that it feeds",
     "opportunities": "ways in which one item can go wrong",
+    "clustering": "α, how loosely defects cluster on items (0.5 much, above 5 hardly); drawn in a rehearsal",
     "scrap_cost": "money lost when one item is scrapped here (instead of cost_added)",
     "cost_added": "money of material and work that this step adds to one item",
     "salvage": "money got back for an item scrapped here",
