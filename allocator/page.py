@@ -11,8 +11,9 @@ from allocator.picture import divide, picture
 from allocator.plan import binding_steps, make_plan, summarise
 from allocator.problem import Problem, pose
 from allocator.rehearsal import rehearse
-from allocator.results import BestReachable, CapitalCase, Plan, Rehearsal, ReviewPage, Row
+from allocator.results import BestReachable, CapitalCase, Plan, Rehearsal, ReviewPage, Row, SupplierSheets
 from allocator.scenario.model import Scenario
+from allocator.sheets import supplier_sheets
 from allocator.sources import sources_of
 from allocator.standing import levels_today
 from allocator.state import floor_words
@@ -20,6 +21,9 @@ from allocator.stops import Answer, Watch, answers, describe_stops
 
 UNITS = 300_000
 """Units that the plan is rehearsed with."""
+
+MOST_SHEETS = 200
+"""Parts with a target sheet; beyond it the sheets are left to their own command."""
 
 
 def review_page(scenario: Scenario, *, watch: Watch | None = None) -> ReviewPage:
@@ -52,6 +56,7 @@ def review_page(scenario: Scenario, *, watch: Watch | None = None) -> ReviewPage
         sources=sources_of(scenario),
         case=_case(scenario, plan),
         rehearsal=_rehearsal(scenario, plan),
+        sheets=_sheets(scenario, plan),
     )
 
 
@@ -71,6 +76,11 @@ def _rehearsal(scenario: Scenario, plan: Plan) -> Rehearsal | None:
         return rehearse(scenario, units=UNITS)
     except OutOfReachError:
         return None
+
+
+def _sheets(scenario: Scenario, plan: Plan) -> SupplierSheets | None:
+    named = sum(1 for step in scenario.step if step.supplier is not None)
+    return supplier_sheets(scenario) if plan.reached and 0 < named <= MOST_SHEETS else None
 
 
 def _opens_with(found: Sequence[Answer], plan: Plan) -> int:

@@ -71,7 +71,7 @@ def small_line() -> dict[str, Any]:
         "step": [
             {"name": "pin", "supplier": "Orrin Pins", "feeds": "join", "per_unit": 2, "cost_added": 0.4,
              "capability": {"ppm": 1_900}, "improve": {"law": "decade", "per_item": 0.004}},
-            {"name": "plate", "cost_added": 1.5, "capability": {"cp": 1.1, "cpk": 0.9},
+            {"name": "plate", "supplier": "Vessen Plates", "cost_added": 1.5, "capability": {"cp": 1.1, "cpk": 0.9},
              "alternative": [{"name": "stop block", "group": "setting", "k": 0.02, "price": 1_500,
                               "evidence": "judged"}]},
             {"name": "join", "cost_added": 0.8, "capability": {"dpmo": 5_200},
@@ -447,10 +447,16 @@ def test_print_has_its_pages(driver: Any, page: Any, paper: tuple[float, float])
     browser.show(driver, page("small"))
     pdf = pypdf.PdfReader(io.BytesIO(browser.printed(driver, *paper)))
     texts = [re.sub(r"\s+", " ", sheet.extract_text()) for sheet in pdf.pages]
-    assert 3 <= len(texts) <= 8
+    assert 6 <= len(texts) <= 14
     assert "Small tree" in texts[0]
     assert "The answer" in texts[0]
     whole = " ".join(texts)
     for said in ("The promise and its price", "What does it rest on?", "planning figures"):
         assert said in whole
     assert "Move the control" not in whole
+    sheets = [text for text in texts if re.match(r"(\d+ / \d+ )?Target sheet", text)]
+    assert len(sheets) == 2
+    for sheet, mine, other in zip(sheets, ("Orrin Pins", "Vessen Plates"), ("Vessen Plates", "Orrin Pins"), strict=True):
+        assert mine in sheet
+        assert other not in sheet
+        assert "buyer" not in sheet

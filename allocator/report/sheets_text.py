@@ -52,13 +52,13 @@ def _write_sheet(paper: Paper, supplier: SupplierSheet) -> None:
         ["part"], ["parts\na year", "ppm\ntoday", "ppm\ntarget", "dpmo\ntarget", "sigma\nlevel", "shift", "Cpk"]
     )
     paper.table(heads, (_target_row(row) for row in rows), len(rows))
-    paper.bullets([said for row in rows for said in _remarks(row)], most=3 * len(rows))
+    paper.bullets([said for row in rows for said in remarks(row)], most=3 * len(rows))
     paper.say(PARTS)
     shares = [f"{BAD[bad]} bad,\n{share} %" for bad, _, _ in rows[0].parts_with_bad for share in (90, 95)]
-    paper.table(columns(["part"], shares), (_parts_row(row) for row in rows), len(rows))
+    paper.table(columns(["part"], shares), (parts_row(row) for row in rows), len(rows))
     paper.say(CPK)
     heads = columns(["part"], ["target", *(f"observed on\n{n} parts" for n, _ in rows[0].observed_cpk_needed)])
-    paper.table(heads, (_cpk_row(row) for row in rows), len(rows))
+    paper.table(heads, (cpk_row(row) for row in rows), len(rows))
     counted = [words.quoted(row.step) for row in rows if row.counted]
     if counted:
         paper.say(COUNTED.format(steps=words.listed(counted)))
@@ -74,7 +74,7 @@ def _target_row(row: Sheet) -> list[str]:
     ]  # fmt: skip
 
 
-def _remarks(row: Sheet) -> list[str]:
+def remarks(row: Sheet) -> list[str]:
     part, said = words.quoted(row.step), []
     if row.alternatives:
         taken = words.listed([words.quoted(name) for name in row.alternatives])
@@ -91,11 +91,11 @@ def _remarks(row: Sheet) -> list[str]:
     return said
 
 
-def _parts_row(row: Sheet) -> list[str]:
+def parts_row(row: Sheet) -> list[str]:
     return [row.step, *(words.count(parts) for _, *both in row.parts_with_bad for parts in both)]
 
 
-def _cpk_row(row: Sheet) -> list[str]:
+def cpk_row(row: Sheet) -> list[str]:
     return [row.step, words.fixed(row.target.cpk), *(words.fixed(cpk) for _, cpk in row.observed_cpk_needed)]
 
 
@@ -106,12 +106,12 @@ def _write_for_the_buyer(paper: Paper, answer: SupplierSheets) -> None:
         ["part"],
         ["one ppm less,\na year", "one ppm less,\n1,000 parts", "largest rise,\n1,000 parts", "refusal,\na year"],
     )
-    paper.table(heads, (_worth_row(row) for row in answer.rows), len(answer.rows))
+    paper.table(heads, (worth_row(row) for row in answer.rows), len(answer.rows))
     paper.say(WORTH)
-    paper.bullets(_no_price(answer.rows), most=len(answer.rows) + 1)
+    paper.bullets(no_price(answer.rows), most=len(answer.rows) + 1)
 
 
-def _worth_row(row: Sheet) -> list[str]:
+def worth_row(row: Sheet) -> list[str]:
     rise = None if row.largest_price_rise is None else 1000.0 * row.largest_price_rise
     return [
         row.step, words.number(row.worth_per_ppm_year), words.number(1000.0 * row.worth_per_ppm_item),
@@ -120,7 +120,7 @@ def _worth_row(row: Sheet) -> list[str]:
     ]  # fmt: skip
 
 
-def _no_price(rows: Sequence[Sheet]) -> list[str]:
+def no_price(rows: Sequence[Sheet]) -> list[str]:
     said = [
         f"A refusal at {words.quoted(row.step)} has no price: {words.clean(row.refusal_reason)}."
         for row in rows

@@ -8,6 +8,7 @@ from allocator.results.capital import CapitalCase
 from allocator.results.line import Money, Yields
 from allocator.results.plan import BestReachable, Plan
 from allocator.results.rehearsal import Rehearsal
+from allocator.results.sheets import SupplierSheets
 
 
 @dataclass(frozen=True)
@@ -162,3 +163,5 @@ class ReviewPage:
     """None without a horizon and a rate, or where no plan keeps the promise."""
     rehearsal: Rehearsal | None
     """None where no plan keeps the promise."""
+    sheets: SupplierSheets | None
+    """None where no supplier is named, or no plan keeps the promise."""

@@ -14,6 +14,7 @@ from allocator.report.page.control import control
 from allocator.report.page.cost import cost_drawing
 from allocator.report.page.rails import line_drawing
 from allocator.report.page.said import said
+from allocator.report.page.sheets import sheets_said
 from allocator.results import ReviewPage
 
 TEMPLATES = "allocator.report.page"
@@ -35,6 +36,7 @@ def page_html(review: ReviewPage) -> str:
         "case": case_said(review.case),
         "proof": proof_said(review.plan),
         "played": played_said(review.rehearsal),
+        "sheets": sheets_said(review.sheets),
         "style": _read("page.css"),
         "script": _read("page.js"),
     }

@@ -1,0 +1,96 @@
+"""Buy or leave: what each thing is worth a year, as one drawing around nothing, and where its verdict turns."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from allocator.report import words
+from allocator.report.page.scale import Scale
+from allocator.results import Weighed, Weighing
+
+MOST_SHOWN = 60
+
+
+@dataclass(frozen=True)
+class Choice:
+    """One thing weighed; the bar runs from nothing to its worth, in per cent of the drawing."""
+
+    name: str
+    where: str
+    verdict: str
+    worth: str
+    capital: str
+    start: float
+    width: float
+    turns: list[str]
+    against: list[str]
+
+
+@dataclass(frozen=True)
+class ChoicesSaid:
+    said: list[str]
+    zero: float
+    rows: list[Choice]
+    left_out: str
+
+
+def choices_said(weighed: Weighed | None) -> ChoicesSaid | None:
+    """Everything weighed, in the order of the record; None where nothing was."""
+    if weighed is None or not weighed.rows:
+        return None
+    shown = weighed.rows[:MOST_SHOWN]
+    worths = [row.worth_per_year for row in shown if row.worth_per_year is not None]
+    scale = Scale(min([0.0, *worths]), max([0.0, *worths]))
+    more = len(weighed.rows) - len(shown)
+    return ChoicesSaid(
+        said=_said(weighed),
+        zero=scale.at(0.0),
+        rows=[_choice(row, scale, words.clean(weighed.currency)) for row in shown],
+        left_out=f"{more:,} more are in the answer of: allocator weigh." if more else "",
+    )
+
+
+def _said(weighed: Weighed) -> list[str]:
+    counts = {verdict: sum(row.verdict == verdict for row in weighed.rows) for verdict in ("buy", "leave", "needed")}
+    needed = f" {counts['needed']:,} cannot be left: nothing else keeps the promise." if counts["needed"] else ""
+    return [
+        f"Of {len(weighed.rows):,} things that could be bought or changed, {counts['buy']:,} pay and {counts['leave']:,} "
+        f"are better left.{needed}",
+        "The worth of each is the yearly cost of the best plan without it less that of the best plan with it, all else "
+        "planned anew both times. Free moves come first; worths do not add up.",
+    ]
+
+
+def _choice(row: Weighing, scale: Scale, money: str) -> Choice:
+    worth = row.worth_per_year
+    low, high = sorted((scale.at(0.0), scale.at(worth or 0.0)))
+    name = "steady improvement" if row.kind == "law" else words.clean(row.alternative)
+    return Choice(
+        name=name,
+        where="shared" if row.step is None else words.clean(row.step),
+        verdict=row.verdict,
+        worth="" if worth is None else words.money(worth),
+        capital=words.money(row.capital) if row.capital else "",
+        start=low,
+        width=round(high - low, 2),
+        turns=_turns(row, money),
+        against=[words.clean(text) for text in row.against],
+    )
+
+
+def _turns(row: Weighing, money: str) -> list[str]:
+    """Where the verdict turns: price, volume, and how good it must really be."""
+    texts = []
+    if row.break_even_price is not None:
+        pays = "pays up to" if row.verdict != "leave" else "would pay at"
+        texts.append(f"{pays} {words.money(row.break_even_price)} {money}")
+    elif row.break_even_price_factor is not None:
+        texts.append(f"pays up to {words.number(row.break_even_price_factor)} times its cost")
+    if row.pays_from == "a volume" and row.break_even_volume is not None:
+        texts.append(f"from {words.number(row.break_even_volume)} units a year")
+    elif row.pays_from in ("any volume", "no volume") and row.verdict != "needed":
+        texts.append(f"at {row.pays_from} looked at")
+    level = row.break_even_capability
+    if level is not None:
+        texts.append(f"if it reaches {words.fixed(level.sigma_level)} sigma (Cpk {words.fixed(level.cpk)})")
+    return texts
