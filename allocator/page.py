@@ -5,23 +5,39 @@ from __future__ import annotations
 from collections.abc import Sequence
 
 from allocator.case import capital_case
-from allocator.errors import OutOfReachError
+from allocator.confidence import confident_plan
+from allocator.errors import OutOfReachError, RangeError
 from allocator.grouping import rows_of
 from allocator.picture import divide, picture
 from allocator.plan import binding_steps, make_plan, summarise
 from allocator.problem import Problem, pose
 from allocator.rehearsal import rehearse
-from allocator.results import BestReachable, CapitalCase, Plan, Rehearsal, ReviewPage, Row, SupplierSheets
+from allocator.results import (
+    BestReachable,
+    CapitalCase,
+    Confidence,
+    Plan,
+    Rehearsal,
+    ReviewPage,
+    Row,
+    SupplierSheets,
+    Weighed,
+)
 from allocator.scenario.model import Scenario
 from allocator.sheets import supplier_sheets
 from allocator.sources import sources_of
 from allocator.standing import levels_today
 from allocator.state import floor_words
 from allocator.stops import Answer, Watch, answers, describe_stops
+from allocator.variants import things
+from allocator.weigh import weigh_purchases
 
 UNITS = 300_000
 """Units that the plan is rehearsed with."""
 
+CONFIDENCE = 0.9
+MOST_WEIGHED = 120
+"""Things weighed, each by plans with it and without it; beyond it they are left to their own command."""
 MOST_SHEETS = 200
 """Parts with a target sheet; beyond it the sheets are left to their own command."""
 
@@ -54,9 +70,11 @@ def review_page(scenario: Scenario, *, watch: Watch | None = None) -> ReviewPage
         line=picture(problem, steps, None if outcome is None else outcome.flow),
         division=divide(plan, steps, [name_of_row(row) for row in rows]),
         sources=sources_of(scenario),
+        weighed=_weighed(problem, scenario, plan, watch),
         case=_case(scenario, plan),
+        confidence=_confidence(problem, plan),
         rehearsal=_rehearsal(scenario, plan),
-        sheets=_sheets(scenario, plan),
+        sheets=_sheets(scenario, plan, watch),
     )
 
 
@@ -78,9 +96,27 @@ def _rehearsal(scenario: Scenario, plan: Plan) -> Rehearsal | None:
         return None
 
 
-def _sheets(scenario: Scenario, plan: Plan) -> SupplierSheets | None:
+def _weighed(problem: Problem, scenario: Scenario, plan: Plan, watch: Watch | None) -> Weighed | None:
+    """Return what everything is worth, where there is a plan to measure by and not too much to weigh."""
+    if not plan.reached or len(things(problem)) > MOST_WEIGHED:
+        return None
+    return weigh_purchases(scenario, watch=watch)
+
+
+def _confidence(problem: Problem, plan: Plan) -> Confidence | None:
+    """Return how sure the plan is, where there is a target and some estimate states its sample."""
+    if not (plan.reached and problem.budgets):
+        return None
+    try:
+        found = confident_plan(problem, CONFIDENCE)
+    except RangeError:
+        return None
+    return None if found is None else found[1]
+
+
+def _sheets(scenario: Scenario, plan: Plan, watch: Watch | None) -> SupplierSheets | None:
     named = sum(1 for step in scenario.step if step.supplier is not None)
-    return supplier_sheets(scenario) if plan.reached and 0 < named <= MOST_SHEETS else None
+    return supplier_sheets(scenario, watch=watch) if plan.reached and 0 < named <= MOST_SHEETS else None
 
 
 def _opens_with(found: Sequence[Answer], plan: Plan) -> int:

@@ -456,7 +456,9 @@ def test_print_has_its_pages(driver: Any, page: Any, paper: tuple[float, float])
     assert "Move the control" not in whole
     sheets = [text for text in texts if re.match(r"(\d+ / \d+ )?Target sheet", text)]
     assert len(sheets) == 2
-    for sheet, mine, other in zip(sheets, ("Orrin Pins", "Vessen Plates"), ("Vessen Plates", "Orrin Pins"), strict=True):
+    for sheet, mine, other in zip(
+        sheets, ("Orrin Pins", "Vessen Plates"), ("Vessen Plates", "Orrin Pins"), strict=True
+    ):
         assert mine in sheet
         assert other not in sheet
         assert "buyer" not in sheet

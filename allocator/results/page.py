@@ -5,10 +5,12 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 from allocator.results.capital import CapitalCase
+from allocator.results.confidence import Confidence
 from allocator.results.line import Money, Yields
 from allocator.results.plan import BestReachable, Plan
 from allocator.results.rehearsal import Rehearsal
 from allocator.results.sheets import SupplierSheets
+from allocator.results.weigh import Weighed
 
 
 @dataclass(frozen=True)
@@ -159,8 +161,12 @@ class ReviewPage:
     line: tuple[LinePart, ...]
     division: Division | None
     sources: Sources
+    weighed: Weighed | None
+    """None where no plan keeps the promise."""
     case: CapitalCase | None
     """None without a horizon and a rate, or where no plan keeps the promise."""
+    confidence: Confidence | None
+    """None without a target, without a plan that keeps it, and where no estimate states its sample."""
     rehearsal: Rehearsal | None
     """None where no plan keeps the promise."""
     sheets: SupplierSheets | None

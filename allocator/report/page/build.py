@@ -10,11 +10,13 @@ from allocator.errors import Fault, InputError
 from allocator.files import written_aside
 from allocator.report.page.case import case_said
 from allocator.report.page.certainty import played_said, proof_said
+from allocator.report.page.choices import choices_said
 from allocator.report.page.control import control
 from allocator.report.page.cost import cost_drawing
 from allocator.report.page.rails import line_drawing
 from allocator.report.page.said import said
 from allocator.report.page.sheets import sheets_said
+from allocator.report.page.sure import sure_said
 from allocator.results import ReviewPage
 
 TEMPLATES = "allocator.report.page"
@@ -33,6 +35,8 @@ def page_html(review: ReviewPage) -> str:
         "control": control(review),
         "cost": cost_drawing(review),
         "line": line_drawing(review),
+        "choices": choices_said(review.weighed),
+        "sure": sure_said(review.confidence, review.plan),
         "case": case_said(review.case),
         "proof": proof_said(review.plan),
         "played": played_said(review.rehearsal),

@@ -30,7 +30,7 @@ class Choice:
 class ChoicesSaid:
     said: list[str]
     zero: float
-    rows: list[Choice]
+    groups: list[tuple[str, list[Choice]]]
     left_out: str
 
 
@@ -41,11 +41,15 @@ def choices_said(weighed: Weighed | None) -> ChoicesSaid | None:
     shown = weighed.rows[:MOST_SHOWN]
     worths = [row.worth_per_year for row in shown if row.worth_per_year is not None]
     scale = Scale(min([0.0, *worths]), max([0.0, *worths]))
-    more = len(weighed.rows) - len(shown)
+    money, more = words.clean(weighed.currency), len(weighed.rows) - len(shown)
+    groups = [
+        (head, [_choice(row, scale, money) for row in shown if row.free == free])
+        for head, free in (("What ties up no capital", True), ("What ties up capital, the free moves made", False))
+    ]
     return ChoicesSaid(
         said=_said(weighed),
         zero=scale.at(0.0),
-        rows=[_choice(row, scale, words.clean(weighed.currency)) for row in shown],
+        groups=[(head, rows) for head, rows in groups if rows],
         left_out=f"{more:,} more are in the answer of: allocator weigh." if more else "",
     )
 
@@ -53,11 +57,11 @@ def choices_said(weighed: Weighed | None) -> ChoicesSaid | None:
 def _said(weighed: Weighed) -> list[str]:
     counts = {verdict: sum(row.verdict == verdict for row in weighed.rows) for verdict in ("buy", "leave", "needed")}
     needed = f" {counts['needed']:,} cannot be left: nothing else keeps the promise." if counts["needed"] else ""
+    looked = f"Of {len(weighed.rows):,} things that could be bought or changed, {counts['buy']:,} are worth it"
     return [
-        f"Of {len(weighed.rows):,} things that could be bought or changed, {counts['buy']:,} pay and {counts['leave']:,} "
-        f"are better left.{needed}",
-        "The worth of each is the yearly cost of the best plan without it less that of the best plan with it, all else "
-        "planned anew both times. Free moves come first; worths do not add up.",
+        f"{looked} and {counts['leave']:,} are better left.{needed}",
+        "Worth a year: the cost of the best plan without it, less that of the best plan with it, all else planned anew "
+        "both times. Worths do not add up: one thing makes another worth more or less.",
     ]
 
 
