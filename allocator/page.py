@@ -32,8 +32,8 @@ from allocator.stops import Answer, Watch, answers, describe_stops
 from allocator.variants import things
 from allocator.weigh import weigh_purchases
 
-UNITS = 300_000
-"""Units that the plan is rehearsed with."""
+UNITS, ITEMS = 300_000, 9_000_000
+"""Units that the plan is rehearsed with, and fewer where the steps are many: about so many items."""
 
 CONFIDENCE = 0.9
 MOST_WEIGHED = 120
@@ -91,7 +91,7 @@ def _rehearsal(scenario: Scenario, plan: Plan) -> Rehearsal | None:
     if not plan.reached:
         return None
     try:
-        return rehearse(scenario, units=UNITS)
+        return rehearse(scenario, units=max(1_000, min(UNITS, ITEMS // len(scenario.step))))
     except OutOfReachError:
         return None
 

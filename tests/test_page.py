@@ -17,6 +17,7 @@ from typer.testing import CliRunner
 from allocator import capital_case, make_plan, read_scenario, rehearse, review_page, scenario_from_dict
 from allocator.cli import app
 from allocator.grouping import feeds_of_rows, reading_order, rows_of
+from allocator.report import words
 from allocator.report.page import page_html
 from allocator.report.page.control import control
 from allocator.report.page.scale import Scale
@@ -188,6 +189,18 @@ def test_case_and_rehearsal_are_those_of_the_commands() -> None:
     assert page.case == capital_case(scenario)
     assert page.rehearsal is not None
     assert page.rehearsal.losses == rehearse(scenario, units=page.rehearsal.units).losses
+
+
+def test_everything_weighed_and_every_supplier_is_on_the_page() -> None:
+    page, said = review("small"), " ".join(Tags(html("small")).said)
+    assert page.weighed is not None
+    assert page.sheets is not None
+    assert len(page.weighed.rows) >= 4
+    for row in page.weighed.rows:
+        assert row.verdict in ("buy", "leave", "needed")
+        assert row.worth_per_year is None or words.money(row.worth_per_year) in said
+    for supplier in page.sheets.suppliers:
+        assert said.count(supplier.supplier) >= 2
 
 
 def test_picture_keeps_every_defect() -> None:
