@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from allocator.cautions import cautions_of_input, what_is_assumed
 from allocator.cautions.clusters import CLUSTERED, cautions_of_clusters
 from allocator.clustering import clustered_yield, rolled_yield
-from allocator.draws import draw_levels
+from allocator.draws import Behind, draw_levels
 from allocator.errors import OutOfReachError, RangeError
 from allocator.flow import Flow, Line, money, scrap_lost_at, yields
 from allocator.played import Played, play
@@ -39,8 +39,7 @@ class AtHand:
     z: Array
     flow: Flow
     money: Money
-    samples: tuple[Array, Array]
-    """Parts behind each capability, and the bad ones among them; nan where not stated."""
+    behind: Behind
 
 
 def rehearse(
@@ -107,8 +106,8 @@ def _today(problem: Problem) -> AtHand:
     states, flow = problem.options.today, flow_today(problem)
     with np.errstate(over="ignore"):
         worked_out = money(problem.line, flow, 0.0)
-    samples = _samples([step.capability for step in problem.scenario.step])
-    return AtHand(states, states.levels.sigma_level, flow, worked_out, samples)
+    behind = _behind([step.capability for step in problem.scenario.step], np.zeros(len(states), dtype=bool))
+    return AtHand(states, states.levels.sigma_level, flow, worked_out, behind)
 
 
 def _plan(problem: Problem) -> AtHand:
@@ -119,17 +118,18 @@ def _plan(problem: Problem) -> AtHand:
             "`--today` rehearses the line as it stands"
         )
     outcome, ways = solved.outcome, solved.problem.options.ways
-    behind = []
+    behind, centred = [], []
     for step, names in zip(problem.scenario.step, ways.text.take(outcome.choice.rows).alternatives(), strict=True):
-        bought = [a.capability for a in step.alternative if a.name in names and a.capability is not None]
-        behind.append(bought[-1] if bought else step.capability)
+        taken = [a for a in step.alternative if a.name in names]
+        behind.append(next((a.capability for a in taken if a.capability is not None), step.capability))
+        centred.append(any(a.k is not None for a in taken))
     states = ways.states.take(outcome.choice.rows)
-    return AtHand(states, outcome.choice.z, outcome.flow, outcome.money, _samples(behind))
+    return AtHand(states, outcome.choice.z, outcome.flow, outcome.money, _behind(behind, np.array(centred)))
 
 
-def _samples(behind: list[Capability]) -> tuple[Array, Array]:
-    of, sample = column(behind, "of"), column(behind, "sample")
-    return np.where(np.isnan(of), sample, of), column(behind, "bad")
+def _behind(capabilities: list[Capability], centred: NDArray[np.bool_]) -> Behind:
+    of, sample = column(capabilities, "of"), column(capabilities, "sample")
+    return Behind(np.where(np.isnan(of), sample, of), column(capabilities, "bad"), centred)
 
 
 def _shop(problem: Problem, hand: AtHand, intensity: Array) -> Shop:
@@ -149,8 +149,7 @@ def _shop(problem: Problem, hand: AtHand, intensity: Array) -> Shop:
 
 
 def _redrawn(problem: Problem, hand: AtHand, shop: Shop, rng: np.random.Generator) -> Shop:
-    states, _ = draw_levels(rng, hand.states, hand.z, *hand.samples)
-    return replace(shop, intensity=states.intensity())
+    return replace(shop, intensity=draw_levels(rng, hand.states, hand.z, hand.behind).intensity())
 
 
 def _compared(problem: Problem, hand: AtHand, played: Played, seed: int, line: str) -> Rehearsal:
@@ -264,7 +263,7 @@ def _steps(problem: Problem, hand: AtHand, played: Played) -> tuple[StepRehearse
     starts, scrap = year * line.per_finished * np.exp(flow.exponent), scrap_lost_at(line, flow)
     later = line.tree.spread(events.astype(float), np.ones(line.n_steps))
     poisson, clustered = clustered_yield(shop.intensity, np.inf), clustered_yield(shop.intensity, shop.clustering)
-    drawn = ~np.isnan(hand.samples[0]) & played.uncertain
+    drawn = ~np.isnan(hand.behind.sample) & played.uncertain
     rows = []
     for i, step in enumerate(problem.scenario.step):
         item, w = year * float(line.per_finished[i]), year * float(line.lost[i])

@@ -17,7 +17,8 @@ from typer.testing import CliRunner
 
 from allocator.cli import app
 from allocator.clustering import clustered_yield
-from allocator.draws import draw_levels
+from allocator.doubt import draw_nature, find_doubts, seen_in
+from allocator.draws import Behind, draw_levels
 from allocator.errors import OutOfReachError, RangeError
 from allocator.intervals import count_interval, mean_interval, share_interval, spread_interval
 from allocator.plan import make_plan
@@ -27,6 +28,7 @@ from allocator.report.render import render
 from allocator.results import Rehearsal, Rehearsed
 from allocator.scenario.read import read_scenario, scenario_from_dict
 from allocator.shopfloor import Shop, ship, start
+from allocator.solve.road import solve
 from tests.reference.generate import random_scenario
 from tests.reference.recount import recount
 
@@ -191,6 +193,14 @@ def test_clustered_yields_are_the_published_ones(
     assert tries.spotless / 200_000 == pytest.approx(published, abs=digits + 0.005)
 
 
+def test_three_of_four_displays_are_the_published_ones() -> None:
+    """MIL-HDBK-338B, k-out-of-n configurations (read in a text that reproduces it): R 0.9, 3 of 4 needed: 0.9477."""
+    four = {"name": "four displays", "copies": {"installed": 4, "needed": 3}, "per_year": -1.0}
+    step = {"name": "show", "scrap_cost": 1.0, "capability": {"yield": 0.9}, "alternative": [four]}
+    answer = rehearse(scenario_from_dict({"demand": {"shipped_per_year": 1000.0}, "step": [step]}), units=500_000)
+    assert 1.0 - answer.losses["rolled_yield"].simulated == pytest.approx(0.9477, abs=0.0015)
+
+
 def test_clusters_keep_the_mean_and_spare_items() -> None:
     clustered = ship(np.random.default_rng(1), shop([0.5], clustering=0.5, finds=0.0), 200_000)
     assert clustered.escaped == pytest.approx(100_000, rel=0.02)
@@ -227,8 +237,9 @@ def drawn(capability: dict[str, Any], draws: int = 20_000) -> tuple[np.ndarray, 
     states = pose(scenario_from_dict(many)).options.today
     sample = np.full(draws, float(capability.get("sample") or capability["of"]))
     bad = np.full(draws, float(capability.get("bad", np.nan)))
-    moved, z = draw_levels(np.random.default_rng(6), states, states.levels.sigma_level, sample, bad)
-    return z, moved.levels.k
+    behind = Behind(sample, bad, np.zeros(draws, dtype=bool))
+    moved = draw_levels(np.random.default_rng(6), states, states.levels.sigma_level, behind).levels
+    return moved.sigma_level, moved.k
 
 
 def test_measured_capabilities_are_drawn_by_chi_square_and_normal_laws() -> None:
@@ -245,9 +256,41 @@ def test_counts_are_drawn_by_beta() -> None:
 def test_a_figure_without_a_sample_is_taken_as_exact() -> None:
     states = pose(scenario_from_dict(TREE)).options.today
     none = np.full(len(states), np.nan)
-    moved, z = draw_levels(np.random.default_rng(1), states, states.levels.sigma_level, none, none)
-    assert np.array_equal(z, states.levels.sigma_level)
+    behind = Behind(none, none, np.zeros(len(states), dtype=bool))
+    moved = draw_levels(np.random.default_rng(1), states, states.levels.sigma_level, behind)
+    assert np.array_equal(moved.levels.sigma_level, states.levels.sigma_level)
     assert moved.intensity() == pytest.approx(states.intensity(), rel=1e-12)
+
+
+def test_the_plan_with_confidence_draws_from_the_same_laws() -> None:
+    """Two limits raised by a law, one limit, a count of none, a recentred one: drawn here and by `doubt`, one law."""
+    decade = {"law": "decade", "per_year": 400.0}
+    steps = [
+        {"name": "two", "capability": {"cp": 0.95, "cpk": 0.85, "sample": 40}, "improve": decade},
+        {"name": "one", "capability": {"lsl": 1.0, "mean": 1.9, "std": 0.3, "sample": 60}, "improve": decade},
+        {"name": "none", "capability": {"bad": 0, "of": 300}, "improve": decade},
+        {"name": "set", "capability": {"cp": 1.1, "cpk": 0.9, "sample": 80},
+         "alternative": [{"name": "stop", "group": "setting", "k": 0.02, "per_year": 1.0}]},
+    ]  # fmt: skip
+    scenario = {
+        "demand": {"shipped_per_year": 10_000.0},
+        "target": {"final_yield": 0.9965},
+        "step": [{**step, "scrap_cost": 2.0} for step in steps],
+    }
+    problem = pose(scenario_from_dict(scenario))
+    solved = solve(problem)
+    assert solved.outcome is not None
+    z, ways = solved.outcome.choice.z, solved.problem.options.ways
+    states = ways.states.take(solved.outcome.choice.rows)
+    assert all(z[:3] > states.levels.sigma_level[:3] + 0.01)
+    assert states.levels.k[3] == 0.02
+    doubts = find_doubts(solved.problem)
+    wanted = seen_in(draw_nature(doubts, 4_000, 3), doubts, solved.problem, solved.outcome).delta
+    behind = Behind(np.array([40.0, 60, 300, 80]), np.array([np.nan, np.nan, 0, np.nan]), np.arange(4) == 3)
+    rng = np.random.default_rng(9)
+    seen = np.array([draw_levels(rng, states, z, behind).intensity() for _ in range(4_000)])
+    for i in range(4):
+        assert stats.ks_2samp(seen[:, i], wanted[:, i]).pvalue > 1e-3, steps[i]["name"]
 
 
 def test_uncertain_capabilities_widen_the_intervals_by_what_they_are_worth() -> None:
