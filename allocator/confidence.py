@@ -164,7 +164,7 @@ def what_to_measure(search: Search, best: Found) -> tuple[tuple[StudyWorth, ...]
     sources = sorted(eased, key=lambda s: eased[s])
     worth = []
     for s in sources[:MOST_STUDIES]:
-        larger[s].tighten(best.factor, best.tightness / eased[s], best, ASKED_PER_STUDY)
+        larger[s].tighten(best.asking, best, best.reach / eased[s], ASKED_PER_STUDY)
         cheaper = larger[s].best
         saving = 0.0 if cheaper is None else max(best.total - cheaper.total, 0.0)
         name, sample = steps[doubts.step[s]].name, int(doubts.sample[s])

@@ -18,7 +18,7 @@ from scipy.special import betaincinv, chdtri, ndtri
 from allocator import redundancy
 from allocator.capability import log_defects, log_good
 from allocator.choice import Outcome
-from allocator.flow import Gates, Line, gradient
+from allocator.flow import Gates, Line, gradient, run
 from allocator.problem import Problem
 from allocator.scenario.level import ATTRIBUTE, PER_ITEM, given
 from allocator.scenario.model import Capability
@@ -250,20 +250,38 @@ def budget_used(shown: Shown, problem: Problem, outcome: Outcome) -> Array:
     return np.asarray(np.max(np.stack(used), axis=0))
 
 
-def inflated(problem: Problem, factor: Array) -> Problem:
+def inflated(problem: Problem, factor: Array, priced_at: Outcome | None = None) -> Problem:
     """Return the problem with the defects of every way multiplied; levels, laws and floors stay.
 
     Parameters
     ----------
     factor : shape (n_ways,)
+    priced_at : Outcome, optional
+        A choice at which scrap, rework and escapes shall cost what they do with the defects as they are, so that only
+        the budgets see more of them.
     """
-    ways = problem.options.ways
+    ways, line = problem.options.ways, problem.line
+    gates = ways.gates
+    if priced_at is not None:
+        gates = replace(gates, rework_cost=gates.rework_cost / factor)
+        line = _priced_alike(line, priced_at, factor[priced_at.choice.rows])
     lines = {w: (knots * factor[w], costs) for w, (knots, costs) in ways.lines.pieces.items()}
     more = replace(
         ways,
         curves=replace(ways.curves, opportunities=ways.curves.opportunities * factor),
         delta_low=ways.delta_low * factor,
         delta_high=ways.delta_high * factor,
+        gates=gates,
         lines=replace(ways.lines, pieces=lines),
     )
-    return replace(problem, options=replace(problem.options, ways=more))
+    return replace(problem, line=line, options=replace(problem.options, ways=more))
+
+
+def _priced_alike(line: Line, outcome: Outcome, factor: Array) -> Line:
+    """Return the line with scrap and escapes priced so that the multiplied defects cost what the estimated ones do."""
+    seen = outcome.flow
+    more = run(line, seen.intensity * factor, seen.gates)
+    with np.errstate(all="ignore"):
+        scrap = np.nan_to_num(np.expm1(seen.exponent) / np.expm1(more.exponent), nan=1.0, posinf=1.0)
+        escapes = float(np.nan_to_num(np.divide(seen.escapes, more.escapes), nan=1.0, posinf=1.0))
+    return replace(line, net_cost=line.net_cost * scrap, escape_cost=line.escape_cost * escapes)

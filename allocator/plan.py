@@ -111,8 +111,9 @@ def _with_confidence(problem: Problem, confidence: float) -> Plan:
     assert plan.proof is not None
     proof = replace(plan.proof, lower_bound=None, gap=None, note=f"{told.asked} plans compared: {told.method}.")
     note = "left out, since none of them allows for the error of the estimates"
-    plan = replace(plan, reached=told.reached, proof=proof, rules_note=note, confidence=told)
-    return _with_cautions(plan, problem)
+    plan = _with_cautions(replace(plan, reached=told.reached, proof=proof, rules_note=note, confidence=told), problem)
+    # Elsewhere small samples are taken as exact, and that is cautioned; here they are allowed for.
+    return replace(plan, cautions=tuple(c for c in plan.cautions if c.code != "small_sample"))
 
 
 def _rank(plan: Plan) -> tuple[bool, float, float]:

@@ -33,29 +33,42 @@ from allocator.solve.road import Solved, solve
 Array = NDArray[np.float64]
 Indices = NDArray[np.int64]
 SEED = 20_260_117
-MOST_CELLS = 600_000
+MOST_CELLS = 1_000_000
 """Draws times estimates held at once."""
-MOST_DRAWS, FEWEST_DRAWS = 40_000, 2_000
+MOST_DRAWS, FEWEST_DRAWS = 40_000, 6_000
 EDGE_SHARE = 0.02
 """Share of the states taken as those in which the line just fails."""
 MOST_ASKED = 8
 CLOSE = 0.998
 """A plan that uses this much of its budget at the confidence asked for is tight enough."""
-SURE = 1e-4
-"""Share by which a guess errs on the safe side, and of the total at which bounds and levels have settled."""
+AIM = math.log(0.9993)
+"""Aimed at, within that."""
+SURE, SETTLED = 1e-6, 1e-4
+"""Least change from which a slope is taken; share of the total at which bounds and levels have settled."""
 ROUNDS = 2
 WORTH_ANOTHER = 1e-3
 """Share of the total that a round must have saved for another one to be worth its time."""
 
 
 @dataclass(frozen=True)
+class Asking:
+    """One way to ask for safety: the defects of every way multiplied or not, and whose money they shall cost."""
+
+    factor: Array | None = None
+    priced_at: Outcome | None = None
+
+
+@dataclass(frozen=True)
 class Found:
-    """A plan and the part of the tightest budget that it uses at the confidence asked for; it holds up to 1."""
+    """A plan and the part of the tightest budget that it uses at the confidence asked for; it holds up to 1.
+
+    `reach` is the part of the tightest budget that it was asked to use and did, in the altered problem.
+    """
 
     outcome: Outcome
     used: float
-    factor: Array | None
-    tightness: float
+    asking: Asking
+    reach: float
 
     @property
     def total(self) -> float:
@@ -73,7 +86,7 @@ class Search:
     asked: list[Found] = field(default_factory=list)
 
     def __post_init__(self) -> None:
-        draws = max(FEWEST_DRAWS, min(MOST_DRAWS, MOST_CELLS // max(len(self.doubts), 1)))
+        draws = max(FEWEST_DRAWS, min(MOST_DRAWS, MOST_CELLS // len(self.doubts)))
         self.nature = draw_nature(self.doubts, draws, SEED, stratified=True)
 
     def with_larger(self, times: Mapping[int, float]) -> Search:
@@ -98,58 +111,58 @@ class Search:
         use = budget_used(shown, self.problem, outcome)
         return float(np.quantile(use, self.confidence, method="higher"))
 
-    def ask(self, factor: Array | None, tightness: float, near: Found | None = None) -> Found | None:
-        """Return the plan of the problem with its defects multiplied and its budgets tightened, judged as it is."""
-        altered = self.problem if factor is None else inflated(self.problem, factor)
+    def ask(self, asking: Asking, tightness: float, near: Found | None = None) -> Found | None:
+        """Return the plan of the altered problem with its budgets tightened, judged as it is; None if there is none."""
         budgets = {name: budget * tightness for name, budget in self.problem.budgets.items()}
         starts = [] if near is None else [near.outcome.choice.rows]
-        return self._judged(solve(replace(altered, budgets=budgets), starts), factor, tightness)
+        return self._judged(solve(replace(self._altered(asking), budgets=budgets), starts), asking)
 
-    def best_at(self, factor: Array) -> None:
-        """Look for the plan of the best split yield, whatever it costs, with the defects multiplied."""
-        altered = inflated(self.problem, factor)
+    def best_at(self, asking: Asking) -> None:
+        """Look for the plan of the best split yield of the altered problem, whatever it costs."""
         others = {name: budget for name, budget in self.problem.budgets.items() if name != self.problem.split}
-        self._judged(solve(replace(altered, budgets=others, objective=self.problem.split)), factor, 1.0)
+        self._judged(solve(replace(self._altered(asking), budgets=others, objective=self.problem.split)), asking)
 
-    def _judged(self, solved: Solved, factor: Array | None, tightness: float) -> Found | None:
+    def _altered(self, asking: Asking) -> Problem:
+        return self.problem if asking.factor is None else inflated(self.problem, asking.factor, asking.priced_at)
+
+    def _judged(self, solved: Solved, asking: Asking) -> Found | None:
         if solved.outcome is None:
             return None
         ways = self.problem.options.ways
         rows = ways.find(solved.problem.options.ways, solved.outcome.choice.rows)
         outcome = evaluate(self.problem.line, self.problem.options, Choice(rows, solved.outcome.choice.z))
-        return self.judge(outcome, factor, tightness)
+        return self.judge(outcome, asking, solved.outcome.loads)
 
-    def judge(self, outcome: Outcome, factor: Array | None, tightness: float) -> Found:
+    def judge(self, outcome: Outcome, asking: Asking, loads: Mapping[str, float]) -> Found:
         """Note a plan with what it uses at the confidence asked for."""
-        found = Found(outcome, self.used(outcome, self.nature), factor, tightness)
+        reach = max(loads[name] / budget for name, budget in self.problem.budgets.items())
+        found = Found(outcome, self.used(outcome, self.nature), asking, reach)
         self.asked.append(found)
         return found
 
-    def tighten(
-        self, factor: Array | None, start: float = 1.0, near: Found | None = None, most: int = MOST_ASKED
-    ) -> None:
-        """Turn one way of asking up, or down, until its plan just holds."""
+    def tighten(self, asking: Asking, near: Found, start: float, most: int = MOST_ASKED) -> None:
+        """Turn one way of asking up or down until its plan just holds."""
         holds, fails, impossible = 0.0, math.inf, 0.0
-        tightness = start
+        tightness, seen = start, [near] if near.asking is asking else []
         for _ in range(most):
-            found = self.ask(factor, tightness, near)
+            found = self.ask(asking, tightness, near)
             if found is None:
                 impossible = max(impossible, tightness)
-            elif found.used <= 1.0:
-                holds = max(holds, tightness)
             else:
-                fails = min(fails, tightness)
-            if found is not None and CLOSE <= found.used <= 1.0:
-                return
+                if found.used <= 1.0:
+                    holds = max(holds, tightness)
+                else:
+                    fails = min(fails, tightness)
+                if CLOSE <= found.used <= 1.0 or (found.used <= 1.0 and found.reach < tightness * CLOSE):
+                    return  # tight, or nothing is gained by a larger budget
+                near = found
+                seen.append(found)
             low = max(holds, impossible)
-            if low > 0.0 and fails < math.inf and fails / low < 1.0 + 1.0 - CLOSE:
+            if fails < low / CLOSE:
                 return
-            near = found or near
-            guess = tightness / found.used * (1.0 - SURE) if found is not None else 0.0
-            if not low < guess < fails:
-                if low == 0.0 or fails == math.inf:
-                    return
-                guess = math.sqrt(low * fails)
+            guess = _next(seen, low, fails)
+            if guess is None:
+                return
             tightness = guess
 
     def at_bounds(self, confidence: float, levels: Array) -> Array:
@@ -190,18 +203,32 @@ class Search:
             yield rows, true_intensity(nature, self.doubts, ways, rows, z), np.maximum(estimate, 1e-300)
 
 
-def on_own_bounds(search: Search, confidence: float, plain: Outcome) -> Found | None:
-    """Return the plan that takes every estimate at its own bound, the rule that it is compared with.
+def _next(seen: list[Found], low: float, fails: float) -> float | None:
+    """Return the tightness to ask for next: by the slope between the last two plans, within what is known."""
+    guess = 0.0
+    if seen:
+        last, slope = seen[-1], 1.0
+        if len(seen) > 1 and abs(math.log(last.reach / seen[-2].reach)) > SURE:
+            slope = math.log(last.used / seen[-2].used) / math.log(last.reach / seen[-2].reach)
+        guess = last.reach * math.exp((AIM - math.log(last.used)) / min(max(slope, 0.3), 3.0))
+    if low < guess < fails:
+        return guess
+    return math.sqrt(low * fails) if low > 0.0 and fails < math.inf else None
+
+
+def on_own_bounds(search: Search, plain: Found) -> Found | None:
+    """Return the plan that takes every estimate at its own bound, money included: the rule that ours is compared with.
 
     The bound depends on the level to reach: a few rounds settle both.
     """
-    levels, found = plain.choice.z, None
+    levels, found = plain.outcome.choice.z, None
     for _ in range(MOST_ASKED):
-        before, found = found, search.ask(search.at_bounds(confidence, levels), 1.0, found)
+        asking = Asking(search.at_bounds(search.confidence, levels))
+        before, found = found, search.ask(asking, 1.0, found)
         if found is None:
             return None
         levels = found.outcome.choice.z
-        if before is not None and abs(found.total - before.total) <= SURE * abs(found.total):
+        if before is not None and abs(found.total - before.total) <= SETTLED * abs(found.total):
             break
     return found
 
@@ -215,19 +242,24 @@ def find_confident(search: Search, plain: Outcome) -> tuple[Found | None, Found 
     plain : Outcome
         The plan that takes the estimates as exact.
     """
-    first = search.judge(plain, None, 1.0)
-    search.tighten(None, min(1.0, 1.0 / first.used), first)
-    own = on_own_bounds(search, search.confidence, plain)
+    as_estimated = Asking()
+    first = search.judge(plain, as_estimated, plain.loads)
+    own = on_own_bounds(search, first)
+    if search.holds(first):
+        return first, own
+    search.tighten(as_estimated, first, first.reach / first.used)
     if own is not None:
-        search.tighten(own.factor, 1.0 / own.used, own)
+        near = search.best or own
+        asking = Asking(search.at_bounds(search.confidence, near.outcome.choice.z), near.outcome)
+        search.tighten(asking, own, own.reach / own.used)
     if search.best is None:
         # Not for the least cost but for the best yield: what is then still missing is out of reach.
-        search.best_at(search.at_bounds(search.confidence, plain.choice.z))
+        search.best_at(Asking(search.at_bounds(search.confidence, plain.choice.z)))
     for _ in range(ROUNDS):
         best = search.best
         if best is None:
             break
-        search.tighten(search.at_edge(best), 1.0, best)
+        search.tighten(Asking(search.at_edge(best), best.outcome), best, 1.0)
         if search.best is None or search.best.total > best.total * (1.0 - WORTH_ANOTHER):
             break
     return search.best, own

@@ -211,7 +211,9 @@ def test_never_dearer_than_own_bounds_unless_those_fail(seed: int) -> None:
         }
         other = {"name": "new", "capability": {"cp": 1.7, "sample": int(rng.integers(25, 200))}, "price": 30_000.0}
         capability = {"cp": float(rng.uniform(1.0, 1.4)), "sample": int(rng.integers(20, 300))}
-        steps.append(step(f"s{i}", capability, improve=law, alternative=[other] if i % 2 else []))
+        steps.append(
+            step(f"s{i}", capability, improve=law, alternative=[other] if i % 2 else [], scrap_cost=3.0 * seed)
+        )
     found = plan(line(*steps, demand=DEMAND, target={"final_yield": 0.99}), confidence=0.9)
     sure = sure_of(found)
     assert sure.reached
@@ -340,6 +342,7 @@ def test_the_sheet_fits_eighty_columns_and_says_its_law(planned: Plan) -> None:
     for said in ("To be 90 % sure", "chi-square", "What to measure next", "fresh draws", "no lower bound is proven"):
         assert said in text
     assert "next nine" not in text
+    assert "is taken as exact; its 95 % lower limit" not in text
 
 
 def test_the_command_line_refuses_in_its_own_words() -> None:
