@@ -6,17 +6,20 @@ at the changed figure, the break-even figures of a re-planned comparison lie fur
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, replace
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy.optimize import brentq
 
 from allocator.flow import money, run
+from allocator.money import capital_recovery
 from allocator.problem import Problem
 from allocator.results import Asset, Lever
-from allocator.stands import Stand, rate_of, yearly
+from allocator.stands import Stand, rate_of
 
 QUARTER = (0.75, 1.25)
 TWOFOLD = (0.5, 2.0)
@@ -26,7 +29,9 @@ GRID = 60
 RATES = (0.0, 0.05)
 """Ends of the discount rate where the base is 0, so that half and twice are no change."""
 HIGHEST_RATE = 1.0
+BEYOND = 1e300
 
+Array = NDArray[np.float64]
 Subject = frozenset[tuple[str | None, str]]
 
 
@@ -108,16 +113,14 @@ class _Weighed:
 
     def worth(self, changed: _Changed) -> float:
         """Return their yearly total less ours with the figures changed."""
-        return self._total(self.theirs, changed, False) - self._total(self._ours_at(changed), changed, True)
+        mine, its = self._paid
+        difference = _total(self.theirs, its, changed) - _total(self._ours_at(changed), mine, changed)
+        # Where more defects leave hardly a good unit the cost overflows: beyond every other, and still a number.
+        return difference if math.isfinite(difference) else -BEYOND
 
-    def _total(self, stand: Stand, changed: _Changed, ours: bool) -> float:
-        spent = stand.money
-        by_volume = changed.scrap * spent.scrap + spent.rework + spent.escapes + spent.inspection
-        paid = sum(
-            yearly(_asset_at(asset, changed, ours and (asset.step, asset.name) in self.subject), changed.rate)
-            for asset in stand.assets
-        )
-        return changed.volume * by_volume + paid
+    @cached_property
+    def _paid(self) -> tuple[_Paid, _Paid]:
+        return _paid(self.ours.assets, self.subject), _paid(self.theirs.assets, frozenset())
 
     def _ours_at(self, changed: _Changed) -> Stand:
         if changed.defects == 1.0:
@@ -133,15 +136,42 @@ class _Weighed:
         return np.asarray(named & (here != there))
 
 
-def _asset_at(asset: Asset, changed: _Changed, is_subject: bool) -> Asset:
-    price, life = (changed.price, changed.life) if is_subject else (1.0, 1.0)
-    return replace(
-        asset,
-        price=asset.price * price,
-        life_years=asset.life_years * life,
-        per_item=asset.per_item * changed.volume,
-        price_allowance=asset.price_allowance * changed.volume,
-    )
+@dataclass(frozen=True)
+class _Paid:
+    """What is paid for, one entry per asset; `own` marks what is argued for."""
+
+    price: Array
+    trade_in: Array
+    resale: Array
+    life: Array
+    per_year: float
+    by_volume: float
+    own: NDArray[np.bool_]
+
+    def yearly(self, changed: _Changed) -> float:
+        """Return what all of it costs per year with the figures changed."""
+        price = np.where(self.own, changed.price, 1.0) * self.price
+        lives, at = np.unique(np.where(self.own, changed.life, 1.0) * self.life, return_inverse=True)
+        crf = np.array([capital_recovery(changed.rate, life) for life in lives.tolist()])[at]
+        owning = (price - self.trade_in) * crf - self.resale * (crf - changed.rate)
+        return float(owning.sum()) + self.per_year + changed.volume * self.by_volume
+
+
+def _paid(assets: tuple[Asset, ...], subject: Subject) -> _Paid:
+    def column(name: str) -> Array:
+        return np.array([getattr(asset, name) for asset in assets], dtype=float)
+
+    return _Paid(
+        column("price"), column("trade_in"), column("resale"), column("life_years"), float(column("per_year").sum()),
+        float(column("per_item").sum() + column("price_allowance").sum()),
+        np.array([(asset.step, asset.name) in subject for asset in assets], dtype=bool),
+    )  # fmt: skip
+
+
+def _total(stand: Stand, paid: _Paid, changed: _Changed) -> float:
+    spent = stand.money
+    by_volume = changed.scrap * spent.scrap + spent.rework + spent.escapes + spent.inspection
+    return changed.volume * by_volume + paid.yearly(changed)
 
 
 def _nearest_root(worth: Callable[[float], float], base: float, grid: NDArray[np.float64]) -> float | None:

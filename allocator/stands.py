@@ -55,8 +55,9 @@ def stand_today(problem: Problem) -> Stand:
 def stand_of(problem: Problem, ways: Ways, outcome: Outcome) -> Stand:
     """Return the line as an evaluated choice among some ways runs it."""
     owned = [*_shared(problem, outcome.bought)]
-    for i, (row, z) in enumerate(zip(outcome.choice.rows.tolist(), outcome.choice.z.tolist(), strict=True)):
-        owned += _at_step(problem, ways, i, row, z)
+    rows, by_law = outcome.choice.rows, law_cost(ways, outcome.choice.rows, outcome.choice.z).tolist()
+    for i, row in enumerate(rows.tolist()):
+        owned += _at_step(problem, ways, i, row, by_law[i])
     return _stand(problem, outcome.flow, owned, ways.states.take(outcome.choice.rows))
 
 
@@ -74,7 +75,7 @@ def stand_with_only(problem: Problem, rows: dict[int, tuple[Ways, int, float]]) 
             figures[name][i] = getattr(one.gates, name)[0]
         inspection[i] = one.states.inspection[0]
         used |= one.uses[0]
-        owned += _at_step(problem, ways, i, row, z)
+        owned += _at_step(problem, ways, i, row, float(law_cost(ways, np.array([row]), np.array([z]))[0]))
     flow = run(problem.line, intensity, Gates(**figures))
     return _stand(problem, flow, [*_shared(problem, used), *owned], replace(today, inspection=inspection))
 
@@ -117,15 +118,14 @@ def _shared(problem: Problem, bought: NDArray[np.bool_]) -> Iterator[Asset]:
             yield _asset(problem, purchase.name, -1, purchase, 0.0)
 
 
-def _at_step(problem: Problem, ways: Ways, i: int, row: int, z: float) -> Iterator[Asset]:
+def _at_step(problem: Problem, ways: Ways, i: int, row: int, by_law: float) -> Iterator[Asset]:
     step, items = problem.scenario.step[i], float(problem.line.per_finished[i] * problem.line.shipped)
     chosen = ways.text[row].alternatives
     for alternative in step.alternative:
         if alternative.name in chosen:
             yield _asset(problem, alternative.name, i, alternative, items)
-    cost = float(law_cost(ways, np.array([row]), np.array([z]))[0])
-    if step.improve is not None and cost > 0.0:
-        yield _law_asset(problem, step.improve, i, cost, float(ways.capital_per_cost[row]))
+    if step.improve is not None and by_law > 0.0:
+        yield _law_asset(problem, step.improve, i, by_law, float(ways.capital_per_cost[row]))
 
 
 def _law_asset(problem: Problem, law: Law, i: int, cost: float, capital_per_cost: float) -> Asset:

@@ -197,6 +197,16 @@ def test_twice_the_defects_can_break_the_promise() -> None:
     assert "needed" in render(case)
 
 
+def test_a_hundredfold_of_defects_that_leaves_hardly_a_good_unit_is_still_a_verdict() -> None:
+    """10,000 chances to fail: a hundred times the defects would need e^1000 starts, yet the turn lies far below."""
+    fine = {"name": "press", "price": 20_000, "capability": {"dpmo": 1_000}}
+    many = form(opportunities=10_000, alternative=[fine], capability={"dpmo": 1_200})
+    found = only(case_of(line(many, demand=DEMAND), "press"))
+    turn = lever(found, "defects after").turns_at
+    assert turn is not None
+    assert 1.0 < turn < 1.2
+
+
 def test_prices_do_not_matter_where_nothing_has_a_price() -> None:
     trained = {"name": "training", "per_year": 100, "capability": {"defect_rate": 0.05}}
     case = case_of(line(form(alternative=[trained]), demand=DEMAND), "training")
