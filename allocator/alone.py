@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from allocator.asker import ask, total_of
 from allocator.problem import Problem
 from allocator.solve.road import Solved, solve
 from allocator.stands import Stand, stand_of, stand_with_only
@@ -20,24 +21,23 @@ def answer(problem: Problem, wider: Solved | None = None) -> Solved | None:
         The best plan of the same question with more to choose from: where it is still to be had it is the best here
         too, else the search starts near it.
     """
+    if wider is not None:
+        return wider if _still_there(problem, wider) else ask(problem, wider)
     if problem.options.no_way:
         return None
-    starts = []
-    if wider is not None and wider.outcome is not None:
-        ways = problem.options.ways
-        rows = ways.find(wider.problem.options.ways, wider.outcome.choice.rows)
-        if (rows >= 0).all():
-            return wider
-        first = np.searchsorted(ways.step, np.arange(problem.line.n_steps))
-        starts = [np.where(rows >= 0, rows, first)]
-    solved = solve(problem, starts)
+    solved = solve(problem)
     return None if solved.outcome is None else solved
+
+
+def _still_there(problem: Problem, wider: Solved) -> bool:
+    assert wider.outcome is not None
+    return bool((problem.options.ways.find(wider.problem.options.ways, wider.outcome.choice.rows) >= 0).all())
 
 
 def best_with(problem: Problem, thing: Thing) -> Solved | None:
     """Return the best plan that takes a thing, all else planned anew; None where there is none."""
     answers = [solved for asked in forced(problem, thing) if (solved := answer(asked)) is not None]
-    return min(answers, key=total, default=None)
+    return min(answers, key=total_of, default=None)
 
 
 def with_only(problem: Problem, step: int, thing: Thing | None) -> Problem:
@@ -50,12 +50,6 @@ def with_only(problem: Problem, step: int, thing: Thing | None) -> Problem:
         if other.step == step and other != thing and not (other.kind == LAW and thing is not None):
             asked = without(asked, other)
     return asked
-
-
-def total(solved: Solved) -> float:
-    """Return the yearly total of an answer [currency/year]."""
-    assert solved.outcome is not None
-    return solved.outcome.money.total
 
 
 def stand(problem: Problem, solved: Solved) -> Stand:

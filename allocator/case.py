@@ -5,7 +5,8 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass, replace
 
-from allocator.alone import answer, best_with, line_alone, stand, total, users
+from allocator.alone import answer, best_with, line_alone, stand, users
+from allocator.asker import total_of
 from allocator.capital import cash_case
 from allocator.cautions import cautions_of_input, what_is_assumed
 from allocator.errors import RangeError
@@ -95,8 +96,8 @@ def _of_thing(problem: Problem, thing: Thing, empty: CapitalCase) -> CapitalCase
         verdict=verdict,
         in_plan=verdict != LEAVE,
         reached=True,
-        total_with=total(best),
-        total_without=None if banned is None else total(banned),
+        total_with=total_of(best),
+        total_without=None if banned is None else total_of(banned),
         left_out=() if banned is not None else ("no plan without it keeps the targets, floors and limits",),
     )
     return _with_cases(found, argued)
@@ -133,8 +134,8 @@ def _finite(total: float) -> float | None:
 def _verdict(best: Solved, banned: Solved | None) -> str:
     if banned is None:
         return NEEDED
-    worth = total(banned) - total(best)
-    return BUY if worth > SAME_TOTAL * max(abs(total(banned)), 1.0) else LEAVE
+    worth = total_of(banned) - total_of(best)
+    return BUY if worth > SAME_TOTAL * max(abs(total_of(banned)), 1.0) else LEAVE
 
 
 def _subject(problem: Problem, thing: Thing, best: Solved) -> tuple[Subject, frozenset[str]]:

@@ -9,6 +9,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from allocator.alone import answer, line_alone, stand, with_only
+from allocator.asker import takes
 from allocator.cautions import cautions_of_input, what_is_assumed
 from allocator.flow import loads
 from allocator.objections import against_alternative, against_law
@@ -188,7 +189,7 @@ class _Table:
             step=problem.scenario.step[offer.step].name,
             option="" if thing is None else self._name(offer.step, thing),
             kinds=offer.kinds,
-            in_plan=self.best is not None and _takes(self.best, offer),
+            in_plan=self.best is not None and _takes(problem, self.best, offer),
             figures=None if solved is None else self._figures(stand(problem, solved), everywhere),
             alone=None if alone is None or thing is None else self._figures(alone, frozenset({thing.step})),
             against=self._against(offer),
@@ -244,21 +245,11 @@ def _less(total: float | None, than: float) -> float | None:
     return None if total is None or not math.isfinite(than) else total - than
 
 
-def _takes(best: Solved, offer: _Offer) -> bool:
-    """Return whether the cheapest plan takes it, with others or alone."""
-    assert best.outcome is not None
-    at = offer.step if offer.thing is None else offer.thing.step
-    chosen = best.problem.options.ways.text[int(best.outcome.choice.rows[at])].alternatives
-    improved = bool(best.outcome.choice.z[at] > _start(best, at))
-    if offer.thing is None:
-        return not chosen and not improved
-    return improved if offer.thing.kind == LAW else offer.thing.name in chosen
-
-
-def _start(best: Solved, i: int) -> float:
-    """Return the level from which the law of a step starts, with the rounding of a solve."""
-    assert best.outcome is not None
-    return float(best.problem.options.ways.curves.start[best.outcome.choice.rows[i]]) * (1.0 + 1e-6)
+def _takes(problem: Problem, best: Solved, offer: _Offer) -> bool:
+    """Return whether the cheapest plan takes it, with others or alone; a step as it is takes nothing."""
+    if offer.thing is not None:
+        return takes(best, offer.thing)
+    return not any(takes(best, thing) for thing in things(problem) if thing.step == offer.step)
 
 
 def _below_their_floor(problem: Problem) -> list[int]:
