@@ -2,6 +2,10 @@
 
 from __future__ import annotations
 
+import math
+from collections.abc import Callable
+from dataclasses import dataclass, field
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -9,6 +13,7 @@ from allocator import curves as cv
 from allocator.choice import evaluate
 from allocator.flow import GATE_FIELDS, Gates
 from allocator.problem import CAPITAL, Problem
+from allocator.solve.fixed import solve_fixed
 from allocator.solve.price import build_duty
 from allocator.solve.road import Solved, solve
 from allocator.variants import LAW, PURCHASE, Thing
@@ -110,3 +115,68 @@ def law_slope_at_start(ways: Ways, row: int, solved: Solved) -> float | None:
         slope = -float(cv.smooth_slopes(some, start)[1][0])
     limit = 0.0 if solved.price is None else solved.price.get(CAPITAL, 0.0)
     return slope * (1.0 + limit * float(ways.capital_per_cost[row])) or None
+
+
+@dataclass
+class Track:
+    """The best answers along one figure (a volume, a level), each worked out once.
+
+    Between two figures at which the same choice is best, that choice is kept and only its levels are worked out anew;
+    everywhere else the question is asked in full.
+
+    Parameters
+    ----------
+    question : callable
+        The question at a figure.
+    answer : callable
+        Its best answer from a neighbouring one, None where there is none.
+    known : dict
+        Answers by figure, at least one to start from.
+    """
+
+    question: Callable[[float], Problem]
+    answer: Callable[[Problem, Solved], Solved | None]
+    known: dict[float, Solved | None]
+    asked: dict[float, Problem] = field(default_factory=dict)
+
+    def asked_at(self, figure: float) -> Problem:
+        """Return the question at a figure."""
+        if figure not in self.asked:
+            self.asked[figure] = self.question(figure)
+        return self.asked[figure]
+
+    def at(self, figure: float) -> Solved | None:
+        """Return the best answer at a figure."""
+        if figure not in self.known:
+            below = max((f for f in self.known if f < figure), default=None)
+            above = min((f for f in self.known if f > figure), default=None)
+            sides = [self.known[f] for f in (below, above) if f is not None]
+            kept = _kept_choice(self.asked_at(figure), *sides) if len(sides) == 2 else None
+            self.known[figure] = kept or self.answer(self.asked_at(figure), self._nearest(figure))
+        return self.known[figure]
+
+    def _nearest(self, figure: float) -> Solved:
+        found = [(abs(f - figure), solved) for f, solved in self.known.items() if solved is not None]
+        return min(found, key=lambda pair: pair[0])[1]
+
+
+def _kept_choice(problem: Problem, below: Solved | None, above: Solved | None) -> Solved | None:
+    """Return the answer that keeps the choice of both neighbours; None where they differ or it does not serve."""
+    if below is None or above is None:
+        return None
+    picks = _picks(below)
+    if not np.array_equal(picks, _picks(above)):
+        return None
+    table = problem.options.ways.text.pick
+    first = np.searchsorted(table, picks, side="left")
+    if (np.searchsorted(table, picks, side="right") - first != 1).any():
+        return None
+    fixed = solve_fixed(problem, first.astype(np.int64), near=above.near)
+    if fixed is None:
+        return None
+    return Solved(problem, fixed.outcome, fixed.bound, math.nan, fixed.price, "the choice of both neighbours", 0.0)
+
+
+def _picks(solved: Solved) -> Indices:
+    assert solved.outcome is not None
+    return solved.problem.options.ways.text.pick[solved.outcome.choice.rows]

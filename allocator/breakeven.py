@@ -4,11 +4,11 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, replace
 
 import numpy as np
 
-from allocator.asker import ask, law_slope_at_start, takes, total_at, total_of, value_of_defects
+from allocator.asker import Track, ask, law_slope_at_start, takes, total_at, total_of, value_of_defects
 from allocator.capability import log_defects, sigma_from_log_defects
 from allocator.changed import at_law_price, at_level, at_price, at_volume, level_of
 from allocator.problem import Problem, within
@@ -18,14 +18,16 @@ from allocator.variants import LAW, Thing, forced
 
 FURTHEST_VOLUME = 100.0
 """Volumes are looked at from a hundredth to a hundred times today's."""
-PER_DECADE = 4
+PER_DECADE = 3
 """Volumes per decade at which the plan is made to see where it changes."""
-FOUND = 1e-5
-"""A volume or a price factor is found when the verdict turns within this share of it."""
+FOUND = 1e-4
+"""A volume, a price factor or a level is found when the verdict turns within this share of it."""
 SAME = 2e-7
 """Totals that differ by less than this share are the same: each is solved to 1e-7."""
 CHEAPEST = 1e-4
 """Share of its stated scale below which a law is as good as free."""
+DEAREST = 1e9
+"""Factor of its scale at which no law is used."""
 TURNS = 24
 FLAWLESS = math.log(1e-12)
 """ln of the defect probability that stands for a machine that makes no mistakes."""
@@ -33,34 +35,32 @@ FLAWLESS = math.log(1e-12)
 
 @dataclass
 class Plans:
-    """The plan at other volumes, each made once, and what is known of the plan at today's."""
+    """The plan at today's volume, and at other volumes as factors of it; all of them allow the same choices."""
 
     problem: Problem
     plan: Solved
-    known: dict[float, Solved] = field(default_factory=dict)
-    asked: dict[float, Problem] = field(default_factory=dict)
+    track: Track
 
     def at(self, factor: float) -> Solved:
-        """Return the plan at `factor` times today's volume; yields, floors and capital allow the same choices there."""
-        if factor == 1.0:
-            return self.plan
-        if factor not in self.known:
-            nearest = min([1.0, *self.known], key=lambda f: abs(math.log(f / factor)))
-            solved = ask(self.question(factor), self.plan if nearest == 1.0 else self.known[nearest])
-            assert solved is not None, "what can be reached does not depend on the volume"
-            self.known[factor] = solved
-        return self.known[factor]
+        """Return the plan at `factor` times today's volume."""
+        solved = self.track.at(factor)
+        assert solved is not None, "what can be reached does not depend on the volume"
+        return solved
 
     def question(self, factor: float) -> Problem:
         """Return the question at `factor` times today's volume."""
-        if factor not in self.asked:
-            self.asked[factor] = self.problem if factor == 1.0 else at_volume(self.problem, factor)
-        return self.asked[factor]
+        return self.track.asked_at(factor)
 
-    def grid(self) -> list[float]:
-        """Return the volumes looked at first, as factors of today's."""
-        decades = int(math.log10(FURTHEST_VOLUME))
-        return [10.0 ** (k / PER_DECADE) for k in range(-decades * PER_DECADE, decades * PER_DECADE + 1)]
+
+def plans_at_volumes(problem: Problem, plan: Solved) -> Plans:
+    """Return the plans at other volumes, none of them made yet."""
+    return Plans(problem, plan, Track(lambda factor: at_volume(problem, factor), ask, {1.0: plan}, {1.0: problem}))
+
+
+def volumes_looked_at() -> list[float]:
+    """Return the volumes looked at first, as factors of today's."""
+    decades = int(math.log10(FURTHEST_VOLUME))
+    return [10.0 ** (k / PER_DECADE) for k in range(-decades * PER_DECADE, decades * PER_DECADE + 1)]
 
 
 def break_even_volume(plans: Plans, thing: Thing) -> float | None:
@@ -68,7 +68,7 @@ def break_even_volume(plans: Plans, thing: Thing) -> float | None:
 
     0 where it does at the smallest volume looked at, None where it does at none.
     """
-    grid = sorted({*plans.grid(), *plans.known})
+    grid = sorted({*volumes_looked_at(), *plans.track.known})
     first = next((i for i, factor in enumerate(grid) if takes(plans.at(factor), thing)), None)
     if first is None:
         return None
@@ -146,23 +146,24 @@ def _row_with_law(solved: Solved, problem: Problem, thing: Thing) -> int | None:
     return row if row < len(ways) and bool(ways.text.pick[row] == pick and ways.moves[row]) else None
 
 
-def break_even_law(problem: Problem, banned: Solved, thing: Thing) -> float | None:
+def break_even_law(problem: Problem, plan: Solved, banned: Solved, thing: Thing) -> float | None:
     """Return the factor of its scale up to which a law is worth using; None where it never is.
 
     Parameters
     ----------
     problem : Problem
         With the law on offer.
-    banned : Solved
-        The best plan without the law.
+    plan, banned : Solved
+        The best plans with the law on offer and without it.
     """
     pull = _pull(banned, problem, thing)
     without, factor = total_of(banned), CHEAPEST if pull is None else 1.0 + pull
     if factor <= 0.0:
         return None
+    track = Track(lambda f: at_law_price(problem, thing.step, f), ask, {1.0: plan, DEAREST: banned}, {})
     for _ in range(TURNS):
         tried = factor * (1.0 + FOUND)
-        offered = ask(at_law_price(problem, thing.step, tried), banned)
+        offered = track.at(tried)
         assert offered is not None, "the plan without the law keeps every limit"
         saved = without - total_of(offered)
         if not takes(offered, thing) or saved <= SAME * abs(without):
@@ -220,37 +221,31 @@ def break_even_level(problem: Problem, thing: Thing, without: float, taken: Solv
     """
     stated = level_of(problem, thing)[0]
     today = float(problem.options.today.levels.sigma_level[thing.step])
-    gain = without - total_of(taken)
-    if gain >= 0.0:
+    track = Track(
+        lambda z: at_level(problem, thing, z), lambda asked, near: with_it(asked, thing, near),
+        {stated.sigma_level: taken},
+    )  # fmt: skip
+
+    def gain(z: float) -> float:
+        solved = track.at(z)
+        return -math.inf if solved is None else without - total_of(solved)
+
+    if gain(stated.sigma_level) >= 0.0:
         low, high = min(today, stated.sigma_level - 0.5), stated.sigma_level
-        lower = _gain_at(problem, thing, low, without, taken)
-        if lower >= 0.0:
-            return None
-        ends = (low, lower, high, gain)
     else:
         low, high = stated.sigma_level, max(_flawless(stated), stated.sigma_level)
-        upper = _gain_at(problem, thing, high, without, taken)
-        if upper < 0.0:
-            return None
-        ends = (low, gain, high, upper)
-    z = _level_between(lambda z: _gain_at(problem, thing, z, without, taken), stated, ends, SAME * abs(without))
-    return Level(z, stated.shift, stated.k, stated.sides, stated.attribute)
+    if gain(low) >= 0.0 or gain(high) < 0.0:
+        return None
+    return replace(stated, sigma_level=_level_between(gain, stated, low, high, SAME * abs(without)))
 
 
 def _flawless(level: Level) -> float:
     return float(sigma_from_log_defects(FLAWLESS, level.k, level.shift, level.sides))
 
 
-def _gain_at(problem: Problem, thing: Thing, z: float, without: float, near: Solved) -> float:
-    solved = with_it(at_level(problem, thing, z), thing, near)
-    return -math.inf if solved is None else without - total_of(solved)
-
-
-def _level_between(
-    gain: Callable[[float], float], level: Level, ends: tuple[float, float, float, float], enough: float
-) -> float:
+def _level_between(gain: Callable[[float], float], level: Level, low: float, high: float, enough: float) -> float:
     """Return the level at which the gain is 0; it is nearly straight in the defect probability, so that is halved."""
-    low, below, high, above = ends
+    below, above = gain(low), gain(high)
     for turn in range(TURNS):
         if abs(above) <= enough or high - low <= FOUND:
             break

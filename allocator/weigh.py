@@ -13,18 +13,21 @@ from allocator.breakeven import (
     break_even_level,
     break_even_price,
     break_even_volume,
+    plans_at_volumes,
     with_it,
 )
 from allocator.capability import study_index
 from allocator.cautions import cautions_of_input, what_is_assumed
 from allocator.cautions.input import is_judged
 from allocator.changed import alternative_of, cost_per_price, costs_of, level_of
+from allocator.objections import against_alternative, against_law
 from allocator.problem import Problem, pose
 from allocator.results import BreakEvenLevel, Weighed, Weighing
 from allocator.scenario.model import Alternative, Law, Scenario
 from allocator.solve.road import Solved, solve
 from allocator.variants import ALTERNATIVE, LAW, PURCHASE, Thing, things, without
 
+SAFETY = "it changes a safety characteristic: validate and release it anew; its floor stays whatever is bought"
 Watch = Callable[[int, int], None]
 
 
@@ -47,7 +50,7 @@ def weigh_purchases(scenario: Scenario, *, watch: Watch | None = None) -> Weighe
     plan = None if problem.options.no_way else solve(problem)
     rows: list[Weighing] = []
     if plan is not None and plan.outcome is not None:
-        known, plans = things(problem), Plans(problem, plan)
+        known, plans = things(problem), plans_at_volumes(problem, plan)
         for place, thing in enumerate(known):
             rows.append(_weighed(plans, thing))
             if watch is not None:
@@ -116,7 +119,7 @@ def _prices(
         law = problem.scenario.step[thing.step].improve
         assert law is not None
         stated = next((x for x in (law.price, law.per_year, law.per_item) if x is not None), None)
-        factor = None if banned is None else break_even_law(problem, banned, thing)
+        factor = None if banned is None or taken is None else break_even_law(problem, taken, banned, thing)
         return stated, None if stated is None or factor is None else stated * factor, factor
     price, per_price = costs_of(problem, thing).price, cost_per_price(problem, thing)
     if banned is None or taken is None or per_price is None:
@@ -170,41 +173,15 @@ def _is_priced(law: Law) -> bool:
 
 def _against(problem: Problem, thing: Thing) -> tuple[str, ...]:
     """Say what speaks against a thing, money apart."""
-    said = []
     if thing.kind == PURCHASE:
         return ("its price rests on a judged figure",) if is_judged(costs_of(problem, thing)) else ()
     step = problem.scenario.step[thing.step]
-    table = step.improve if thing.kind == LAW else alternative_of(problem, thing)
-    assert table is not None
-    if is_judged(table) or is_judged(step.capability):
-        said.append("it rests on judged figures: get a quotation or a trial first")
-    if step.safety:
-        said.append(
-            "it changes a safety characteristic: validate and release it anew; its floor stays whatever is bought"
-        )
-    if isinstance(table, Alternative):
-        said += _against_alternative(table)
-        if table.capability is not None and _off_centre(problem, thing):
-            said.append("it does not centre the process: the offset stays as it is")
-    return tuple(said)
-
-
-def _against_alternative(table: Alternative) -> list[str]:
-    said = []
-    if table.copies is not None:
-        share = table.copies.common_cause
-        said.append(
-            f"{share:.0%} of the failures are assumed to take all copies at once"
-            if share > 0.0
-            else "no failure is assumed to take all copies at once, which is rarely true"
-        )
-    if table.widen is not None:
-        said.append("the customer has to agree to the wider limits")
-    if table.k is not None and table.capability is None:
-        said.append("a mean that is set once drifts again unless somebody keeps it there")
-    if table.inspection is not None and table.inspection.rejects_good > 0.0:
-        said.append(f"it rejects {table.inspection.rejects_good:.2%} of good items")
-    return said
+    if thing.kind == LAW:
+        said = against_law(step)
+    else:
+        own = alternative_of(problem, thing)
+        said = against_alternative(step, own, own.capability is not None and _off_centre(problem, thing))
+    return (*said, SAFETY) if step.safety else said
 
 
 def _off_centre(problem: Problem, thing: Thing) -> bool:
