@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import math
 import re
 from collections.abc import Iterator
@@ -165,6 +166,21 @@ def test_sensitivities_of_a_comparison_that_is_not_there(case: CapitalCase) -> N
         figures.sensitivities(case, against="yesterday")
 
 
+# ---------------------------------------------------------------- worth
+
+
+def test_worth_is_what_was_weighed() -> None:
+    weighed = allocator.weigh_purchases(allocator.read_scenario(FOLDER / "latch.toml"))
+    ax = figures.worth(weighed)
+    known = sorted((row for row in weighed.rows if row.worth_per_year), key=lambda row: -row.worth_per_year)
+    assert [name.split("\n")[0] for name in names(ax)] == [f"{row.step}: {row.alternative}" for row in known]
+    drawn = [bought + left for bought, left in zip(widths(ax, "buy"), widths(ax, "leave"), strict=True)]
+    assert drawn == pytest.approx([row.worth_per_year for row in known])
+    assert [value != 0.0 for value in widths(ax, "buy")] == [row.verdict == "buy" for row in known]
+    assert [thing for thing in weighed.rows if thing.verdict == "needed"], "those have no worth, and no bar"
+    assert names(ax)[-1].endswith("-4,179 a year; pays up to 78,207, asked 120,000")
+
+
 # ---------------------------------------------------------------- the line
 
 
@@ -286,13 +302,19 @@ def test_files_are_the_same_every_time(nines: Nines, tmp_path: Path) -> None:
 
 @pytest.mark.parametrize(
     ("command", "expected"),
-    [("plan", {"division", "line"}), ("today", {"line"}), ("nines", {"frontier"}), ("case", {"sensitivities"})],
+    [
+        ("plan", {"division", "line"}),
+        ("today", {"line"}),
+        ("nines", {"frontier"}),
+        ("case", {"sensitivities"}),
+        ("weigh", {"worth"}),
+    ],
 )
 def test_commands_write_svg_and_png(command: str, expected: set[str], tmp_path: Path) -> None:
     folder = tmp_path / "new" / "figures"
     answer = CliRunner().invoke(app, [command, str(FOLDER / "latch.toml"), "--json", "--figures", str(folder)])
     assert answer.exit_code == 0, answer.output
-    assert answer.stdout.startswith("{")
+    assert json.loads(answer.stdout)
     assert {path.name for path in folder.iterdir()} == {
         f"{name}{form}" for name in expected for form in (".svg", ".png")
     }

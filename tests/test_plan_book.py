@@ -148,3 +148,12 @@ def test_names_that_cannot_be_written_are_refused(name: str, said: str, tmp_path
     assert answer.exit_code == 2
     assert said in answer.stderr
     assert "Traceback" not in answer.stderr
+
+
+def test_what_the_plan_was_told_to_keep_to_and_what_that_costs(tmp_path: Path) -> None:
+    held = make_plan(read_scenario(FOLDER / "latch.toml"), hold={"stamp": {"ppm": 1_500}})
+    write_plan_book(held, tmp_path / "held.xlsx")
+    said = figures(openpyxl.load_workbook(tmp_path / "held.xlsx")["plan"])
+    added = next(values for name, values in said.items() if str(name).startswith("added by: "))
+    assert held.cost_of_restraint is not None
+    assert added[:2] == ("EUR/year", pytest.approx(held.cost_of_restraint))

@@ -71,7 +71,7 @@ def review(
 
 
 @app.command()
-def weigh(file: File, as_json: AsJson = False, as_csv: AsCsv = False) -> None:
+def weigh(file: File, figures: Figures = None, as_json: AsJson = False, as_csv: AsCsv = False) -> None:
     """Say what to buy and what to leave. As in: allocator weigh line.toml"""
     form = form_of(as_json, as_csv)
     from allocator import api
@@ -80,5 +80,6 @@ def weigh(file: File, as_json: AsJson = False, as_csv: AsCsv = False) -> None:
     with progress("weighing") as watch:
         answer = api.weigh_purchases(scenario, watch=watch)
     show(answer, form)
+    draw(answer, figures)
     if not answer.reached:
         raise typer.Exit(OUT_OF_REACH)

@@ -5,5 +5,6 @@ from allocator.figures.frontier import frontier
 from allocator.figures.levers import sensitivities
 from allocator.figures.save import save_figures
 from allocator.figures.tree import line
+from allocator.figures.worth import worth
 
-__all__ = ["division", "frontier", "line", "save_figures", "sensitivities"]
+__all__ = ["division", "frontier", "line", "save_figures", "sensitivities", "worth"]

@@ -11,8 +11,9 @@ from allocator.figures.division import division
 from allocator.figures.frontier import frontier
 from allocator.figures.levers import sensitivities
 from allocator.figures.tree import line
+from allocator.figures.worth import worth
 from allocator.files import written_aside
-from allocator.results import CapitalCase, Nines, Plan, Today
+from allocator.results import CapitalCase, Nines, Plan, Today, Weighed
 
 Draw = Callable[[Any], Any]
 FORMS = (".svg", ".png")
@@ -24,6 +25,7 @@ FIGURES: dict[type, tuple[tuple[str, Draw], ...]] = {
     Nines: (("frontier", frontier),),
     Today: (("line", line),),
     CapitalCase: (("sensitivities", sensitivities),),
+    Weighed: (("worth", worth),),
 }
 
 

@@ -120,6 +120,8 @@ def _figures(plan: Plan) -> Iterable[Sequence[Any]]:
     yield ["capital", money, plan.capital, None, plan.capital_limit]
     yield ["fall of the total per unit of defect budget", f"{money}/year", plan.price_of_defect_budget]
     yield ["the next nine, on top", f"{money}/year", plan.cost_of_next_nine]
+    if plan.restraint is not None:
+        yield [f"added by: {'; '.join(plan.restraint.what)}", f"{money}/year", plan.cost_of_restraint]
     best = plan.best_reachable
     if best is not None:
         name = words.yield_name(best.of)
