@@ -90,8 +90,9 @@ def rehearse(
     hand = _today(problem) if today else _plan(problem)
     most = float(np.exp(np.minimum(np.max(hand.flow.exponent), 700.0)))
     if most > HOPELESS:
+        many = f"{most:,.0f}" if most < 1e6 else "more than a million"
         raise OutOfReachError(
-            f"this line starts {most:,.0f} items for one that is shipped, too many to play through; rehearse a plan, "
+            f"this line starts {many} items for one that is shipped, too many to play through; rehearse a plan, "
             "or bring the worst steps into order first"
         )
     rng = np.random.default_rng(seed)
