@@ -56,9 +56,10 @@ def complaints(driver: Any) -> list[str]:
 
 
 def asked_for(driver: Any) -> list[str]:
-    """Every address that was asked for since the page was loaded."""
+    """Every address that was asked for since the page was loaded; the browser's own empty tab stays inside it."""
     messages = [json.loads(entry["message"])["message"] for entry in driver.get_log("performance")]
-    return [m["params"]["request"]["url"] for m in messages if m["method"] == "Network.requestWillBeSent"]
+    sent = [m["params"] for m in messages if m["method"] == "Network.requestWillBeSent"]
+    return [p["request"]["url"] for p in sent if not p["documentURL"].startswith("chrome")]
 
 
 def printed(driver: Any, width: float, height: float) -> bytes:

@@ -55,7 +55,7 @@ def _write_sheet(paper: Paper, supplier: SupplierSheet) -> None:
     paper.bullets([said for row in rows for said in remarks(row)], most=3 * len(rows))
     paper.say(PARTS)
     shares = [f"{BAD[bad]} bad,\n{share} %" for bad, _, _ in rows[0].parts_with_bad for share in (90, 95)]
-    paper.table(columns(["part"], shares), (parts_row(row) for row in rows), len(rows))
+    paper.table(columns(["part"], shares), (_parts_row(row) for row in rows), len(rows))
     paper.say(CPK)
     heads = columns(["part"], ["target", *(f"observed on\n{n} parts" for n, _ in rows[0].observed_cpk_needed)])
     paper.table(heads, (cpk_row(row) for row in rows), len(rows))
@@ -91,7 +91,7 @@ def remarks(row: Sheet) -> list[str]:
     return said
 
 
-def parts_row(row: Sheet) -> list[str]:
+def _parts_row(row: Sheet) -> list[str]:
     return [row.step, *(words.count(parts) for _, *both in row.parts_with_bad for parts in both)]
 
 

@@ -27,8 +27,9 @@ def page_html(review: ReviewPage) -> str:
     from jinja2 import Environment, FunctionLoader, StrictUndefined  # here: other reports should not wait for it
 
     environment = Environment(
-        loader=FunctionLoader(_read), autoescape=True, undefined=StrictUndefined, trim_blocks=True, lstrip_blocks=True
-    )
+        loader=FunctionLoader(_read), autoescape=True, undefined=StrictUndefined, trim_blocks=True, lstrip_blocks=True,
+        finalize=_kept_together,
+    )  # fmt: skip
     parts: dict[str, Any] = {
         "review": review,
         "said": said(review),
@@ -45,6 +46,11 @@ def page_html(review: ReviewPage) -> str:
         "script": _read("page.js"),
     }
     return environment.get_template("page.html").render(parts)
+
+
+def _kept_together(value: Any) -> Any:
+    """A figure and its per cent sign stay on one line."""
+    return value.replace(" %", "\u00a0%") if type(value) is str else value
 
 
 def _read(name: str) -> str:

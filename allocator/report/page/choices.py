@@ -22,6 +22,7 @@ class Choice:
     capital: str
     start: float
     width: float
+    gains: bool
     turns: list[str]
     against: list[str]
 
@@ -77,6 +78,7 @@ def _choice(row: Weighing, scale: Scale, money: str) -> Choice:
         capital=words.money(row.capital) if row.capital else "",
         start=low,
         width=round(high - low, 2),
+        gains=worth is None or worth >= 0.0,
         turns=_turns(row, money),
         against=[words.clean(text) for text in row.against],
     )
@@ -85,16 +87,17 @@ def _choice(row: Weighing, scale: Scale, money: str) -> Choice:
 def _turns(row: Weighing, money: str) -> list[str]:
     """Where the verdict turns: price, volume, and how good it must really be."""
     texts = []
-    if row.break_even_price is not None:
-        pays = "pays up to" if row.verdict != "leave" else "would pay at"
-        texts.append(f"{pays} {words.money(row.break_even_price)} {money}")
-    elif row.break_even_price_factor is not None:
-        texts.append(f"pays up to {words.number(row.break_even_price_factor)} times its cost")
-    if row.pays_from == "a volume" and row.break_even_volume is not None:
-        texts.append(f"from {words.number(row.break_even_volume)} units a year")
-    elif row.pays_from in ("any volume", "no volume") and row.verdict != "needed":
-        texts.append(f"at {row.pays_from} looked at")
+    pays = "would pay" if row.verdict == "leave" else "pays"
+    if row.kind == "law":
+        if row.break_even_price_factor is not None:
+            texts.append(f"{pays} up to {words.number(row.break_even_price_factor)} times its cost")
+    elif row.break_even_price is not None:
+        texts.append(f"{pays} up to a price of {words.money(row.break_even_price)} {money}")
+    if row.break_even_volume is not None:
+        texts.append(f"{pays} from {words.number(row.break_even_volume)} units a year")
+    elif row.verdict != "needed":
+        texts.append(f"{pays} at {row.pays_from}")
     level = row.break_even_capability
     if level is not None:
-        texts.append(f"if it reaches {words.fixed(level.sigma_level)} sigma (Cpk {words.fixed(level.cpk)})")
+        texts.append(f"{pays} if it reaches {words.fixed(level.sigma_level)} sigma (Cpk {words.fixed(level.cpk)})")
     return texts

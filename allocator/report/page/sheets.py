@@ -16,7 +16,8 @@ class OneSheet:
     supplier: str
     asked: list[list[str]]
     parts_heads: list[str]
-    parts: list[list[str]]
+    parts: list[tuple[str, list[tuple[str, str]]]]
+    """By part, for each number of bad ones: parts at 90 % and at 95 %."""
     cpk_heads: list[str]
     cpk: list[list[str]]
     remarks: list[str]
@@ -60,8 +61,8 @@ def _sheet(supplier: SupplierSheet) -> OneSheet:
     return OneSheet(
         supplier=words.clean(supplier.supplier),
         asked=[_asked(row) for row in rows],
-        parts_heads=[f"{st.BAD[bad]} bad, {share} %" for bad, _, _ in rows[0].parts_with_bad for share in (90, 95)],
-        parts=[[words.clean(row.step), *st.parts_row(row)[1:]] for row in rows],
+        parts_heads=[f"{st.BAD[bad]} bad" for bad, _, _ in rows[0].parts_with_bad],
+        parts=[(words.clean(row.step), _parts(row)) for row in rows],
         cpk_heads=[f"on {parts} parts" for parts, _ in rows[0].observed_cpk_needed],
         cpk=[[words.clean(row.step), *st.cpk_row(row)[1:]] for row in rows],
         remarks=[
@@ -70,6 +71,10 @@ def _sheet(supplier: SupplierSheet) -> OneSheet:
         ],
         last_word=blocks.SAFETY_WORD.format(steps=words.listed(safety)) if safety else blocks.LAST_WORD,
     )
+
+
+def _parts(row: Sheet) -> list[tuple[str, str]]:
+    return [(words.count(at_90), words.count(at_95)) for _, at_90, at_95 in row.parts_with_bad]
 
 
 def _asked(row: Sheet) -> list[str]:
