@@ -6,7 +6,7 @@ import argparse
 import re
 import sys
 
-from tests.benchmarks.cases import ROOT, cases, end_to_end
+from tests.benchmarks.cases import ROOT, Case, cases, end_to_end
 from tests.benchmarks.table import text_of
 
 README = ROOT / "README.md"
@@ -22,11 +22,16 @@ def main() -> None:
     parser.add_argument("--write", action="store_true", help="put the table into the README")
     asked = parser.parse_args()
     most, seconds = (QUICK_MOST, 30.0) if asked.quick else (asked.most, asked.seconds)
-    measured = []
-    for case in cases(most, seconds):
-        print(f"measured {case.shape.steps:,} steps, {case.shape}", file=sys.stderr)
-        measured.append(case)
-    text = text_of(measured, end_to_end(min(ROWS, most)))
+    measured: list[Case] = []
+    whole = None
+    try:
+        for case in cases(most, seconds):
+            print(f"measured {case.shape.steps:,} steps, {case.shape}", file=sys.stderr)
+            measured.append(case)
+        whole = end_to_end(min(ROWS, most))
+    except KeyboardInterrupt:
+        print("stopped: the table holds what was measured so far", file=sys.stderr)
+    text = text_of(measured, whole)
     print(text)
     if asked.write:
         README.write_text(TABLE.sub(lambda found: found[1] + text + "\n" + found[2], README.read_text()))
