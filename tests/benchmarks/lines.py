@@ -50,7 +50,7 @@ class Shape:
 
 @dataclass(frozen=True)
 class Drawn:
-    """The figures of a line, arrays of shape (n_steps,), offers of shape (n_steps, OFFERS)."""
+    """The figures of a line, arrays of shape (n_steps,), offers of shape (n_steps, OFFERS) where it is mixed."""
 
     shape: Shape
     feeds: NDArray[np.int64]
@@ -60,9 +60,9 @@ class Drawn:
     cost_added: Array
     law: NDArray[np.int64]
     scale: Array
-    offer_level: Array
-    offer_cost: Array
     budget: float
+    offer_level: Array | None = None
+    offer_cost: Array | None = None
 
 
 def draw(shape: Shape, seed: int = 1) -> Drawn:
@@ -79,19 +79,26 @@ def draw(shape: Shape, seed: int = 1) -> Drawn:
     log_p = np.log(-np.expm1(-defects / opportunities))
     z = np.asarray(cv.sigma_from_log_defects(log_p, k, shift, sides), dtype=float)
     levels = Levels(z, shift, k, sides, np.zeros(n, dtype=bool))
-    decades = rng.uniform(0.1, 1.6, (n, OFFERS))
-    lower = log_p[:, None] - np.log(10.0) * decades
-    offers = cv.sigma_from_log_defects(lower, k[:, None], shift[:, None], sides[:, None])
     scale = DEARER[shape.yields] * 10 ** rng.uniform(2.0, 4.0, n)
     return Drawn(
         shape, feeds, per_unit, levels, opportunities,
         cost_added=rng.uniform(0.005, 0.05, n),
         law=rng.integers(0, len(LAWS), n),
         scale=scale,
-        offer_level=np.asarray(offers, dtype=float),
-        offer_cost=scale[:, None] * decades * 10 ** rng.uniform(-0.3, 0.3, (n, OFFERS)),
         budget=KEPT[shape.kind] * LOSSES[shape.yields],
+        **(_offers_drawn(levels, log_p, scale, rng) if shape.kind == "mixed" else {}),
     )  # fmt: skip
+
+
+def _offers_drawn(levels: Levels, log_p: Array, scale: Array, rng: np.random.Generator) -> dict[str, Array]:
+    """Return level and yearly cost of the machines on offer: the better the dearer, but not strictly."""
+    decades = rng.uniform(0.1, 1.6, (len(scale), OFFERS))
+    lower = log_p[:, None] - np.log(10.0) * decades
+    k, shift, sides = levels.k[:, None], levels.shift[:, None], levels.sides[:, None]
+    return {
+        "offer_level": np.asarray(cv.sigma_from_log_defects(lower, k, shift, sides), dtype=float),
+        "offer_cost": scale[:, None] * decades * 10 ** rng.uniform(-0.3, 0.3, (len(scale), OFFERS)),
+    }
 
 
 def _tree(n: int, rng: np.random.Generator) -> tuple[NDArray[np.int64], Array]:
