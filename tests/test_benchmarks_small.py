@@ -1,4 +1,4 @@
-"""Do the benchmarks measure what they say, on short lines: same questions, peers that agree."""
+"""Do the benchmarks measure what they say, on short lines: same questions, peers that agree, a table that is kept."""
 
 from __future__ import annotations
 
@@ -10,6 +10,7 @@ import pytest
 from allocator.problem import pose
 from allocator.scenario.read import scenario_from_dict
 from allocator.solve.road import solve
+from tests.benchmarks.__main__ import README, TABLE
 from tests.benchmarks.cases import LINES, SIZES, measure
 from tests.benchmarks.lines import Shape, draw, problem_of, scenario_of
 from tests.benchmarks.run import GAP, beside
@@ -94,3 +95,10 @@ def test_what_was_measured_is_laid_out_with_its_notes() -> None:
 def test_a_peer_is_stopped_in_time() -> None:
     case = measure(Shape(20, "mixed"), seconds=0.05)
     assert case.peers["whole"] == {"stopped": "stopped after 0.05 s"}
+
+
+def test_the_readme_keeps_a_table_of_every_size() -> None:
+    found = TABLE.search(README.read_text())
+    assert found is not None
+    for steps in {steps for sizes in SIZES.values() for steps in sizes}:
+        assert f"{steps:,}  " in found[0]

@@ -98,11 +98,11 @@ def _peer_cell(case: Case, peer: str) -> tuple[str, str]:
         return ("not run", "") if case.shape.steps > MOST[peer] else ("-", "")
     if "seconds" not in record:
         return "no plan", record.get("stopped", "no plan that keeps the budget")
-    cell = f"{record['seconds']:.3g} {record['seconds'] / record['ours']:,.0f}x"
+    times = f"{record['seconds'] / record['ours']:,.0f}x"
     if record["gap"] <= GAP[case.shape.kind]:
-        return cell, ""
+        return f"{record['seconds']:.3g} {times}", ""
     why = record.get("stopped", "nothing gained any more")
-    return cell, f"got to {record['gap']:.0e} only: {why}"
+    return f"{record['seconds']:.3g} >{times}", f"got to {record['gap']:.0e} only: {why}"
 
 
 def _line(yields: str, tree: bool) -> str:
