@@ -11,7 +11,7 @@ from allocator.problem import pose
 from allocator.scenario.read import scenario_from_dict
 from allocator.solve.road import solve
 from tests.benchmarks.__main__ import README, TABLE
-from tests.benchmarks.cases import LINES, SIZES, measure
+from tests.benchmarks.cases import LINES, SIZES, last_record, measure
 from tests.benchmarks.lines import Shape, draw, problem_of, scenario_of
 from tests.benchmarks.run import GAP, beside
 from tests.benchmarks.table import text_of
@@ -86,15 +86,15 @@ def test_what_was_measured_is_laid_out_with_its_notes() -> None:
     case = measure(Shape(20, "mixed"), seconds=60.0)
     assert case.ours["peak_MiB"] > 10.0
     text = text_of([case], {"steps": 20, "seconds": 1.0, "wall": 1.2, "peak_MiB": 90.0, "gap": 1e-12, "exit": 0})
-    assert f"{case.peers['whole']['seconds'] / case.peers['whole']['ours']:,.0f}x" in text
+    assert f" {case.peers['whole']['seconds']:.3g} " in text
     assert "high serial" in text
     case.peers["whole"] |= {"gap": 1e-3, "stopped": "stopped after 1 s"}
     assert "got to 1e-03 only: stopped after 1 s" in text_of([case], None)
 
 
 def test_a_peer_is_stopped_in_time() -> None:
-    case = measure(Shape(20, "mixed"), seconds=0.05)
-    assert case.peers["whole"] == {"stopped": "stopped after 0.05 s"}
+    record = last_record(Shape(20_000), "CLARABEL", seconds=4.0)
+    assert record["stopped"] == "stopped after 4 s"
 
 
 def test_the_readme_keeps_a_table_of_every_size() -> None:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import csv
 import json
 import os
+import signal
 import subprocess
 import sys
 import tempfile
@@ -61,23 +62,19 @@ def measure(shape: Shape, seconds: float) -> Case:
 
 
 def last_record(shape: Shape, peer: str | None, seconds: float) -> Record:
-    """Return all that a process said, later records over earlier ones, with "stopped" where it had to be ended."""
-    asked = json.dumps({"shape": asdict(shape), "peer": peer})
+    """Return all that a process said, later records over earlier ones; "stopped" where its processor time ran out."""
+    asked = json.dumps({"shape": asdict(shape), "peer": peer, "seconds": seconds})
     command = [sys.executable, "-m", "tests.benchmarks.run", asked]
     process = subprocess.Popen(command, cwd=ROOT, env=os.environ | ENVIRONMENT, stdout=subprocess.PIPE, text=True)
-    stopped: Record = {}
-    try:
-        said, _ = process.communicate(timeout=seconds)
-    except subprocess.TimeoutExpired:
-        process.kill()
-        said, _ = process.communicate()
-        stopped = {"stopped": f"stopped after {seconds:g} s"}
+    said, _ = process.communicate()
     record: Record = {}
     for line in said.splitlines():
         record |= json.loads(line)
-    if process.returncode and not stopped:
-        stopped = {"stopped": f"ended with code {process.returncode}"}
-    return record | stopped
+    if process.returncode == -signal.SIGXCPU:
+        record["stopped"] = f"stopped after {seconds:g} s"
+    elif process.returncode:
+        record["stopped"] = f"ended with code {process.returncode}"
+    return record
 
 
 def end_to_end(steps: int) -> Record:

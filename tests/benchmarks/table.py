@@ -79,8 +79,8 @@ def peers_table(kind: str, measured: Sequence[Case]) -> str:
         for peer in names:
             cell, note = _peer_cell(case, peer)
             if note:
-                notes.append(note)
-                cell += f" [{len(notes)}]"
+                notes += [note] if note not in notes else []
+                cell += f" [{notes.index(note) + 1}]"
             cells.append(cell)
         ours = min((r["ours"] for r in case.peers.values() if "ours" in r), default=math.nan)
         rows.append([f"{case.shape.steps:,}", _line(case.shape.yields, case.shape.tree), f"{ours:.3g}", *cells])
@@ -98,7 +98,8 @@ def _peer_cell(case: Case, peer: str) -> tuple[str, str]:
         return ("not run", "") if case.shape.steps > MOST[peer] else ("-", "")
     if "seconds" not in record:
         return "no plan", record.get("stopped", "no plan that keeps the budget")
-    times = f"{record['seconds'] / record['ours']:,.0f}x"
+    ratio = record["seconds"] / record["ours"]
+    times = f"{ratio:,.0f}x" if ratio >= 10.0 else f"{ratio:.1f}x"
     if record["gap"] <= GAP[case.shape.kind]:
         return f"{record['seconds']:.3g} {times}", ""
     why = record.get("stopped", "nothing gained any more")
