@@ -49,7 +49,7 @@ class Market:
     def __init__(
         self, curves: Curves, z_low: Array, z_high: Array, pieces: dict[int, tuple[Array, Array]] | None = None
     ) -> None:
-        self.size = len(z_low)
+        self.size, self.scale = len(z_low), curves.scale
         self.straight = np.zeros(self.size, dtype=bool)
         self.straight[list(pieces or ())] = True
         moves = (z_high > z_low) & ~self.straight

@@ -18,6 +18,10 @@ Array = NDArray[np.float64]
 Index = NDArray[np.int64]
 PRICE_STEPS = 60
 CLOSE = 1e-13
+WIDEST = 30.0
+"""Most by which the price is changed at once in search of the other side."""
+BOUND_CLOSE = 1e-11
+"""Share of the bound that may be left in it: far below the gaps that are promised."""
 LONGEST_LIST = 20_000
 CORE_STEPS = 40
 """Steps whose second-best ways are close enough to the best to be worth combining."""
@@ -75,41 +79,67 @@ def _still_to_gain(market: Market, answers: Answers, per_way: Array) -> Array:
 def balance_menu(menu: Menu, slope: Array, weight: Array, free: float, start: float) -> tuple[Priced, Priced | None]:
     """Return the priced menus just under and just over the budget `free` (None where the budget does not bind).
 
-    The price is bracketed by factors from `start` and then halved on a logarithmic scale, with regula falsi where the
-    load changes smoothly.
+    The price is bracketed by factors from `start` > 0 and narrowed by secants of the load, by the tangents of the bound
+    and by halving, in turn.
     """
-    nothing = price_menu(menu, slope, weight, 0.0)
-    if nothing.load <= free:
-        return nothing, None
-    over, under = nothing, price_menu(menu, slope, weight, max(start, 1e-9))
+    under, over = price_menu(menu, slope, weight, start), None
     factor = 1.3
     while under.load > free:
-        over = under
-        under = price_menu(menu, slope, weight, under.price * factor)
-        factor = min(factor**2, 1e4)
+        over, under = under, price_menu(menu, slope, weight, under.price * factor)
+        factor = min(factor**2, WIDEST)
         if under.price > 1e200:
             return under, over
-    if over.price == 0.0:
-        trial, factor = under, 1.3
-        while trial.load <= free and trial.price > 1e-12:
+    while over is None:
+        trial = price_menu(menu, slope, weight, under.price / factor if under.price > 1e-9 * start else 0.0)
+        factor = min(factor**2, WIDEST)
+        if trial.load > free:
+            over = trial
+        elif trial.price == 0.0:
+            return trial, None
+        else:
             under = trial
-            trial = price_menu(menu, slope, weight, trial.price / factor)
-            factor = min(factor**2, 1e4)
-        over = trial if trial.load > free else nothing
     return _narrow(menu, slope, weight, free, under, over)
 
 
+def first_price(menu: Menu, free: float) -> float:
+    """Return a price of the right size: what steps differ by between their ways, per unit of budget."""
+    spread = np.maximum.reduceat(menu.fixed, menu.first) - np.minimum.reduceat(menu.fixed, menu.first)
+    laws = np.maximum.reduceat(menu.market.scale, menu.first)
+    return max(float(np.sum(spread) + np.sum(laws)), 1e-9) / max(free, 1e-300)
+
+
 def _narrow(menu: Menu, slope: Array, weight: Array, free: float, under: Priced, over: Priced) -> tuple[Priced, Priced]:
+    """Draw both sides together until no price between them could lift the bound: it is concave in the price."""
     for turn in range(PRICE_STEPS):
-        if under.price - over.price <= CLOSE * under.price or free - under.load <= CLOSE * free:
+        crossing, most = _tangents_meet(under, over, free)
+        known = max(_bound(under, free), _bound(over, free))
+        if most - known <= BOUND_CLOSE * abs(most) or under.price - over.price <= CLOSE * under.price:
             break
-        guess = 0.5 * (under.price + over.price) if turn % 3 == 2 else _secant(under, over, free)
+        guess = (_secant(under, over, free), crossing, _middle(under.price, over.price))[turn % 3]
         middle = price_menu(menu, slope, weight, min(max(guess, over.price), under.price))
         if middle.load <= free:
             under = middle
         else:
             over = middle
     return under, over
+
+
+def _middle(high: float, low: float) -> float:
+    """Return a price half way, on a logarithmic scale while the ends are far apart."""
+    return float(np.sqrt(high * low)) if 0.0 < 4.0 * low < high else 0.5 * (high + low)
+
+
+def _bound(side: Priced, free: float) -> float:
+    return float(np.sum(side.value[side.best])) - side.price * free
+
+
+def _tangents_meet(under: Priced, over: Priced, free: float) -> tuple[float, float]:
+    """Return the price at which the tangents of the bound on both sides meet, and their height there."""
+    low, high, width = _bound(over, free), _bound(under, free), under.price - over.price
+    rise, fall = over.load - free, free - under.load
+    share = (high - low + fall * width) / (rise + fall) if rise + fall > 0.0 else 0.5 * width
+    share = min(max(share, 0.0), width)
+    return over.price + share, low + rise * share
 
 
 def _secant(under: Priced, over: Priced, free: float) -> float:

@@ -1,43 +1,26 @@
 """Equipment by price: passes of pricing, filling the budget and exact evaluation, for lines of any length.
 
 It serves where one budget couples the steps, their gates are not a choice and nothing is bought together; the bound is
-the priced Lagrangian at the tangent of scrap, lifted where the remainder could be settled whole.
+the priced Lagrangian at the tangent of scrap, lifted where the remainder could be settled whole or branched over.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
-from allocator.problem import COST, Problem, within
+from allocator.problem import COST, Problem
 from allocator.scenario.model import YIELD_NAMES
 from allocator.solve.answers import Market
-from allocator.solve.choose import Index, Menu, Priced, balance_menu, fill_budget, price_menu
+from allocator.solve.branch import branch, tangent_at
+from allocator.solve.choose import Index, Menu, Priced, balance_menu, fill_budget, first_price, price_menu
 from allocator.solve.fixed import FixedAnswer, solve_fixed
-from allocator.solve.price import Duty, Near, build_duty
-from allocator.solve.reduce import first_ways, gates_given, gates_of_first
+from allocator.solve.price import Near, build_duty
+from allocator.solve.reduce import gates_given, gates_of_first
 
-Array = NDArray[np.float64]
 PASSES = 12
-
-
-@dataclass
-class _Found:
-    """The best answer and bound so far."""
-
-    best: FixedAnswer | None = None
-    bound: float = -np.inf
-    extra: Array = field(default_factory=lambda: np.zeros(0))
-    """What each way adds to `extra_bound`, the bound of the last pass, at the least."""
-    extra_bound: float = -np.inf
-
-    def gap(self) -> float:
-        if self.best is None:
-            return float("inf")
-        total = self.best.outcome.money.total
-        return (total - self.bound) / max(abs(total), 1.0)
 
 
 def serves(problem: Problem) -> bool:
@@ -72,7 +55,7 @@ class ByPrice:
     excluded: NDArray[np.bool_]
 
 
-def solve_by_price(problem: Problem, gap: float, near: Near | None = None) -> ByPrice | None:
+def solve_by_price(problem: Problem, gap: float, near: Near | None = None, seconds: float = 0.0) -> ByPrice | None:
     """Return the best answer with its bound, None where no choice that keeps the limits was found.
 
     Parameters
@@ -83,74 +66,122 @@ def solve_by_price(problem: Problem, gap: float, near: Near | None = None) -> By
         Relative gap at which to stop.
     near : Near, optional
         What is known from a neighbouring question.
+    seconds : float
+        Time for branching over what one price leaves open.
     """
-    ways, line = problem.options.ways, problem.line
-    first = first_ways(problem)
-    fixed = ways.fixed_cost + (line.shipped * line.per_finished)[ways.step] * ways.gates.per_item
-    market = Market(ways.curves, ways.z_low, ways.z_high, ways.lines.pieces)
-    menu = Menu(market, first, ways.step, fixed)
-    budgets = {problem.split: problem.budgets[problem.split]} if problem.split in problem.budgets else {}
-    duty = build_duty(line, gates_of_first(problem), budgets)
-    here, price, found = np.minimum.reduceat(market.low, first), 1.0, _Found()
-    if near is not None:
-        here, price = near.intensity, near.prices.get(problem.split) or 1.0
+    search = _Search(problem, near)
     for _ in range(PASSES):
-        before = found.best
-        rows, price = _one_pass(problem, menu, duty, here, price, found)
-        if rows is not None:
-            _offer(problem, rows, found)
-        if found.gap() <= gap or (found.best is before and before is not None):
+        before = search.value, search.bound
+        search.one_pass()
+        if search.gap() <= gap or (search.value, search.bound) == before:
             break
-        if found.best is not None:
-            here = found.best.outcome.flow.intensity
-    if found.best is None:
+        search.shrink()
+    if search.best is None:
         return None
-    total = found.best.outcome.money.total
-    excluded = found.extra > total - found.extra_bound + 1e-9 * abs(total)
-    excluded[found.best.outcome.choice.rows] = False
-    return ByPrice(found.best, found.bound, excluded)
+    if search.gap() > gap and seconds > 0.0 and search.duty.loads:
+        search.branch(gap, seconds)
+    return ByPrice(search.best, search.bound, search.excluded())
 
 
-def _offer(problem: Problem, rows: Index, found: _Found) -> None:
-    hopeless = None if found.best is None else found.best.outcome.money.total
-    answer = solve_fixed(problem, rows, hopeless)
-    if answer is not None and (hopeless is None or answer.outcome.money.total < hopeless):
-        found.best = answer
+class _Search:
+    """What is known so far: the best answer and bound, and the ways (`rows`) that a better plan can still take."""
+
+    def __init__(self, problem: Problem, near: Near | None) -> None:
+        self.problem, self.rows = problem, np.arange(len(problem.options.ways))
+        budgets = {k: budget for k, budget in problem.budgets.items() if k == problem.split}
+        self.duty = build_duty(problem.line, gates_of_first(problem), budgets)
+        self.menu = _menu(problem, self.rows)
+        self.best: FixedAnswer | None = None
+        self.bound = -np.inf
+        self.tried: set[bytes] = set()
+        self.extra, self.extra_bound = np.zeros(len(self.rows)), -np.inf
+        self.here = np.minimum.reduceat(self.menu.market.low, self.menu.first)
+        self.price = 0.0
+        if self.duty.loads:
+            _, used, budget = self.duty.loads[0]
+            self.price = first_price(self.menu, budget - used)
+        if near is not None:
+            self.here, self.price = near.intensity, near.prices.get(problem.split) or self.price
+
+    @property
+    def value(self) -> float:
+        return np.inf if self.best is None else self.best.outcome.money.total
+
+    def gap(self) -> float:
+        return (self.value - self.bound) / max(abs(self.value), 1.0) if self.best is not None else np.inf
+
+    def one_pass(self) -> None:
+        """Price the menu at the tangent of scrap seen last, lift the bound, and offer what answers."""
+        tangent = tangent_at(self.duty, self.here)
+        if not self.duty.loads:
+            priced = price_menu(self.menu, tangent.slope, tangent.slope, 0.0)
+            self._note(priced, tangent.rest + least(priced))
+            self.offer(priced.best)
+            return
+        weight, used, budget = self.duty.loads[0]
+        free = budget - used
+        under, over = balance_menu(self.menu, tangent.slope, weight, free, self.price)
+        self.price = under.price or self.price
+        sides = [side for side in (under, over) if side is not None]
+        bounds = [tangent.rest + least(side) - side.price * free for side in sides]
+        best = int(np.argmax(bounds))
+        self._note(sides[best], bounds[best])
+        for side in sides:
+            self.offer(side.best)
+        if over is not None and self.best is not None and self.menu.market.still:
+            rows, lift = fill_budget(self.menu, weight, free, sides[best], max(self.value - bounds[best], 0.0))
+            self.bound = max(self.bound, bounds[best] + lift)
+            if rows is not None:
+                self.offer(rows)
+
+    def offer(self, chosen: Index) -> float:
+        """Evaluate one way per step, given as rows of the menu, and return the least total so far."""
+        rows = self.rows[chosen]
+        if rows.tobytes() not in self.tried:
+            self.tried.add(rows.tobytes())
+            hopeless = None if self.best is None else self.value
+            near = Near(self.here, {self.problem.split: self.price} if self.price else {})
+            answer = solve_fixed(self.problem, rows, hopeless, near)
+            if answer is not None and answer.outcome.money.total < self.value:
+                self.best, self.here = answer, answer.outcome.flow.intensity
+        return self.value
+
+    def shrink(self) -> None:
+        """Leave out of the menu what no better plan takes."""
+        kept = np.flatnonzero(~self.excluded()[self.rows])
+        if 2 * len(kept) < len(self.rows):
+            self.rows = self.rows[kept]
+            self.menu, self.extra = _menu(self.problem, self.rows), self.extra[kept]
+
+    def branch(self, gap: float, seconds: float) -> None:
+        """Branch over the ways left."""
+        self.shrink()
+        tangent = tangent_at(self.duty, self.here)
+        bound = branch(self.menu, self.duty, tangent, self.price, self.offer, gap, seconds)
+        self.bound = max(self.bound, min(bound, self.value))
+
+    def excluded(self) -> NDArray[np.bool_]:
+        """Return the ways of the problem that no better plan takes."""
+        dropped = np.ones(len(self.problem.options.ways), dtype=bool)
+        dropped[self.rows] = self.extra > self.value - self.extra_bound + 1e-9 * abs(self.value)
+        if self.best is not None:
+            dropped[self.best.outcome.choice.rows] = False
+        return dropped
+
+    def _note(self, priced: Priced, bound: float) -> None:
+        """Keep the bound, and what each way would add to it at the least."""
+        self.bound = max(self.bound, bound)
+        self.extra, self.extra_bound = priced.value - priced.value[priced.best][self.menu.step], bound
 
 
-def _one_pass(
-    problem: Problem, menu: Menu, duty: Duty, here: Array, price: float, found: _Found
-) -> tuple[Index | None, float]:
-    """Price the menu at the tangent in `here`, lift the bound, and return the choice that fills the budget."""
-    money, slope = duty.money(here)
-    rest = money - float(slope @ here)
-    if not duty.loads:
-        priced = price_menu(menu, slope, slope, 0.0)
-        _note(menu, found, priced, rest + _least(menu, priced))
-        return priced.best, 0.0
-    weight, used, budget = duty.loads[0]
-    free = budget - used
-    under, over = balance_menu(menu, slope, weight, free, price)
-    sides = [side for side in (under, over) if side is not None]
-    bounds = [rest + _least(menu, side) - side.price * free for side in sides]
-    tightest = int(np.argmax(bounds))
-    _note(menu, found, sides[tightest], bounds[tightest])
-    if over is None:
-        return under.best, 0.0
-    if not within(under.load, free):
-        return None, under.price
-    if found.best is None:
-        _offer(problem, under.best, found)
-    allowed = np.inf if found.best is None else max(found.best.outcome.money.total - bounds[tightest], 0.0)
-    rows, lift = fill_budget(menu, weight, free, sides[tightest], allowed)
-    found.bound = max(found.bound, bounds[tightest] + lift)
-    return (under.best if rows is None else rows), under.price
+def _menu(problem: Problem, rows: Index) -> Menu:
+    ways, line = problem.options.ways, problem.line
+    step = ways.step[rows]
+    per_item = (line.shipped * line.per_finished)[step] * ways.gates.per_item[rows]
+    market = Market(ways.curves.take(rows), ways.z_low[rows], ways.z_high[rows], ways.lines.take(rows).pieces)
+    first = np.searchsorted(step, np.arange(line.n_steps)).astype(np.int64)
+    return Menu(market, first, step, ways.fixed_cost[rows] + per_item)
 
 
-def _note(menu: Menu, found: _Found, priced: Priced, bound: float) -> None:
-    found.bound = max(found.bound, bound)
-    found.extra, found.extra_bound = priced.value - priced.value[priced.best][menu.step], bound
-
-
-def _least(menu: Menu, priced: Priced) -> float:
+def least(priced: Priced) -> float:
     return float(np.sum(priced.value[priced.best]))

@@ -95,12 +95,11 @@ def _by_size(
         answer = solve_fixed(problem, fewest_defects(problem))
         return None if answer is None else _solved(problem, answer, answer.bound, "every step at its best")
     if serves(problem):
-        priced = solve_by_price(problem, GAP, near)
+        priced = solve_by_price(problem, GAP_PRICED, near, SECONDS_LEFT)
         if priced is not None:
             solved = _solved(problem, priced.best, priced.bound, PRICE_METHOD)
-            if solved.gap <= GAP_PRICED or problem.line.n_steps > LONGEST_MASTER:
-                return solved
-            return _settle_remainder(problem, priced, solved, GAP_PRICED)
+            small = len(problem.budgets) > 1 and problem.line.n_steps <= LONGEST_MASTER
+            return _settle_remainder(problem, priced, solved) if small and solved.gap > GAP_PRICED else solved
     return _branch_and_bound(problem, starts, gap, enough)
 
 
@@ -115,13 +114,13 @@ def _branch_and_bound(
     return _solved(problem, search.best, search.bound, "cutting planes and branch and bound")
 
 
-def _settle_remainder(problem: Problem, priced: ByPrice, solved: Solved, gap: float) -> Solved:
+def _settle_remainder(problem: Problem, priced: ByPrice, solved: Solved) -> Solved:
     """Branch and bound over the ways that the price could not exclude; what is excluded is in no better plan."""
     kept = np.flatnonzero(~priced.excluded)
     small = replace(problem, options=replace(problem.options, ways=problem.options.ways.take(kept)))
     rows = np.searchsorted(kept, priced.best.outcome.choice.rows).astype(np.int64)
     try:
-        search = solve_mixed(small, [rows], gap, SECONDS_LEFT)
+        search = solve_mixed(small, [rows], GAP_PRICED, SECONDS_LEFT)
     except SolverError:
         return solved  # The priced answer stands with its own proof.
     assert search.best is not None
