@@ -20,6 +20,8 @@ from allocator.curves import Curves
 Array = NDArray[np.float64]
 ROOT_TWO_PI = float(np.sqrt(2.0 * np.pi))
 NEWTON_STEPS = 30
+ONE_STEP_LEFT = 1e-7
+"""A step this small [σ] is the last: each one squares what is off."""
 SETTLED = 1e-11
 """A level has settled when a step moves it by less than this [σ]; what is left is charged to the bound."""
 
@@ -141,13 +143,18 @@ class _Sloped:
             off = log_slope - np.log(-rise) - log_price
             steep = log_slope_rise - bend / rise
             moved = np.clip(z - off / steep, self.z_low, self.z_high)
-            settled = bool(np.max(np.abs(moved - z), initial=0.0) < SETTLED)
+            step = float(np.max(np.abs(moved - z), initial=0.0))
+            if step < SETTLED:
+                break  # What is known at z itself serves: nothing is left to gain that counts.
             z = moved
-            if settled:
+            if step < ONE_STEP_LEFT:
+                delta, rise, bend = self.intensity(z)
+                log_slope, log_slope_rise = self.log_cost_slope(z)
                 break
+        else:
+            delta, rise, bend = self.intensity(z)
+            log_slope, log_slope_rise = self.log_cost_slope(z)
         self.z = z
-        delta, rise, bend = self.intensity(z)
-        log_slope, log_slope_rise = self.log_cost_slope(z)
         slope = np.exp(log_slope) / rise
         inside = (z > self.z_low) & (z < self.z_high)
         # C'' = −C'·(d ln C'(z)/dz − δ''/δ')/δ' … in z terms: dδ/dπ = −δ'/(π·d(off)/dz).

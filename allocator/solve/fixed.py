@@ -106,8 +106,11 @@ def _by_price(
     aside = _money_aside(problem, rows, gates)
     duty = build_duty(line, gates, problem.budgets)
     cleared = clear(market, duty, curves, GAP, near, np.inf if hopeless is None else hopeless - aside)
+    if cleared is None:
+        return None
     many = int(ways.moves[rows].sum()) > MOST_LEVELS
-    if cleared is None or (cleared.gap > 10.0 * GAP and not many):
+    given_up = hopeless is not None and cleared.bound + aside > hopeless
+    if cleared.gap > 10.0 * GAP and not many and not given_up:
         return None
     z = ways.z_low[rows].copy()
     moving = np.flatnonzero(ways.moves[rows])
