@@ -43,6 +43,11 @@ class Caps:
     def words(self, i: int) -> str:
         return CAP_WORDS[self.code[i]].format(self.high[i])
 
+    def all_words(self, rows: Indices) -> list[str]:
+        """Return the words of some states."""
+        stated = zip(self.code[rows].tolist(), self.high[rows].tolist(), strict=True)
+        return [CAP_WORDS[code].format(high) if code == STATED else CAP_WORDS[code] for code, high in stated]
+
 
 @dataclass(frozen=True)
 class Reaches:

@@ -118,9 +118,8 @@ def states_today(scenario: Scenario) -> States:
 
 
 def _objects(values: Sequence[object]) -> Objects:
-    found = np.empty(len(values), dtype=object)
-    found[:] = values
-    return found
+    # fromiter, because assigning to a slice asks every record first whether it is an array.
+    return np.fromiter(values, dtype=object, count=len(values))
 
 
 def states_with(today: States, picks: Picks) -> States:

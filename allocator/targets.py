@@ -74,7 +74,7 @@ def _choice_words(ways: Ways, outcome: Outcome) -> dict[str, list[Any]]:
         "alternatives": text.alternatives(),
         "law": [NAME.get(kind) for kind in np.where(raised, text.kind, cv.NONE).tolist()],
         "at_cap": at_cap.tolist(),
-        "cap": [text[i].cap if capped else None for i, capped in enumerate(at_cap.tolist())],
+        "cap": [cap if capped else None for cap, capped in zip(text.caps_in_words(), at_cap.tolist(), strict=True)],
     }
 
 

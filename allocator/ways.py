@@ -68,6 +68,10 @@ class Texts:
         names = [a.name for a in self.picks.alternatives]
         return [tuple([names[m] for m in chosen if m >= 0]) for chosen in self.picks.members[self.pick].tolist()]
 
+    def caps_in_words(self) -> list[str]:
+        """Return what caps every way."""
+        return self.caps.all_words(self.pick)
+
     def take(self, rows: Any) -> Texts:
         """Return the words of some ways."""
         return Texts(self.picks, self.caps, self.pick[rows], self.kind[rows])

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Iterator
+from functools import cache
+from typing import get_args
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,7 +17,7 @@ from allocator.problem import Problem, inspection_stated
 from allocator.results import Caution
 from allocator.scenario.level import LONG_TERM, given
 from allocator.scenario.levels import column
-from allocator.scenario.model import Capability, Inspection, Step, Table
+from allocator.scenario.model import Alternative, Capability, Inspection, Step, Table
 from allocator.standing import flow_today
 from allocator.states import sigmas_meant
 
@@ -52,14 +54,23 @@ def _steps(problem: Problem, test: Callable[[Step, int], bool]) -> list[str]:
     return [step.name for i, step in enumerate(problem.scenario.step) if test(step, i)]
 
 
+def _offering(problem: Problem, test: Callable[[Alternative], bool]) -> list[str]:
+    """Return the names of the steps with an alternative that passes a test."""
+    return [step.name for step in problem.scenario.step if step.alternative and any(map(test, step.alternative))]
+
+
+def _quoting(problem: Problem, test: Callable[[Capability], bool]) -> list[str]:
+    """Return the names of the steps whose capability passes a test, or that of an alternative."""
+
+    def offered(alternative: Alternative) -> bool:
+        return alternative.capability is not None and test(alternative.capability)
+
+    return [s.name for s in problem.scenario.step if test(s.capability) or any(map(offered, s.alternative))]
+
+
 def _named(problem: Problem, where: Flags) -> list[str]:
     """Return the names of some steps, given as flags of shape (n_steps,)."""
     return [problem.scenario.step[i].name for i in np.flatnonzero(where).tolist()]
-
-
-def _capabilities(step: Step) -> Iterator[Capability]:
-    yield step.capability
-    yield from (a.capability for a in step.alternative if a.capability is not None)
 
 
 def _one_opportunity(problem: Problem) -> Iterator[Caution]:
@@ -157,12 +168,12 @@ def _finds_all(inspection: Inspection | None) -> bool:
 
 
 def _counts(problem: Problem) -> Iterator[Caution]:
-    none = _steps(problem, lambda s, _: any(c.bad == 0 for c in _capabilities(s)))
+    none = _quoting(problem, lambda c: c.bad == 0)
     yield from _about(
         "zero_bad", none, "0 bad found is not 0 ppm; the rate is taken at which none had an even chance, 1 − 0.5^(1/n)",
         "count on a larger lot until a few bad ones are seen",
     )  # fmt: skip
-    few = _steps(problem, lambda s, _: any(c.bad is not None and 0 < c.bad < FEW_BAD for c in _capabilities(s)))
+    few = _quoting(problem, lambda c: c.bad is not None and 0 < c.bad < FEW_BAD)
     yield from _about(
         "few_bad", few, "a rate from fewer than five bad items is uncertain by a factor of two or more",
         "pool more lots, or plan on an upper limit of the count",
@@ -182,9 +193,7 @@ def _near_tail(problem: Problem) -> Iterator[Caution]:
 
 
 def _copies(problem: Problem) -> Iterator[Caution]:
-    independent = _steps(
-        problem, lambda s, _: any(a.copies is not None and a.copies.common_cause == 0.0 for a in s.alternative)
-    )
+    independent = _offering(problem, lambda a: a.copies is not None and a.copies.common_cause == 0.0)
     yield from _about(
         "copies_without_common_cause", independent,
         "copies are taken to fail independently; a common cause of 2 to 10 % limits the gain to 10 to 50 times",
@@ -229,13 +238,23 @@ def is_judged(table: BaseModel) -> bool:
     """Return whether a table, or any table inside it, is marked as judged."""
     if isinstance(table, Table) and table.evidence == "judged":
         return True
-    for value in table.__dict__.values():
-        if isinstance(value, BaseModel):
-            if is_judged(value):
-                return True
-        elif isinstance(value, tuple) and any(is_judged(v) for v in value if isinstance(v, BaseModel)):
+    for name in _tables_in(type(table)):
+        value = table.__dict__[name]
+        if value is not None and (any(map(is_judged, value)) if type(value) is tuple else is_judged(value)):
             return True
     return False
+
+
+@cache
+def _tables_in(kind: type[BaseModel]) -> tuple[str, ...]:
+    """Return the keys of a kind of table that can hold further tables; looked up once, since lines are long."""
+    return tuple(name for name, field in kind.model_fields.items() if _holds_table(field.annotation))
+
+
+def _holds_table(annotation: object) -> bool:
+    if isinstance(annotation, type) and issubclass(annotation, BaseModel):
+        return True
+    return any(map(_holds_table, get_args(annotation)))
 
 
 def _safety(problem: Problem) -> Iterator[Caution]:
@@ -248,7 +267,7 @@ def _safety(problem: Problem) -> Iterator[Caution]:
 
 def _widening(problem: Problem) -> Iterator[Caution]:
     yield from _about(
-        "wider_spec", _steps(problem, lambda s, _: any(a.widen for a in s.alternative)), "widening a specification changes the product",
+        "wider_spec", _offering(problem, lambda a: bool(a.widen)), "widening a specification changes the product",
         "record the functional evidence and the design authority's approval first",
     )  # fmt: skip
 
@@ -314,15 +333,14 @@ def _loose_ends(problem: Problem) -> Iterator[Caution]:
             "nothing_to_choose", (), "no step has an alternative or a law of improvement, so there is nothing to decide",
             "enter quotes or `improve` for the steps that could get better",
         )  # fmt: skip
-    free = _steps(problem, lambda s, _: any(_costs_nothing(a.name, s) for a in s.alternative))
+    free = _offering(problem, _costs_nothing)
     yield from _about(
         "free_alternative", free, "an alternative is entered as costing nothing: it will be taken wherever it helps",
         "enter its price, per_year or per_item, or note why it is free (recentring may be)",
     )  # fmt: skip
 
 
-def _costs_nothing(name: str, step: Step) -> bool:
-    a = next(a for a in step.alternative if a.name == name)
+def _costs_nothing(a: Alternative) -> bool:
     money = (a.price, a.per_year, a.per_item, a.price_allowance)
     dearer_gate = a.inspection is not None and a.inspection.per_item > 0.0
     return not any(money) and a.uses is None and not dearer_gate and not (a.rework is not None and a.rework.cost > 0.0)

@@ -14,9 +14,33 @@ from allocator.report.blocks import MONEY_KINDS
 from allocator.report.words import YIELDS
 from allocator.results import BestReachable, Caution, Money, TodayLine, Yields
 
+STRICT = json.JSONEncoder(allow_nan=False)
+
 
 def to_json(content: dict[str, Any] | list[dict[str, Any]]) -> str:
-    return json.dumps(_finite(content), indent=2, allow_nan=False) + "\n"
+    """Return the content as JSON, indented but for records in a list: these stand on one line each."""
+    if isinstance(content, list):
+        return _records(content, "") + "\n"
+    parts = (f"  {json.dumps(key)}: {_value(value)}" for key, value in content.items())
+    return "{\n" + ",\n".join(parts) + "\n}\n" if content else "{}\n"
+
+
+def _value(value: Any) -> str:
+    if isinstance(value, list | tuple) and value and all(isinstance(item, dict) for item in value):
+        return _records(value, "  ")
+    return _one_line(value)
+
+
+def _records(records: Sequence[dict[str, Any]], indent: str) -> str:
+    lines = ",\n".join(f"{indent}  {_one_line(record)}" for record in records)
+    return f"[\n{lines}\n{indent}]" if records else "[]"
+
+
+def _one_line(value: Any) -> str:
+    try:
+        return STRICT.encode(value)
+    except ValueError:  # NaN or infinite somewhere
+        return STRICT.encode(_finite(value))
 
 
 def _finite(value: Any) -> Any:

@@ -20,6 +20,8 @@ def clean(text: str) -> str:
     >>> clean("Press\\x1b[31m\\nline")
     'Press [31m line'
     """
+    if text.isascii() and text.isprintable() and "  " not in text and text.strip() == text:
+        return text  # as nearly all names are, of which a long line has many
     kept = (" " if unicodedata.category(sign) == "Cc" else sign for sign in text if sign not in _DIRECTION_MARKS)
     return " ".join("".join(kept).split())
 
