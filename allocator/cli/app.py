@@ -6,6 +6,7 @@ numerical libraries behind `allocator.api` and the renderers.
 
 from __future__ import annotations
 
+import gc
 import io
 import os
 import shutil
@@ -112,7 +113,9 @@ def allocator(
 def load(file: Path) -> Scenario:
     from allocator.scenario.read import read_scenario
 
-    return read_scenario(file)
+    scenario = read_scenario(file)
+    gc.disable()  # A command ends soon; what a long line makes until then is not worth searching for cycles.
+    return scenario
 
 
 def form_of(as_json: bool, as_csv: bool) -> Any:
