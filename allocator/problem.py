@@ -32,6 +32,8 @@ class Problem:
         `COST`, or the yield whose load is to be as low as possible.
     capital, spend : float or None [currency, currency/year]
         Limits on capital and on the yearly total.
+    by_price : bool
+        Whether the price road may be taken; tests close it to hear what the general road says.
     """
 
     scenario: Scenario
@@ -42,6 +44,7 @@ class Problem:
     objective: str = COST
     capital: float | None = None
     spend: float | None = None
+    by_price: bool = True
 
     def with_budget(self, name: str, budget: float | None) -> Problem:
         """Return the same question with one budget changed (None lifts it)."""

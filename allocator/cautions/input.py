@@ -234,8 +234,8 @@ def _judged(problem: Problem) -> Iterator[Caution]:
     )  # fmt: skip
 
 
-def is_judged(table: BaseModel) -> bool:
-    """Return whether a table, or any table inside it, is marked as judged."""
+def is_judged(table: object) -> bool:
+    """Return whether a table, or any table inside it, is marked as judged; a figure never is."""
     if isinstance(table, Table) and table.evidence == "judged":
         return True
     for name in _tables_in(type(table)):
@@ -246,8 +246,10 @@ def is_judged(table: BaseModel) -> bool:
 
 
 @cache
-def _tables_in(kind: type[BaseModel]) -> tuple[str, ...]:
+def _tables_in(kind: type[object]) -> tuple[str, ...]:
     """Return the keys of a kind of table that can hold further tables; looked up once, since lines are long."""
+    if not issubclass(kind, BaseModel):
+        return ()
     return tuple(name for name, field in kind.model_fields.items() if _holds_table(field.annotation))
 
 

@@ -97,7 +97,7 @@ def _by_price(
     problem: Problem, rows: NDArray[np.int64], hopeless: float | None, near: Near | None
 ) -> FixedAnswer | None:
     """Return the answer of the price road, where budgets alone couple the steps and it closes the gap; else None."""
-    if problem.objective != COST or problem.capital is not None or problem.spend is not None:
+    if not problem.by_price or problem.objective != COST or problem.capital is not None or problem.spend is not None:
         return None
     ways, line = problem.options.ways, problem.line
     gates = Gates(*(getattr(ways.gates, name)[rows] for name in GATE_FIELDS))

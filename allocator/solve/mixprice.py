@@ -25,14 +25,14 @@ PASSES = 12
 
 def serves(problem: Problem) -> bool:
     """Return whether the price alone can settle this question: no limit on money, no gate and no purchase to choose."""
-    if problem.objective != COST or problem.capital is not None or problem.spend is not None:
+    if not problem.by_price or problem.objective != COST or problem.capital is not None or problem.spend is not None:
         return False
     return not problem.options.ways.uses.any() and gates_given(problem)
 
 
 def best_of_a_yield(problem: Problem) -> bool:
     """Return whether the best of a yield is asked where every step can simply do its best."""
-    unlimited = problem.capital is None and problem.spend is None
+    unlimited = problem.by_price and problem.capital is None and problem.spend is None
     return problem.objective in YIELD_NAMES and unlimited and gates_given(problem)
 
 
