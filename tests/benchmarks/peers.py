@@ -19,7 +19,7 @@ from scipy import sparse
 from allocator import curves as cv
 from allocator.flow import GATE_FIELDS, Gates
 from allocator.problem import Problem
-from allocator.solve.mixprice import first_ways
+from allocator.solve.reduce import first_ways
 
 Array = NDArray[np.float64]
 LEVELS = 9
