@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Hashable, Iterator
+from collections.abc import Callable, Iterator
 from functools import cache
 from typing import get_args
 
@@ -236,10 +236,11 @@ def _judged(problem: Problem) -> Iterator[Caution]:
 
 def is_judged(table: object) -> bool:
     """Return whether a table, or any table inside it, is marked as judged; a figure never is."""
+    if not isinstance(table, BaseModel):
+        return False
     if isinstance(table, Table) and table.evidence == "judged":
         return True
-    kind: Hashable = type(table)
-    for name in _tables_in(kind):
+    for name in _tables_in(type(table)):
         value = table.__dict__[name]
         if value is not None and (any(map(is_judged, value)) if type(value) is tuple else is_judged(value)):
             return True
@@ -247,10 +248,8 @@ def is_judged(table: object) -> bool:
 
 
 @cache
-def _tables_in(kind: Hashable) -> tuple[str, ...]:
+def _tables_in(kind: type[BaseModel]) -> tuple[str, ...]:
     """Return the keys of a kind of table that can hold further tables; looked up once, since lines are long."""
-    if not (isinstance(kind, type) and issubclass(kind, BaseModel)):
-        return ()
     return tuple(name for name, field in kind.model_fields.items() if _holds_table(field.annotation))
 
 
