@@ -19,6 +19,7 @@ from hypothesis import strategies as st
 from scipy.stats import norm
 from strategies import Drawn, alternatives, amounts, laws, lines, plain_line, quick, with_target
 
+from allocator.errors import SolverError
 from allocator.plan import make_plan
 from allocator.problem import Problem, pose
 from allocator.report.render import render
@@ -255,6 +256,22 @@ def test_a_sweep_answers_as_each_question_alone() -> None:
         if swept.outcome is not None and alone.outcome is not None:
             allowed = (swept.gap + alone.gap + ROUNDING) * size(alone)
             assert abs(swept.outcome.money.total - alone.outcome.money.total) <= allowed
+
+
+@pytest.mark.parametrize("equipment", [False, True])
+def test_a_limit_on_money_that_binds_on_a_long_line_is_refused_in_one_sentence(equipment: bool) -> None:
+    """One that does not bind changes nothing; a capital of a tenth of what the plan needs cannot be worked out."""
+    columns = long_steps(5_000)
+    columns["improve.price"] = columns.pop("improve.per_year")
+    more = {"alternatives": long_alternatives(columns, 2)} if equipment else {}
+    problem = posed(columns, 0.987, **more)
+    free = solve(problem)
+    assert free.outcome is not None
+    ample = solve(replace(problem, capital=1.01 * free.outcome.capital))
+    assert ample.outcome is not None
+    assert ample.outcome.money.total == pytest.approx(free.outcome.money.total, rel=1e-12)
+    with pytest.raises(SolverError, match="at most"):
+        solve(replace(problem, capital=0.1 * free.outcome.capital))
 
 
 SILENT = """

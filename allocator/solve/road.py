@@ -11,7 +11,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from allocator.choice import Outcome
+from allocator.choice import Outcome, keeps_limits
 from allocator.errors import SolverError
 from allocator.problem import CAPITAL, COST, Problem, within
 from allocator.solve.fixed import FixedAnswer, solve_fixed
@@ -34,6 +34,10 @@ SECONDS_LEFT = 20.0
 """Time for the remainder that the price could not settle: its answer has a proof already."""
 LONGEST_MASTER = 4000
 """Steps beyond which the price road's answer stands with its printed gap: the master would take minutes."""
+TOO_LONG = (
+    "a line of {:,} steps with a limit on money, a shared purchase or a choice of gates is more than can be searched "
+    "(at most {:,} steps); ask without these, or for a part of the line"
+)
 PRICE_METHOD = "one price for all steps"
 
 
@@ -86,6 +90,10 @@ def _by_size(
     problem: Problem, starts: list[NDArray[np.int64]], enough: float | None = None, near: Near | None = None
 ) -> Solved | None:
     """Solve choice by choice, by price, or by branch and bound; None when no choice that keeps the limits is known."""
+    if len(problem.options.ways) > LARGE and (problem.capital is not None or problem.spend is not None):
+        free = _by_size(replace(problem, capital=None, spend=None), starts, near=near)
+        if free is not None and free.outcome is not None and keeps_limits(problem, free.outcome):
+            return replace(free, problem=problem)  # A limit that does not bind costs nothing.
     few = SMALL_MOVING if problem.options.ways.moves.any() else SMALL_STILL
     choices = _count_choices(problem, few)
     if choices <= few:
@@ -106,6 +114,8 @@ def _by_size(
 def _branch_and_bound(
     problem: Problem, starts: list[NDArray[np.int64]], gap: float, enough: float | None
 ) -> Solved | None:
+    if problem.line.n_steps > LONGEST_MASTER:
+        raise SolverError(TOO_LONG.format(problem.line.n_steps, LONGEST_MASTER))
     search = solve_mixed(problem, starts or first_choices(problem), gap, SECONDS, enough)
     if search.best is None and starts:
         search = solve_mixed(problem, first_choices(problem), gap, SECONDS, enough)
