@@ -72,10 +72,12 @@ def _paid(main: CashCase, money: str) -> str:
     saves = "saves" if main.savings.cash >= 0.0 else "costs another"
     escapes = main.savings.escapes
     avoided = f" and avoids escapes worth {words.money(escapes)}" if escapes > 0.0 else ""
+    worth = words.money(abs(main.worth_per_year))
+    in_all = f"is worth {worth} {money}" if main.worth_per_year >= 0.0 else f"costs {worth} {money} more than it saves"
     return (
         f"Against today, {words.money(main.capital)} {money} is paid at once, less trade-ins. It {saves} "
         f"{words.money(abs(main.savings.cash))} {money} of cash a year{avoided}. After the equal yearly cost of what "
-        f"is paid, the plan is worth {words.money(main.worth_per_year)} {money} a year."
+        f"is paid, the plan {in_all} a year."
     )
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 from allocator.report import words
@@ -9,6 +10,7 @@ from allocator.report.page.scale import Scale
 from allocator.results import Weighed, Weighing
 
 MOST_SHOWN = 60
+LAW = "law"
 
 
 @dataclass(frozen=True)
@@ -32,7 +34,7 @@ class ChoicesSaid:
     said: list[str]
     zero: float
     groups: list[tuple[str, list[Choice]]]
-    left_out: str
+    notes: list[str]
 
 
 def choices_said(weighed: Weighed | None) -> ChoicesSaid | None:
@@ -51,7 +53,7 @@ def choices_said(weighed: Weighed | None) -> ChoicesSaid | None:
         said=_said(weighed),
         zero=scale.at(0.0),
         groups=[(head, rows) for head, rows in groups if rows],
-        left_out=f"{more:,} more are in the answer of: allocator weigh." if more else "",
+        notes=_notes(shown, more),
     )
 
 
@@ -66,10 +68,22 @@ def _said(weighed: Weighed) -> list[str]:
     ]
 
 
+def _notes(shown: Sequence[Weighing], more: int) -> list[str]:
+    """What speaks against every law is said once."""
+    of_laws = list(dict.fromkeys(text for row in shown if row.kind == LAW for text in row.against))
+    notes = [f"Steady improvement, here or there: {words.listed(of_laws, joint='; ')}."] if of_laws else []
+    return [*notes, f"{more:,} more are in the answer of: allocator weigh."] if more else notes
+
+
+def _opened(text: str) -> str:
+    said = words.clean(text)
+    return said[:1].upper() + said[1:]
+
+
 def _choice(row: Weighing, scale: Scale, money: str) -> Choice:
     worth = row.worth_per_year
     low, high = sorted((scale.at(0.0), scale.at(worth or 0.0)))
-    name = "steady improvement" if row.kind == "law" else words.clean(row.alternative)
+    name = "steady improvement" if row.kind == LAW else words.clean(row.alternative)
     return Choice(
         name=name,
         where="shared" if row.step is None else words.clean(row.step),
@@ -80,7 +94,7 @@ def _choice(row: Weighing, scale: Scale, money: str) -> Choice:
         width=round(high - low, 2),
         gains=worth is None or worth >= 0.0,
         turns=_turns(row, money),
-        against=[words.clean(text) for text in row.against],
+        against=[] if row.kind == LAW else [_opened(text) for text in row.against],
     )
 
 
@@ -88,7 +102,7 @@ def _turns(row: Weighing, money: str) -> list[str]:
     """Where the verdict turns: price, volume, and how good it must really be."""
     texts = []
     pays = "would pay" if row.verdict == "leave" else "pays"
-    if row.kind == "law":
+    if row.kind == LAW:
         if row.break_even_price_factor is not None:
             texts.append(f"{pays} up to {words.number(row.break_even_price_factor)} times its cost")
     elif row.break_even_price is not None:

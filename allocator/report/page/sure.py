@@ -59,7 +59,7 @@ def sure_said(sure: Confidence | None, plan: Plan) -> SureSaid | None:
 def _said(sure: Confidence, currency: str, asked: str) -> list[str]:
     doubt = words.listed([words.clean(step) for step in sure.in_doubt])
     first = (
-        f"Samples are small, so capabilities are soft: {doubt}. With the estimates taken as exact, the plan keeps its "
+        f"Capabilities known from samples are soft: {doubt}. With the estimates taken as exact, the plan keeps its "
         f"promise in {_percent(sure.plain.holds)} of what the true figures may be."
     )
     if not sure.reached:
