@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import replace
 
 import numpy as np
@@ -220,29 +220,34 @@ def binding_steps(problem: Problem, best: Solved, budget: float | None) -> tuple
     load = best.outcome.loads[problem.split]
     wanted = budget if budget is not None else -math.log1p(-0.1 * -math.expm1(-load))
     parts = load_parts(problem.line, best.outcome.flow, problem.split)
-    least = best.problem.options.ways.least_by_step(problem.line.n_steps)
-    binding: list[Binding] = []
-    for i in np.argsort(-parts, kind="stable"):
-        if load <= wanted or parts[i] <= 0.0:
-            break
-        load -= float(parts[i])
-        binding.append(Binding(problem.scenario.step[i].name, _what_holds(problem, best, int(i), float(least[i]))))
-    return tuple(binding)
+    order = np.argsort(-parts, kind="stable")
+    before = load - (np.cumsum(parts[order]) - parts[order])
+    enough = (before <= wanted) | (parts[order] <= 0.0)
+    those = order[: int(np.argmax(enough)) if enough.any() else len(order)]
+    steps = problem.scenario.step
+    held = zip(those.tolist(), _what_holds(problem, best, those), strict=True)
+    return tuple(Binding(steps[i].name, reason) for i, reason in held)
 
 
-def _what_holds(problem: Problem, best: Solved, i: int, least: float) -> str:
-    assert best.outcome is not None
-    ways, row, step = best.problem.options.ways, int(best.outcome.choice.rows[i]), problem.scenario.step[i]
-    text = ways.text[row]
-    at = f"sigma level {best.outcome.choice.z[i]:.4g}"
-    chosen = f" with {', '.join(text.alternatives)}" if text.alternatives else ""
-    if step.fixed:
-        return f"fixed by the scenario at {at}"
-    could_do_better = best.outcome.flow.intensity[i] > least * (1.0 + AT_CAP)
-    if problem.capital is not None and could_do_better:
-        return f"at {at}{chosen}; the capital limit allows no more"
-    missing = "" if step.alternative else "; no alternative is offered"
-    return f"at {at}{chosen}: {text.cap}{missing}"
+def _what_holds(problem: Problem, best: Solved, those: NDArray[np.int64]) -> Iterator[str]:
+    """Yield for some steps, in words, what keeps each of them where it stands."""
+    outcome, ways = best.outcome, best.problem.options.ways
+    assert outcome is not None
+    least = ways.least_by_step(problem.line.n_steps)[those]
+    could_do_better = (outcome.flow.intensity[those] > least * (1.0 + AT_CAP)) & (problem.capital is not None)
+    text = ways.text.take(outcome.choice.rows[those])
+    columns = (those, outcome.choice.z[those], could_do_better)
+    stated = zip(*(c.tolist() for c in columns), text.alternatives(), text.caps_in_words(), strict=True)
+    for i, z, limited, alternatives, cap in stated:
+        step, at = problem.scenario.step[i], f"sigma level {z:.4g}"
+        chosen = f" with {', '.join(alternatives)}" if alternatives else ""
+        missing = "" if step.alternative else "; no alternative is offered"
+        if step.fixed:
+            yield f"fixed by the scenario at {at}"
+        elif limited:
+            yield f"at {at}{chosen}; the capital limit allows no more"
+        else:
+            yield f"at {at}{chosen}: {cap}{missing}"
 
 
 def describe(solved: Solved, question: str, problem: Problem) -> Plan:
