@@ -72,7 +72,7 @@ def solve_by_price(problem: Problem, gap: float, near: Near | None = None, secon
     search = _Search(problem, near)
     for _ in range(PASSES):
         before = search.value, search.bound
-        search.one_pass()
+        search.one_pass(gap)
         if search.gap() <= gap or (search.value, search.bound) == before:
             break
         search.shrink()
@@ -110,8 +110,11 @@ class _Search:
     def gap(self) -> float:
         return (self.value - self.bound) / max(abs(self.value), 1.0) if self.best is not None else np.inf
 
-    def one_pass(self) -> None:
-        """Price the menu at the tangent of scrap seen last, lift the bound, and offer what answers."""
+    def one_pass(self, gap: float) -> None:
+        """Price the menu at the tangent of scrap seen last, lift the bound, and offer what answers.
+
+        Only where that leaves more than `gap` is the budget filled by combinations.
+        """
         tangent = tangent_at(self.duty, self.here)
         if not self.duty.loads:
             priced = price_menu(self.menu, tangent.slope, tangent.slope, 0.0)
@@ -128,7 +131,7 @@ class _Search:
         self._note(sides[best], bounds[best])
         for side in sides:
             self.offer(side.best)
-        if over is not None and self.best is not None and self.menu.market.still:
+        if over is not None and self.best is not None and self.menu.market.still and self.gap() > gap:
             rows, lift = fill_budget(self.menu, weight, free, sides[best], max(self.value - bounds[best], 0.0))
             self.bound = max(self.bound, bounds[best] + lift)
             if rows is not None:
