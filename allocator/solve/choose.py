@@ -20,7 +20,7 @@ PRICE_STEPS = 60
 CLOSE = 1e-13
 WIDEST = 30.0
 """Most by which the price is changed at once in search of the other side."""
-BOUND_CLOSE = 1e-11
+BOUND_CLOSE = 1e-9
 """Share of the bound that may be left in it: far below the gaps that are promised."""
 LONGEST_LIST = 20_000
 CORE_STEPS = 40
