@@ -34,6 +34,8 @@ class ChoicesSaid:
     said: list[str]
     zero: float
     groups: list[tuple[str, list[Choice]]]
+    laws: list[Choice]
+    """Steady improvement, step by step: there is nothing to buy, so it stands apart."""
     notes: list[str]
 
 
@@ -45,14 +47,16 @@ def choices_said(weighed: Weighed | None) -> ChoicesSaid | None:
     worths = [row.worth_per_year for row in shown if row.worth_per_year is not None]
     scale = Scale(min([0.0, *worths]), max([0.0, *worths]))
     money, more = words.clean(weighed.currency), len(weighed.rows) - len(shown)
+    things, laws = [row for row in shown if row.kind != LAW], [row for row in shown if row.kind == LAW]
     groups = [
-        (head, [_choice(row, scale, money) for row in shown if row.free == free])
+        (head, [_choice(row, scale, money) for row in things if row.free == free])
         for head, free in (("What ties up no capital", True), ("What ties up capital, the free moves made", False))
     ]
     return ChoicesSaid(
         said=_said(weighed),
         zero=scale.at(0.0),
         groups=[(head, rows) for head, rows in groups if rows],
+        laws=[_choice(row, scale, money) for row in laws],
         notes=_notes(shown, more),
     )
 
