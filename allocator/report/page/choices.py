@@ -49,14 +49,14 @@ def choices_said(weighed: Weighed | None) -> ChoicesSaid | None:
     money, more = words.clean(weighed.currency), len(weighed.rows) - len(shown)
     things, laws = [row for row in shown if row.kind != LAW], [row for row in shown if row.kind == LAW]
     groups = [
-        (head, [_choice(row, scale, money) for row in things if row.free == free])
+        (head, [_choice(row, scale, money, weighed.shipped_per_year) for row in things if row.free == free])
         for head, free in (("What ties up no capital", True), ("What ties up capital, the free moves made", False))
     ]
     return ChoicesSaid(
         said=_said(weighed),
         zero=scale.at(0.0),
         groups=[(head, rows) for head, rows in groups if rows],
-        laws=[_choice(row, scale, money) for row in laws],
+        laws=[_choice(row, scale, money, weighed.shipped_per_year) for row in laws],
         notes=_notes(shown, more),
     )
 
@@ -84,7 +84,7 @@ def _opened(text: str) -> str:
     return said[:1].upper() + said[1:]
 
 
-def _choice(row: Weighing, scale: Scale, money: str) -> Choice:
+def _choice(row: Weighing, scale: Scale, money: str, shipped: float) -> Choice:
     worth = row.worth_per_year
     low, high = sorted((scale.at(0.0), scale.at(worth or 0.0)))
     name = "steady improvement" if row.kind == LAW else words.clean(row.alternative)
@@ -97,12 +97,12 @@ def _choice(row: Weighing, scale: Scale, money: str) -> Choice:
         start=low,
         width=round(high - low, 2),
         gains=worth is None or worth >= 0.0,
-        turns=_turns(row, money),
+        turns=_turns(row, money, shipped),
         against=[] if row.kind == LAW else [_opened(text) for text in row.against],
     )
 
 
-def _turns(row: Weighing, money: str) -> list[str]:
+def _turns(row: Weighing, money: str, shipped: float) -> list[str]:
     """Where the verdict turns: price, volume, and how good it must really be."""
     texts = []
     pays = "would pay" if row.verdict == "leave" else "pays"
@@ -111,7 +111,10 @@ def _turns(row: Weighing, money: str) -> list[str]:
             texts.append(f"{pays} up to {words.number(row.break_even_price_factor)} times its cost")
     elif row.break_even_price is not None:
         texts.append(f"{pays} up to a price of {words.money(row.break_even_price)} {money}")
-    if row.break_even_volume is not None:
+    from_here = row.break_even_volume is not None and row.break_even_volume <= shipped
+    if row.verdict == "leave" and (from_here or row.pays_from == "any volume"):
+        texts.append("pays at smaller volumes, then gives way to something better")
+    elif row.break_even_volume is not None:
         texts.append(f"{pays} from {words.number(row.break_even_volume)} units a year")
     elif row.verdict != "needed":
         texts.append(f"{pays} at {row.pays_from}")
