@@ -57,8 +57,9 @@ class Market:
         moves = (z_high > z_low) & ~self.straight
         self.decade = np.flatnonzero(moves & (curves.kind == cv.DECADE))
         self.sloped = np.flatnonzero(moves & ((curves.kind == cv.POWER) | (curves.kind == cv.EXPONENTIAL)))
-        self.low = cv.intensity(curves, z_high)
         self.high = cv.intensity(curves, z_low)
+        self.low, wide = self.high.copy(), np.flatnonzero(z_high != z_low)
+        self.low[wide] = cv.intensity(curves.take(wide), z_high[wide])
         still = ~moves & ~self.straight
         self.still_cost = np.where(still, cv.smooth_cost(curves, z_low), 0.0)
         self.decades = _Decades(curves.take(self.decade), self.low[self.decade], self.high[self.decade])

@@ -7,12 +7,14 @@ the best combination that fits is found by merging Pareto lists, exact within th
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
 
 from allocator.solve.answers import Answers, Market
+from allocator.solve.corners import Corners, balance, corners
 
 Array = NDArray[np.float64]
 Index = NDArray[np.int64]
@@ -22,7 +24,6 @@ WIDEST = 30.0
 """Most by which the price is changed at once in search of the other side."""
 BOUND_CLOSE = 1e-9
 """Share of the bound that may be left in it: far below the gaps that are promised."""
-LONGEST_LIST = 20_000
 CORE_STEPS = 40
 """Steps whose second-best ways are close enough to the best to be worth combining."""
 
@@ -46,6 +47,11 @@ class Menu:
     step: Index
     fixed: Array
 
+    @cached_property
+    def hull(self) -> Corners:
+        """The corners of every step, where no way moves."""
+        return corners(self.step, self.market.high, self.fixed + self.market.still_cost)
+
 
 @dataclass(frozen=True)
 class Priced:
@@ -62,7 +68,9 @@ def price_menu(menu: Menu, slope: Array, weight: Array, price: float) -> Priced:
     """Return all answers at λ = `price`, with scrap's slope and the load weight per step [shape (n_steps,)]."""
     per_way = (slope + price * weight)[menu.step]
     answers = menu.market.answer(per_way)
-    value = menu.fixed + answers.cost + per_way * answers.delta + _still_to_gain(menu.market, answers, per_way)
+    value = menu.fixed + answers.cost + per_way * answers.delta
+    if not menu.market.still:
+        value += _still_to_gain(menu.market, answers, per_way)
     least = np.minimum.reduceat(value, menu.first)
     places = np.where(value <= least[menu.step], np.arange(len(value)), len(value))
     best = np.minimum.reduceat(places, menu.first)
@@ -79,9 +87,13 @@ def _still_to_gain(market: Market, answers: Answers, per_way: Array) -> Array:
 def balance_menu(menu: Menu, slope: Array, weight: Array, free: float, start: float) -> tuple[Priced, Priced | None]:
     """Return the priced menus just under and just over the budget `free` (None where the budget does not bind).
 
-    The price is bracketed by factors from `start` > 0 and narrowed by secants of the load, by the tangents of the bound
-    and by halving, in turn.
+    Where no way moves it is read off the corners. Else it is bracketed by factors from `start` > 0 and narrowed by
+    secants of the load, by the tangents of the bound and by halving, in turn.
     """
+    if menu.market.still and menu.market.smooth:
+        read = _read_off(menu, slope, weight, free)
+        if read is not None:
+            return read
     under, over = price_menu(menu, slope, weight, start), None
     factor = 1.3
     while under.load > free:
@@ -99,6 +111,18 @@ def balance_menu(menu: Menu, slope: Array, weight: Array, free: float, start: fl
         else:
             under = trial
     return _narrow(menu, slope, weight, free, under, over)
+
+
+def _read_off(menu: Menu, slope: Array, weight: Array, free: float) -> tuple[Priced, Priced | None] | None:
+    """Return both sides of the balancing price, None where no price keeps the budget."""
+    hull, delta = menu.hull, menu.market.high
+    found = balance(hull, slope, weight, float(weight @ delta[hull.rows[hull.last]]), free)
+    if found is None:
+        return None
+    price, under, over = found
+    priced = price_menu(menu, slope, weight, price)
+    sides = [replace(priced, best=rows, load=float(weight @ delta[rows])) for rows in (under, over) if rows is not None]
+    return sides[0], sides[1] if over is not None else None
 
 
 def first_price(menu: Menu, free: float) -> float:
@@ -150,7 +174,9 @@ def _secant(under: Priced, over: Priced, free: float) -> float:
     return over.price + min(max(share, 0.02), 0.98) * (under.price - over.price)
 
 
-def fill_budget(menu: Menu, weight: Array, free: float, priced: Priced, allowed: float) -> tuple[Index | None, float]:
+def fill_budget(
+    menu: Menu, weight: Array, free: float, priced: Priced, allowed: float, longest: int
+) -> tuple[Index | None, float]:
     """Return each step's way, the best at the price but for a few that together fit best, and the bound's lift.
 
     Parameters
@@ -159,6 +185,8 @@ def fill_budget(menu: Menu, weight: Array, free: float, priced: Priced, allowed:
         At the balancing price; its best ways may overrun the budget or leave room.
     allowed : float [currency/year]
         Combinations that lift the bound by more than this are not worth looking at.
+    longest : int
+        Combinations kept from step to step; more are cut.
 
     Returns
     -------
@@ -173,7 +201,7 @@ def fill_budget(menu: Menu, weight: Array, free: float, priced: Priced, allowed:
     room = free - priced.load
     candidates = np.flatnonzero((extra <= allowed) & (np.arange(len(extra)) != base[menu.step]))
     core, options, complete = _core(menu, candidates, extra, len(base))
-    merged = _merge(options, extra, change, priced.price, room, allowed)
+    merged = _merge(options, extra, change, priced.price, room, allowed, longest)
     if merged is None:
         return None, 0.0
     chosen, lift, whole = merged
@@ -200,7 +228,7 @@ def _core(menu: Menu, candidates: Index, extra: Array, n_steps: int) -> tuple[In
 
 
 def _merge(
-    options: list[Index], extra: Array, change: Array, price: float, room: float, allowed: float
+    options: list[Index], extra: Array, change: Array, price: float, room: float, allowed: float, longest: int
 ) -> tuple[list[int], float, bool] | None:
     """Return the way taken in each core step (−1 for its best), what that adds, and whether the lists were whole.
 
@@ -215,7 +243,7 @@ def _merge(
         picks = np.concatenate([[-1], rows])
         all_load = (load[:, None] + np.concatenate([[0.0], change[rows]])).ravel()
         all_added = (added[:, None] + np.concatenate([[0.0], extra[rows]])).ravel()
-        keep, cut = _undominated(all_load, all_added, price, room - later[place], allowed)
+        keep, cut = _undominated(all_load, all_added, price, room - later[place], allowed, longest)
         whole = whole and not cut
         history.append((keep // len(picks), picks[keep % len(picks)]))
         load, added = all_load[keep], all_added[keep]
@@ -231,7 +259,9 @@ def _merge(
     return chosen[::-1], float(final.min()), whole
 
 
-def _undominated(load: Array, added: Array, price: float, room: float, allowed: float) -> tuple[Index, bool]:
+def _undominated(
+    load: Array, added: Array, price: float, room: float, allowed: float, longest: int
+) -> tuple[Index, bool]:
     """Return the entries worth keeping, and whether some had to be cut for length."""
     final = added - price * load
     keep = np.flatnonzero((added <= allowed) & (load <= room))
@@ -239,6 +269,6 @@ def _undominated(load: Array, added: Array, price: float, room: float, allowed: 
     least = np.minimum.accumulate(final[order]) if len(order) else np.zeros(0)
     first = np.concatenate([[True], least[1:] < least[:-1]]) if len(order) else np.zeros(0, dtype=bool)
     kept = order[first]
-    if len(kept) <= LONGEST_LIST:
+    if len(kept) <= longest:
         return np.asarray(kept, dtype=np.int64), False
-    return np.asarray(kept[np.argsort(added[kept], kind="stable")[:LONGEST_LIST]], dtype=np.int64), True
+    return np.asarray(kept[np.argsort(added[kept], kind="stable")[:longest]], dtype=np.int64), True

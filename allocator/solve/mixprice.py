@@ -21,6 +21,8 @@ from allocator.solve.price import Near, build_duty
 from allocator.solve.reduce import gates_given, gates_of_first
 
 PASSES = 12
+SHORT_LIST, LONGEST_LIST = 500, 20_000
+"""Combinations kept while the budget is filled: at first, and where these leave more than the gap."""
 
 
 def serves(problem: Problem) -> bool:
@@ -72,7 +74,9 @@ def solve_by_price(problem: Problem, gap: float, near: Near | None = None, secon
     search = _Search(problem, near)
     for _ in range(PASSES):
         before = search.value, search.bound
-        search.one_pass(gap)
+        search.one_pass()
+        if search.gap() > gap and (search.room > 0.5 * search.open(gap) or (search.value, search.bound) == before):
+            search.fill(gap)
         if search.gap() <= gap or (search.value, search.bound) == before:
             break
         search.shrink()
@@ -97,6 +101,9 @@ class _Search:
         self.extra, self.extra_bound = np.zeros(len(self.rows)), -np.inf
         self.here = np.minimum.reduceat(self.menu.market.low, self.menu.first)
         self.price = 0.0
+        self.room = 0.0
+        """What the room left in the budget by the last pass is worth at its price, where combinations could fill it."""
+        self.priced: Priced | None = None
         if self.duty.loads:
             _, used, budget = self.duty.loads[0]
             self.price = first_price(self.menu, budget - used)
@@ -110,12 +117,14 @@ class _Search:
     def gap(self) -> float:
         return (self.value - self.bound) / max(abs(self.value), 1.0) if self.best is not None else np.inf
 
-    def one_pass(self, gap: float) -> None:
-        """Price the menu at the tangent of scrap seen last, lift the bound, and offer what answers.
+    def open(self, gap: float) -> float:
+        """Return what is left between answer and bound, or `gap` of the answer if that is more."""
+        return max(self.value - self.bound, gap * abs(self.value))
 
-        Only where that leaves more than `gap` is the budget filled by combinations.
-        """
+    def one_pass(self) -> None:
+        """Price the menu at the tangent of scrap seen last, lift the bound, and offer what answers."""
         tangent = tangent_at(self.duty, self.here)
+        self.room, self.priced = 0.0, None
         if not self.duty.loads:
             priced = price_menu(self.menu, tangent.slope, tangent.slope, 0.0)
             self._note(priced, tangent.rest + least(priced))
@@ -131,9 +140,21 @@ class _Search:
         self._note(sides[best], bounds[best])
         for side in sides:
             self.offer(side.best)
-        if over is not None and self.best is not None and self.menu.market.still and self.gap() > gap:
-            rows, lift = fill_budget(self.menu, weight, free, sides[best], max(self.value - bounds[best], 0.0))
-            self.bound = max(self.bound, bounds[best] + lift)
+        if over is not None and self.best is not None and self.menu.market.still:
+            self.room, self.priced = under.price * (free - under.load), sides[best]
+
+    def fill(self, gap: float) -> None:
+        """Fill the budget by combinations of ways at the last price, and lift the bound by what none of them saves.
+
+        Short lists of them are quick, and mostly enough on long lines.
+        """
+        for longest in (SHORT_LIST, LONGEST_LIST):
+            if self.priced is None or self.gap() <= gap:
+                return
+            weight, used, budget = self.duty.loads[0]
+            allowed = max(self.value - self.extra_bound, 0.0)
+            rows, lift = fill_budget(self.menu, weight, budget - used, self.priced, allowed, longest)
+            self.bound = max(self.bound, self.extra_bound + lift)
             if rows is not None:
                 self.offer(rows)
 

@@ -28,14 +28,16 @@ def without_dominated(problem: Problem) -> Problem:
     ways = problem.options.ways
     plain = np.flatnonzero((ways.curves.kind == cv.NONE) & ~ways.moves)
     group = _comparable(ways, plain)
-    order = np.lexsort((ways.capital[plain], ways.fixed_cost[plain], ways.delta_high[plain], group))
+    order = np.argsort(group, kind="stable")
     rows, group = plain[order], group[order]
+    columns = [column[rows] for column in (ways.delta_high, ways.fixed_cost, ways.capital)]
     beaten = np.zeros(len(rows), dtype=bool)
     for back in range(1, int(np.bincount(group).max(initial=0))):
-        # Sorted by defects, so that only an earlier one can be better; ties go to the first.
-        better, other = rows[:-back], rows[back:]
-        cheaper = (ways.fixed_cost[better] <= ways.fixed_cost[other]) & (ways.capital[better] <= ways.capital[other])
-        beaten[back:] |= cheaper & (group[:-back] == group[back:])
+        first = np.flatnonzero(group[:-back] == group[back:])
+        no_worse = np.logical_and.reduce([column[first] <= column[first + back] for column in columns])
+        no_better = np.logical_and.reduce([column[first] >= column[first + back] for column in columns])
+        beaten[first[no_worse] + back] = True  # Of two that are the same the first stays.
+        beaten[first[no_better & ~no_worse]] = True
     if not beaten.any():
         return problem
     keep = np.ones(len(ways), dtype=bool)
@@ -82,13 +84,13 @@ def gates_given(problem: Problem) -> bool:
 
 def _comparable(ways: Ways, rows: NDArray[np.int64]) -> NDArray[np.int64]:
     """Return a number for every way that is the same for ways of one step with the same gate and purchases."""
-    same = np.concatenate([[getattr(ways.gates, name)[rows] for name in GATE_FIELDS], ways.uses[rows].T])
+    same = [*(getattr(ways.gates, name)[rows] for name in GATE_FIELDS), *ways.uses[rows].T]
     step = ways.step[rows]
     first = np.searchsorted(step, step)
-    if np.array_equal(same, same[:, first]):
+    if all(np.array_equal(column, column[first]) for column in same):
         return step
     order = np.lexsort((*same, step))
-    new = (np.diff(same[:, order], axis=1) != 0.0).any(axis=0) | (np.diff(step[order]) != 0)
+    new = np.logical_or.reduce([column[order][1:] != column[order][:-1] for column in (*same, step)])
     number = np.zeros(len(rows), dtype=np.int64)
     number[order[1:]] = np.cumsum(new)
     return number
