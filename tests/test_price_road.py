@@ -19,11 +19,13 @@ from hypothesis import strategies as st
 from scipy.stats import norm
 from strategies import Drawn, alternatives, amounts, laws, lines, plain_line, quick, with_target
 
+from allocator import curves
 from allocator.errors import SolverError
 from allocator.plan import make_plan
 from allocator.problem import Problem, pose
 from allocator.report.render import render
 from allocator.scenario.read import scenario_from_dict
+from allocator.solve.answers import Market
 from allocator.solve.corners import balance, corners
 from allocator.solve.mixprice import serves
 from allocator.solve.road import Solved, solve, sweep
@@ -189,6 +191,24 @@ def test_two_thousand_steps_of_six_ways_close_the_gap() -> None:
         solved = solve(problem.with_budget("final_yield", factor * best.outcome.loads["final_yield"]))
         assert solved.outcome is not None
         assert solved.gap <= MIXED_GAP
+
+
+def test_a_law_whose_range_starts_where_it_turns_convex_warns_of_nothing() -> None:
+    """There the slope is flat to the last digit, and a step of the search is as long as the range (warnings fail)."""
+    problem = pose(scenario_from_dict(random_scenario(227, hard=True)))
+    assert assert_roads_agree(problem)
+    ways = problem.options.ways
+    rows = np.flatnonzero(ways.moves & (ways.curves.kind == curves.POWER) & (ways.curves.parameter < 1.0))
+    assert len(rows)
+    laws, low, high = ways.curves.take(rows), ways.z_low[rows], ways.z_high[rows]
+    z = low + (high - low) * np.linspace(0.0, 1.0, 4_001)[:, None]
+    delta = np.stack([curves.intensity(laws, level) for level in z])
+    cost = np.stack([curves.smooth_cost(laws, level) for level in z])
+    for price in np.geomspace(1e3, 1e9, 25):
+        mine = Market(laws, low, high).answer(np.full(len(rows), price))
+        value, best = mine.cost + price * mine.delta, (cost + price * delta).min(axis=0)
+        assert (value <= best + 1e-9 * best).all()
+        assert (value >= best - 1e-6 * best).all()
 
 
 @pytest.mark.parametrize("seed", range(40))

@@ -22,6 +22,8 @@ ROOT_TWO_PI = float(np.sqrt(2.0 * np.pi))
 NEWTON_STEPS = 30
 ONE_STEP_LEFT = 1e-7
 """A step this small [σ] is the last: each one squares what is off."""
+LEAST_STEEP = 1e-12
+"""Where a law's range starts just where its cost turns convex, it rises there by nothing but rounding [1/σ]."""
 SETTLED = 1e-11
 """A level has settled when a step moves it by less than this [σ]; what is left is charged to the bound."""
 
@@ -142,7 +144,7 @@ class _Sloped:
             delta, rise, bend = self.intensity(z)
             log_slope, log_slope_rise = self.log_cost_slope(z)
             off = log_slope - np.log(-rise) - log_price
-            steep = log_slope_rise - bend / rise
+            steep = np.maximum(log_slope_rise - bend / rise, LEAST_STEEP)
             moved = np.clip(z - off / steep, self.z_low, self.z_high)
             step = float(np.max(np.abs(moved - z), initial=0.0))
             if step < SETTLED:
@@ -159,8 +161,8 @@ class _Sloped:
         slope = np.exp(log_slope) / rise
         inside = (z > self.z_low) & (z < self.z_high)
         # C'' = −C'·(d ln C'(z)/dz − δ''/δ')/δ' … in z terms: dδ/dπ = −δ'/(π·d(off)/dz).
-        steep = log_slope_rise - bend / rise
-        give = np.where(inside, -rise / (np.maximum(price, 1e-300) * steep), 0.0)
+        steep = np.maximum(log_slope_rise - bend / rise, LEAST_STEEP)
+        give = np.divide(-rise, np.maximum(price, 1e-300) * steep, out=np.zeros(len(z)), where=inside)
         return delta, self.cost(z), slope, give
 
     def cost(self, z: Array) -> Array:
