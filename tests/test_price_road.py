@@ -193,6 +193,21 @@ def test_two_thousand_steps_of_six_ways_close_the_gap() -> None:
         assert solved.gap <= MIXED_GAP
 
 
+def test_the_proof_names_the_method_that_answered() -> None:
+    machine = {"name": "machine", "per_year": 900.0, "capability": {"defect_rate": 1e-4}}
+    law = {"law": "decade", "per_year": 500.0}
+    step = {"name": "s0", "cost_added": 0.1, "capability": {"defect_rate": 1e-3}}
+    bare = {"demand": {"shipped_per_year": 10_000}, "target": {"rolled_yield": 0.9995}}
+    by_law = pose(scenario_from_dict(bare | {"step": [step | {"improve": law}]}))
+    either = pose(scenario_from_dict(bare | {"step": [step | {"improve": law, "alternative": [machine]}]}))
+    bought = pose(scenario_from_dict(bare | {"step": [step | {"alternative": [machine]}]}))
+    assert solve(by_law).method == "one price for all steps"
+    assert solve(replace(by_law, by_price=False)).method == "interior point"
+    assert solve(either).method == "all 2 choices, each by one price for all steps"
+    assert solve(bought).method == "plain evaluation"
+    assert solve(replace(by_law, objective="rolled_yield")).method == "every step at its best"
+
+
 def test_a_law_whose_range_starts_where_it_turns_convex_warns_of_nothing() -> None:
     """There the slope is flat to the last digit, and a step of the search is as long as the range (warnings fail)."""
     problem = pose(scenario_from_dict(random_scenario(227, hard=True)))

@@ -19,6 +19,13 @@ from allocator.solve.price import Near, build_duty, clear
 from allocator.solve.program import Program, build_program
 
 Array = NDArray[np.float64]
+PRICE, INTERIOR, AT_AN_END, STILL = (
+    "one price for all steps",
+    "interior point",
+    "every step at its best",
+    "plain evaluation",
+)
+"""Methods: the last two where every level stands at an end of its range, and where none can move."""
 MOST_LEVELS = 1_500
 """Levels that the interior point works out together: its tables grow with their square."""
 TOO_MANY = (
@@ -29,7 +36,7 @@ TOO_MANY = (
 
 @dataclass(frozen=True)
 class FixedAnswer:
-    """The evaluated best choice among given ways, a proven bound for these ways, and the price of each limit.
+    """The evaluated best choice among given ways, a proven bound for these ways, the price of each limit, and by what.
 
     `price` holds the fall of the objective per unit of each limit, None where nothing continuous can move.
     """
@@ -37,6 +44,7 @@ class FixedAnswer:
     outcome: Outcome
     bound: float
     price: dict[str, float] | None
+    method: str
 
 
 def solve_fixed(
@@ -71,7 +79,10 @@ def solve_fixed(
     if not keeps_limits(problem, outcome):
         return None
     return FixedAnswer(
-        outcome, min(point.bound, outcome.value(problem.objective)), point.prices if program.size else None
+        outcome,
+        min(point.bound, outcome.value(problem.objective)),
+        point.prices if program.size else None,
+        INTERIOR if program.size else STILL,
     )
 
 
@@ -89,7 +100,10 @@ def _at_an_end(problem: Problem, rows: NDArray[np.int64], z: Array) -> FixedAnsw
     """Return an answer that no level could better: loads fall and capital rises with every level, all by themselves."""
     outcome, moves = evaluate(problem.line, problem.options, Choice(rows, z)), problem.options.ways.moves[rows].any()
     return FixedAnswer(
-        outcome, outcome.value(problem.objective), dict.fromkeys(problem.budgets, 0.0) if moves else None
+        outcome,
+        outcome.value(problem.objective),
+        dict.fromkeys(problem.budgets, 0.0) if moves else None,
+        AT_AN_END if moves else STILL,
     )
 
 
@@ -122,9 +136,9 @@ def _by_price(
     if not keeps_limits(problem, outcome):
         return None
     if not len(moving):
-        return FixedAnswer(outcome, outcome.money.total, None)
+        return FixedAnswer(outcome, outcome.money.total, None, STILL)
     prices = dict(zip(problem.budgets, cleared.prices.tolist(), strict=True))
-    return FixedAnswer(outcome, min(cleared.bound + aside, outcome.money.total), prices)
+    return FixedAnswer(outcome, min(cleared.bound + aside, outcome.money.total), prices, PRICE)
 
 
 def _money_aside(problem: Problem, rows: NDArray[np.int64], gates: Gates) -> float:

@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 from allocator.choice import Outcome, keeps_limits
 from allocator.errors import SolverError
 from allocator.problem import CAPITAL, COST, Problem, within
-from allocator.solve.fixed import FixedAnswer, solve_fixed
+from allocator.solve.fixed import AT_AN_END, PRICE, FixedAnswer, solve_fixed
 from allocator.solve.mixed import solve_mixed
 from allocator.solve.mixprice import ByPrice, best_of_a_yield, fewest_defects, serves, solve_by_price
 from allocator.solve.price import Near
@@ -38,7 +38,6 @@ TOO_LONG = (
     "a line of {:,} steps with a limit on money, a shared purchase or a choice of gates is more than can be searched "
     "(at most {:,} steps); ask without these, or for a part of the line"
 )
-PRICE_METHOD = "one price for all steps"
 
 
 @dataclass(frozen=True)
@@ -101,11 +100,11 @@ def _by_size(
     gap = GAP if len(problem.options.ways) <= LARGE else GAP_LARGE
     if best_of_a_yield(problem):
         answer = solve_fixed(problem, fewest_defects(problem))
-        return None if answer is None else _solved(problem, answer, answer.bound, "every step at its best")
+        return None if answer is None else _solved(problem, answer, answer.bound, AT_AN_END)
     if serves(problem):
         priced = solve_by_price(problem, GAP_PRICED, near, SECONDS_LEFT)
         if priced is not None:
-            solved = _solved(problem, priced.best, priced.bound, PRICE_METHOD)
+            solved = _solved(problem, priced.best, priced.bound, PRICE)
             small = len(problem.budgets) > 1 and problem.line.n_steps <= LONGEST_MASTER
             return _settle_remainder(problem, priced, solved) if small and solved.gap > GAP_PRICED else solved
     return _branch_and_bound(problem, starts, gap, enough)
@@ -135,7 +134,7 @@ def _settle_remainder(problem: Problem, priced: ByPrice, solved: Solved) -> Solv
         return solved  # The priced answer stands with its own proof.
     assert search.best is not None
     bound = max(min(search.bound, search.value(search.best)), priced.bound)
-    method = f"{PRICE_METHOD}, branch and bound over the {len(kept):,} ways left"
+    method = f"{PRICE}, branch and bound over the {len(kept):,} ways left"
     settled = _solved(small, search.best, bound, method)
     return settled if settled.gap < solved.gap else solved
 
@@ -149,7 +148,7 @@ def _count_choices(problem: Problem, few: int) -> int:
 
 def _every_choice(problem: Problem, choices: int, near: Near | None) -> Solved | None:
     best: FixedAnswer | None = None
-    bound = math.inf
+    bound, methods = math.inf, dict[str, None]()
     each = itertools.product(*ways_by_step(problem)) if choices > 1 else [range(problem.line.n_steps)]
     for rows in each:
         value = None if best is None else best.outcome.value(problem.objective)
@@ -157,11 +156,13 @@ def _every_choice(problem: Problem, choices: int, near: Near | None) -> Solved |
         if answer is None:
             continue
         bound = min(bound, answer.bound)
+        methods[answer.method] = None
         if value is None or answer.outcome.value(problem.objective) < value:
             best = answer
     if best is None:
         return None
-    method = "interior point" if choices == 1 else f"all {choices:,} choices, each by interior point"
+    by = " or ".join(methods)
+    method = by if choices == 1 else f"all {choices:,} choices, each by {by}"
     return _solved(problem, best, bound, method)
 
 
