@@ -13,7 +13,8 @@ from allocator.capability import log_defects, sigma_from_log_defects
 from allocator.changed import at_law_price, at_level, at_price, at_volume, level_of
 from allocator.problem import Problem, within
 from allocator.scenario.level import Level
-from allocator.solve.road import Solved
+from allocator.solve.fixed import solve_fixed
+from allocator.solve.road import BRANCHED, Solved
 from allocator.variants import LAW, Thing, forced
 
 FURTHEST_VOLUME = 100.0
@@ -149,6 +150,9 @@ def _row_with_law(solved: Solved, problem: Problem, thing: Thing) -> int | None:
 def break_even_law(problem: Problem, plan: Solved, banned: Solved, thing: Thing) -> float | None:
     """Return the factor of its scale up to which a law is worth using; None where it never is.
 
+    Found with the equipment of the two plans. Where neither took branch and bound, it is then confirmed, or lifted,
+    by planning anew; elsewhere equipment of a third kind might stretch it further.
+
     Parameters
     ----------
     problem : Problem
@@ -156,11 +160,30 @@ def break_even_law(problem: Problem, plan: Solved, banned: Solved, thing: Thing)
     plan, banned : Solved
         The best plans with the law on offer and without it.
     """
-    pull = _pull(banned, problem, thing)
-    without, factor = total_of(banned), CHEAPEST if pull is None else 1.0 + pull
-    if factor <= 0.0:
-        return None
+    pull, without = _pull(banned, problem, thing), total_of(banned)
+    factor = CHEAPEST if pull is None else 1.0 + pull
+    if takes(plan, thing) and without - total_of(plan) > SAME * abs(without):
+        factor = max(factor, _last_that_pays(
+            lambda f: _kept_total(at_law_price(problem, thing.step, f), plan), 1.0, _far(problem, plan, thing, without),
+            without * (1.0 - math.copysign(SAME, without)),
+        ))  # fmt: skip
+    if factor > 0.0 and BRANCHED not in plan.method:
+        factor = _confirmed(problem, plan, banned, thing, factor)
+    return factor if factor > CHEAPEST else None
+
+
+def _far(problem: Problem, plan: Solved, thing: Thing, without: float) -> float:
+    """Return a factor at which even the plan's own choice no longer gains from its law."""
+    factor = 2.0
+    while factor < DEAREST and _kept_total(at_law_price(problem, thing.step, factor), plan) < without:
+        factor *= 4.0
+    return factor
+
+
+def _confirmed(problem: Problem, plan: Solved, banned: Solved, thing: Thing, factor: float) -> float:
+    """Return the factor, lifted as long as a plan made anew just beyond it still gains from the law."""
     track = Track(lambda f: at_law_price(problem, thing.step, f), ask, {1.0: plan, DEAREST: banned}, {})
+    without = total_of(banned)
     for _ in range(TURNS):
         tried = factor * (1.0 + FOUND)
         offered = track.at(tried)
@@ -171,7 +194,7 @@ def break_even_law(problem: Problem, plan: Solved, banned: Solved, thing: Thing)
         # The least total is concave in the factor, so its tangent meets the plan without the law too early, never late.
         spent = total_of(offered) - total_at(at_law_price(problem, thing.step, 0.0), offered)
         factor = tried * (1.0 + saved / spent)
-    return factor if factor > CHEAPEST else None
+    return factor
 
 
 def break_even_price(
@@ -187,15 +210,54 @@ def break_even_price(
     assert taken.outcome is not None
     if problem.capital is None or within(taken.outcome.capital + max(even - price, 0.0), problem.capital):
         return even
-    low, high = (price, even) if even > price else (0.0, price)
+    return _price_within_capital(problem, thing, price, even, without, taken)
+
+
+def _price_within_capital(
+    problem: Problem, thing: Thing, price: float, even: float, without: float, taken: Solved
+) -> float | None:
+    """Return the highest price at which the best plan that takes a thing is worth it and keeps the limit on capital.
+
+    A choice that pays at a price shows it there; only where the choices known so far stop paying is the plan made anew.
+    """
+    pays = price if even > price else 0.0
+    best: Solved | None = taken if even > price else with_it(at_price(problem, thing, 0.0), thing, taken)
     for _ in range(TURNS):
-        middle = 0.5 * (low + high)
-        solved = with_it(at_price(problem, thing, middle), thing, taken)
-        pays = solved is not None and total_of(solved) <= without
-        low, high = (middle, high) if pays else (low, middle)
-        if high - low <= FOUND * high:
+        if best is None or total_of(best) > without:
+            return pays or None
+        kept = best
+        pays = _price_kept(problem, thing, kept, pays, even, without)
+        beyond = pays * (1.0 + FOUND)
+        if beyond >= even:
+            return pays or None
+        best = with_it(at_price(problem, thing, beyond), thing, kept)
+        pays = beyond if best is not None and total_of(best) <= without else pays
+    return pays or None
+
+
+def _price_kept(problem: Problem, thing: Thing, kept: Solved, low: float, high: float, without: float) -> float:
+    """Return the highest price up to which an answer's own choice pays."""
+    return _last_that_pays(lambda price: _kept_total(at_price(problem, thing, price), kept), low, high, without)
+
+
+def _last_that_pays(total: Callable[[float], float], low: float, high: float, without: float) -> float:
+    """Return the highest price up to which one choice, its levels worked out anew, costs no more than going without."""
+    if total(high) <= without:
+        return high
+    for _ in range(3 * TURNS):
+        if high - low <= 0.5 * FOUND * high:
             break
-    return low if low > 0.0 else None
+        middle = 0.5 * (low + high)
+        low, high = (middle, high) if total(middle) <= without else (low, middle)
+    return low
+
+
+def _kept_total(problem: Problem, solved: Solved) -> float:
+    """Return the least total of an answer's choice in another question, infinite where it keeps no limit there."""
+    assert solved.outcome is not None
+    rows = problem.options.ways.find(solved.problem.options.ways, solved.outcome.choice.rows)
+    fixed = None if (rows < 0).any() else solve_fixed(problem, rows)
+    return math.inf if fixed is None else fixed.outcome.money.total
 
 
 def with_it(problem: Problem, thing: Thing, near: Solved) -> Solved | None:

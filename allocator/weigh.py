@@ -2,13 +2,17 @@
 
 from __future__ import annotations
 
+import itertools
 import math
+import threading
 from collections.abc import Callable
+from dataclasses import dataclass, replace
+from typing import Any
 
+from allocator.abreast import abreast, cores
 from allocator.asker import ask, takes, total_of
 from allocator.breakeven import (
     FURTHEST_VOLUME,
-    Plans,
     break_even_law,
     break_even_level,
     break_even_price,
@@ -28,6 +32,8 @@ from allocator.solve.road import Solved, solve
 from allocator.variants import ALTERNATIVE, LAW, PURCHASE, Thing, things, without
 
 SAFETY = "it changes a safety characteristic: validate and release it anew; its floor stays whatever is bought"
+LONG = 10.0
+"""Seconds of work, by the time that the plan took, from which several processes share it."""
 Watch = Callable[[int, int], None]
 
 
@@ -50,11 +56,7 @@ def weigh_purchases(scenario: Scenario, *, watch: Watch | None = None) -> Weighe
     plan = None if problem.options.no_way else solve(problem)
     rows: list[Weighing] = []
     if plan is not None and plan.outcome is not None:
-        known, plans = things(problem), plans_at_volumes(problem, plan)
-        for place, thing in enumerate(known):
-            rows.append(_weighed(plans, thing))
-            if watch is not None:
-                watch(place + 1, len(known))
+        rows = _weigh_all(problem, plan, watch)
     reached = plan is not None and plan.outcome is not None
     volume = scenario.demand.shipped_per_year
     return Weighed(
@@ -74,6 +76,47 @@ def weigh_purchases(scenario: Scenario, *, watch: Watch | None = None) -> Weighe
     )
 
 
+@dataclass(frozen=True)
+class _Piece:
+    """One piece of the work: a thing to weigh, or (None) the volumes from which each thing pays."""
+
+    problem: Problem
+    plan: Solved
+    thing: Thing | None
+
+
+def _weigh_all(problem: Problem, plan: Solved, watch: Watch | None) -> list[Weighing]:
+    """Weigh every thing; on several processes where one plan alone takes long."""
+    known = things(problem)
+    workers = cores() if plan.seconds * len(known) > LONG else 1
+    pieces = [_Piece(problem, plan, None), *(_Piece(problem, plan, thing) for thing in known)]
+    count = itertools.count(1)
+    lock = threading.Lock()
+
+    def done() -> None:
+        with lock:
+            if watch is not None:
+                watch(next(count), len(pieces))
+
+    volumes, *rows = abreast(_worked_out, pieces, workers, done)
+    return [_from_volume(row, volume, problem.line.shipped) for row, volume in zip(rows, volumes, strict=True)]
+
+
+def _worked_out(piece: _Piece) -> Any:
+    if piece.thing is not None:
+        return _weighed(piece.problem, piece.plan, piece.thing)
+    plans = plans_at_volumes(piece.problem, piece.plan)
+    return [break_even_volume(plans, thing) for thing in things(piece.problem)]
+
+
+def _from_volume(row: Weighing, factor: float | None, shipped: float) -> Weighing:
+    return replace(
+        row,
+        break_even_volume=factor * shipped if factor else None,
+        pays_from="no volume" if factor is None else "a volume" if factor > 0.0 else "any volume",
+    )
+
+
 def _order(row: Weighing) -> tuple[bool, float]:
     """Order free moves first, then by worth; what is needed leads, what cannot be had comes last."""
     worth = row.worth_per_year
@@ -82,13 +125,12 @@ def _order(row: Weighing) -> tuple[bool, float]:
     return not row.free, -worth
 
 
-def _weighed(plans: Plans, thing: Thing) -> Weighing:
-    problem, plan = plans.problem, plans.plan
+def _weighed(problem: Problem, plan: Solved, thing: Thing) -> Weighing:
+    """Weigh one thing; from which volume it pays is filled in later, since that is the same work for all."""
     in_plan = takes(plan, thing)
     banned = ask(without(problem, thing), plan) if in_plan else plan
     taken = plan if in_plan or thing.kind == LAW else with_it(problem, thing, plan)
     worth = None if banned is None or taken is None else total_of(banned) - total_of(taken)
-    volume = break_even_volume(plans, thing)
     price, even, factor = _prices(problem, thing, banned, taken)
     return Weighing(
         step=None if thing.kind == PURCHASE else problem.scenario.step[thing.step].name,
@@ -104,8 +146,8 @@ def _weighed(plans: Plans, thing: Thing) -> Weighing:
         stated_price=price,
         break_even_price=even,
         break_even_price_factor=factor,
-        break_even_volume=volume * problem.line.shipped if volume else None,
-        pays_from="no volume" if volume is None else "a volume" if volume > 0.0 else "any volume",
+        break_even_volume=None,
+        pays_from="no volume",
         break_even_capability=_level(problem, thing, banned, taken),
         against=_against(problem, thing),
     )

@@ -38,6 +38,7 @@ TOO_LONG = (
     "a line of {:,} steps with a limit on money, a shared purchase or a choice of gates is more than can be searched "
     "(at most {:,} steps); ask without these, or for a part of the line"
 )
+BRANCHED = "branch and bound"
 
 
 @dataclass(frozen=True)
@@ -120,7 +121,7 @@ def _branch_and_bound(
         search = solve_mixed(problem, first_choices(problem), gap, SECONDS, enough)
     if search.best is None:
         return None
-    return _solved(problem, search.best, search.bound, "cutting planes and branch and bound")
+    return _solved(problem, search.best, search.bound, f"cutting planes and {BRANCHED}")
 
 
 def _settle_remainder(problem: Problem, priced: ByPrice, solved: Solved) -> Solved:
@@ -134,7 +135,7 @@ def _settle_remainder(problem: Problem, priced: ByPrice, solved: Solved) -> Solv
         return solved  # The priced answer stands with its own proof.
     assert search.best is not None
     bound = max(min(search.bound, search.value(search.best)), priced.bound)
-    method = f"{PRICE}, branch and bound over the {len(kept):,} ways left"
+    method = f"{PRICE}, {BRANCHED} over the {len(kept):,} ways left"
     settled = _solved(small, search.best, bound, method)
     return settled if settled.gap < solved.gap else solved
 

@@ -14,9 +14,10 @@ from numpy.typing import NDArray
 from scipy.sparse import coo_array, csr_array
 
 from allocator import curves as cv
-from allocator.flow import GATE_FIELDS, from_start
+from allocator.flow import GATE_FIELDS
 from allocator.problem import CAPITAL, COST, Problem
 from allocator.solve.backend import Rows
+from allocator.solve.hidden import HiddenEnds, hidden_ends
 
 Array = NDArray[np.float64]
 Terms = dict[int, float]
@@ -209,7 +210,7 @@ def _flow(master: Master) -> None:
     problem, layout, scale = master.problem, master.layout, master.defect_scale
     line, ways = problem.line, problem.options.ways
     q, shipped = line.per_finished, line.shipped
-    most_hidden = _most_hidden(problem)
+    ends = hidden_ends(problem)
     inflow: list[Terms] = [{} for _ in range(line.n_steps)]
     rolled: Terms = {}
     final: Terms = {}
@@ -218,7 +219,7 @@ def _flow(master: Master) -> None:
     for i, mine in enumerate(_ways_of(problem)):
         hidden: Terms = {}
         scrap: Terms = {int(layout.pick[w]): float(ways.gates.scrap_of_good[w]) / scale for w in mine}
-        for group, entering in _gates_of(master, mine, inflow[i], most_hidden[i]):
+        for group, entering in _gates_of(master, mine, inflow[i], ends):
             gate = {name: float(getattr(ways.gates, name)[group[0]]) for name in GATE_FIELDS}
             own = _own(master, group)
             found = plus((gate["finds"], own), (gate["earlier"], entering))
@@ -231,7 +232,7 @@ def _flow(master: Master) -> None:
         following = {} if line.feeds[i] < 0 else {int(layout.exponent[line.feeds[i]]): -1.0}
         master.equal.add({int(layout.exponent[i]): 1.0, **following, **plus((-1.0, scrap))}, 0.0)
         if line.feeds[i] >= 0:
-            leaving = layout.new(most_hidden[i] / scale)
+            leaving = layout.new(ends.behind(i) / scale)
             master.equal.add({leaving: 1.0, **plus((-1.0, hidden))}, 0.0)
             inflow[line.feeds[i]] = plus((1.0, inflow[line.feeds[i]]), (float(line.per_unit[i]), {leaving: 1.0}))
         else:
@@ -247,9 +248,11 @@ def _flow(master: Master) -> None:
     }
 
 
-def _gates_of(master: Master, mine: NDArray[np.int64], inflow: Terms, most: float) -> list[tuple[list[int], Terms]]:
+def _gates_of(
+    master: Master, mine: NDArray[np.int64], inflow: Terms, ends: HiddenEnds
+) -> list[tuple[list[int], Terms]]:
     """Return the step's ways grouped by gate, each with the part of the inflow that enters when it is chosen."""
-    table = master.problem.options.ways.gates
+    table, step = master.problem.options.ways.gates, int(master.problem.options.ways.step[mine[0]])
     groups: dict[tuple[float, ...], list[int]] = {}
     for w in mine.tolist():
         groups.setdefault(
@@ -259,20 +262,12 @@ def _gates_of(master: Master, mine: NDArray[np.int64], inflow: Terms, most: floa
         return [(group, inflow if len(groups) == 1 else {}) for group in groups.values()]
     shares: list[tuple[list[int], Terms]] = []
     for group in groups.values():
-        part = master.layout.new(most / master.defect_scale)
-        master.upper.add({part: 1.0, **{int(master.layout.pick[w]): -most / master.defect_scale for w in group}}, 0.0)
+        most = ends.before(step, float(table.earlier[group[0]]), float(table.reworked[group[0]])) / master.defect_scale
+        part = master.layout.new(most)
+        master.upper.add({part: 1.0, **{int(master.layout.pick[w]): -most for w in group}}, 0.0)
         shares.append((group, {part: 1.0}))
     master.equal.add(plus((1.0, inflow), *((-1.0, part) for _, part in shares)), 0.0)
     return shares
-
-
-def _most_hidden(problem: Problem) -> Array:
-    """Return an upper end for the hidden intensity that enters (with its own) each gate, in any choice."""
-    line, ways = problem.line, problem.options.ways
-    most = np.zeros(line.n_steps)
-    np.maximum.at(most, ways.step, ways.delta_high)
-    per_finished = from_start(line, line.per_finished * most)
-    return np.asarray(per_finished / line.per_finished)
 
 
 def _fixed_money(master: Master) -> Terms:
