@@ -11,8 +11,8 @@ from allocator.results import Weighed, Weighing
 MOST_AGAINST = 40
 HOW = (
     "Worth: the best plan without it, less the best plan with it, everything else planned anew. Price: what it may "
-    "cost at most to pay (a law: its scale). Volume: units shipped per year from which it pays. Sigma: the level that "
-    "it must really reach to pay."
+    "cost at most to pay (a law: its scale, the equipment of these plans kept). Volume: units shipped per year from "
+    "which it pays. Sigma: the level that it must really reach to pay."
 )
 NEEDED = "needed: without it the promise, a floor or a limit cannot be kept."
 ANY, NONE = "any", "none"
