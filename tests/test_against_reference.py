@@ -51,6 +51,8 @@ def table(path: Path) -> list[dict[str, str]]:
 ROWS = {int(row["seed"]): row for row in table(TABLE)}
 EDGES = table(EDGE_TABLE)
 LIVE = sorted(ROWS)[3::23]
+EVERY = [pytest.param(seed, marks=[pytest.mark.long] if at % 3 else []) for at, seed in enumerate(sorted(ROWS))]
+"""The whole sweep takes long: two scenarios in three wait for `-m long`."""
 
 
 @cache
@@ -73,7 +75,7 @@ def same(value: float | None, want: float | None, scale: float = 0.0) -> bool:
     return abs(value - want) <= SAME_MODEL * max(abs(want), scale, 1e-12)
 
 
-@pytest.mark.parametrize("seed", sorted(ROWS))
+@pytest.mark.parametrize("seed", EVERY)
 def test_total_and_bound(seed: int) -> None:
     row, plan = ROWS[seed], plan_of(seed)
     assert plan.reached == (row["reached"] == "True")
@@ -107,7 +109,7 @@ def test_near_the_best_reachable(row: dict[str, str]) -> None:
     assert {name: miss for name, miss in missed.items() if miss > KEPT} == {}
 
 
-@pytest.mark.parametrize("seed", sorted(ROWS))
+@pytest.mark.parametrize("seed", EVERY)
 def test_plan_keeps_its_promises_when_recounted(seed: int) -> None:
     plan = plan_of(seed)
     if not plan.reached:
@@ -116,7 +118,7 @@ def test_plan_keeps_its_promises_when_recounted(seed: int) -> None:
     assert {name: miss for name, miss in missed.items() if miss > KEPT} == {}
 
 
-@pytest.mark.parametrize("seed", sorted(ROWS))
+@pytest.mark.parametrize("seed", EVERY)
 def test_yields_and_money_recounted(seed: int) -> None:
     plan = plan_of(seed)
     if plan.money is None or plan.yields is None:
@@ -155,7 +157,7 @@ def figures(plan: Plan, want: dict) -> list[tuple[str, float | None, float | Non
     return rows
 
 
-@pytest.mark.parametrize("seed", sorted(ROWS))
+@pytest.mark.parametrize("seed", EVERY)
 def test_today_recounted(seed: int) -> None:
     scenario, today = scenario_of(seed), plan_of(seed).today
     want = recount(scenario, {})
@@ -167,7 +169,7 @@ def test_today_recounted(seed: int) -> None:
         assert same(getattr(today.money, name), value, want["annual_cost"]["total"]), name
 
 
-@pytest.mark.parametrize("seed", sorted(ROWS))
+@pytest.mark.parametrize("seed", EVERY)
 def test_best_reachable(seed: int) -> None:
     row, plan = ROWS[seed], plan_of(seed)
     if row["best_loss"] == "":

@@ -70,6 +70,7 @@ def test_a_peer_comes_to_our_plan_and_never_below_our_bound(
     assert -BOUND_ROUNDING <= records[-1]["gap"] <= within
 
 
+@pytest.mark.long
 @pytest.mark.parametrize("peer", ["CLARABEL", "HIGHS"])
 def test_two_thousand_steps_many_times_faster_than_the_same_in_cvxpy(peer: str) -> None:
     """The peer is stopped once it has taken that much longer without being there."""
@@ -82,6 +83,7 @@ def test_two_thousand_steps_many_times_faster_than_the_same_in_cvxpy(peer: str) 
     pytest.fail(f"{peer} took only {record['seconds'] / ours['ours']:.0f} times as long, gap {record['gap']:.0e}")
 
 
+@pytest.mark.long
 def test_what_was_measured_is_laid_out_with_its_notes() -> None:
     case = measure(Shape(20, "mixed"), seconds=60.0)
     assert case.ours["peak_MiB"] > 10.0
@@ -92,6 +94,7 @@ def test_what_was_measured_is_laid_out_with_its_notes() -> None:
     assert "got to 1e-03 only: stopped after 1 s" in text_of([case], None)
 
 
+@pytest.mark.long
 def test_a_peer_is_stopped_in_time() -> None:
     record = last_record(Shape(20_000), "CLARABEL", seconds=4.0)
     assert record["stopped"] == "stopped after 4 s"

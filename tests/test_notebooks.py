@@ -70,6 +70,7 @@ def kernel(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.delenv("MPLBACKEND", raising=False)
 
 
+@pytest.mark.long
 @pytest.mark.usefixtures("kernel")
 @pytest.mark.parametrize("path", NOTEBOOKS, ids=lambda path: path.stem)
 def test_it_runs_from_a_clean_kernel_and_shows_its_figures(path: Path) -> None:

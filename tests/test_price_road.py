@@ -57,11 +57,12 @@ def assert_roads_agree(problem: Problem) -> bool:
     return True
 
 
+@pytest.mark.parametrize("seeds", [range(70), pytest.param(range(70, 140), marks=pytest.mark.long)], ids=["", "more"])
 @pytest.mark.parametrize("hard", [False, True])
-def test_both_roads_agree_on_random_scenarios(hard: bool) -> None:
+def test_both_roads_agree_on_random_scenarios(hard: bool, seeds: range) -> None:
     """Trees, gates, copies, quotes, alternatives, up to three targets, as the reference draws them."""
     compared = 0
-    for seed in range(140):
+    for seed in seeds:
         problem = pose(scenario_from_dict(random_scenario(seed, hard)))
         if not problem.options.no_way and serves(problem):
             compared += assert_roads_agree(problem)
@@ -292,7 +293,7 @@ def test_low_yields_converge_and_say_what_overflows(defects: float, equipment: b
     assert "nan" not in render(plan, "text").lower().split()
 
 
-@pytest.mark.parametrize(("equipment", "most"), [(False, 5.0), (True, 8.0)])
+@pytest.mark.parametrize(("equipment", "most"), [(False, 5.0), pytest.param(True, 8.0, marks=pytest.mark.long)])
 def test_forty_targets_cost_a_few_plans(equipment: bool, most: float) -> None:
     """The price of yields at 2,000 steps in one sweep; processor time, the better of three counts.
 

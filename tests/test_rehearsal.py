@@ -66,6 +66,7 @@ def figures(answer: Rehearsal) -> Iterator[tuple[str, Rehearsed]]:
         yield f"scrap at {row.step}", row.scrap
 
 
+@pytest.mark.long
 def test_intervals_hold_the_computed_figures_as_often_as_they_say() -> None:
     scenario = scenario_from_dict(TREE)
     held: dict[str, int] = {}

@@ -17,7 +17,14 @@ from allocator.results import Plan
 
 FOLDER = Path(__file__).parent.parent / "scenarios"
 SCENARIOS = sorted(FOLDER.glob("*.toml"), key=lambda path: path.name)
-COMMANDS = ("check", "today", "plan", "nines", "case")
+MANY_PLANS = {(name, command) for name in ("pump", "parcels") for command in ("nines", "case")}
+ANSWERS = [
+    pytest.param(
+        str(path), command, id=f"{path.stem}-{command}", marks=[pytest.mark.long] * ((path.stem, command) in MANY_PLANS)
+    )
+    for path in SCENARIOS
+    for command in ("check", "today", "plan", "nines", "case")
+]
 WIDTH = 80
 """Columns of a terminal, and of a log."""
 MONEY = 0.01
@@ -43,7 +50,7 @@ def test_scenarios_are_shipped() -> None:
     assert {path.stem for path in SCENARIOS} >= {"bracket", "latch", "parcels", "pump"}
 
 
-@pytest.mark.parametrize("command", COMMANDS)
+@pytest.mark.parametrize(("file", "command"), ANSWERS)
 def test_text_fits_a_terminal(file: str, command: str) -> None:
     text = run(command, file).stdout
     assert text.strip()
@@ -51,7 +58,7 @@ def test_text_fits_a_terminal(file: str, command: str) -> None:
     assert not {"nan", "inf", "None"} & set(text.split())
 
 
-@pytest.mark.parametrize("command", COMMANDS)
+@pytest.mark.parametrize(("file", "command"), ANSWERS)
 def test_json_parses_and_holds_no_nan(file: str, command: str) -> None:
     answer = json.loads(run(command, file, "--json").stdout, parse_constant=refuse)
     assert answer["title"] == read_scenario(file).title

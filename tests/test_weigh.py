@@ -34,6 +34,8 @@ SEEDS = (
 )  # fmt: skip
 """Small scenarios within reach, with alternatives, purchases and laws."""
 AGAINST_REFERENCE = SEEDS[::4]
+EVERY = [pytest.param(seed, marks=[] if seed in AGAINST_REFERENCE else [pytest.mark.long]) for seed in SEEDS]
+"""The whole sweep takes long: three scenarios in four wait for `-m long`."""
 
 
 @cache
@@ -71,7 +73,7 @@ def check_signs(answer: Weighed) -> None:
         assert worths == sorted(worths, reverse=True)
 
 
-@pytest.mark.parametrize("seed", SEEDS)
+@pytest.mark.parametrize("seed", EVERY)
 def test_what_is_bought_is_worth_it_and_what_is_left_is_not(seed: int) -> None:
     check_signs(weighed(seed))
 
@@ -128,7 +130,7 @@ def is_taken(scenario: dict[str, Any], row: Weighing) -> bool:
     return taken(make_plan(scenario_from_dict(scenario)), row)
 
 
-@pytest.mark.parametrize("seed", SEEDS)
+@pytest.mark.parametrize("seed", EVERY)
 def test_the_price_turns_the_verdict(seed: int) -> None:
     scenario = random_scenario(seed)
     for row in weighed(seed).rows:
@@ -143,7 +145,7 @@ def test_the_price_turns_the_verdict(seed: int) -> None:
         assert not is_taken(above, row), row
 
 
-@pytest.mark.parametrize("seed", SEEDS)
+@pytest.mark.parametrize("seed", EVERY)
 def test_the_volume_turns_the_verdict(seed: int) -> None:
     scenario = random_scenario(seed)
     for row in weighed(seed).rows:
@@ -161,7 +163,7 @@ def at_volume(scenario: dict[str, Any], factor: float) -> dict[str, Any]:
     return scenario | {"demand": demand}
 
 
-@pytest.mark.parametrize("seed", SEEDS)
+@pytest.mark.parametrize("seed", EVERY)
 def test_the_capability_turns_the_verdict(seed: int) -> None:
     scenario = random_scenario(seed)
     for row in weighed(seed).rows:
