@@ -47,6 +47,11 @@ class Menu:
     step: Index
     fixed: Array
 
+    @property
+    def pinned(self) -> bool:
+        """Whether no way moves, smoothly or along straight pieces."""
+        return self.market.still and self.market.smooth
+
     @cached_property
     def hull(self) -> Corners:
         """The corners of every step, where no way moves."""
@@ -90,7 +95,7 @@ def balance_menu(menu: Menu, slope: Array, weight: Array, free: float, start: fl
     Where no way moves it is read off the corners. Else it is bracketed by factors from `start` > 0 and narrowed by
     secants of the load, by the tangents of the bound and by halving, in turn.
     """
-    if menu.market.still and menu.market.smooth:
+    if menu.pinned:
         read = _read_off(menu, slope, weight, free)
         if read is not None:
             return read

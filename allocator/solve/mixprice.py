@@ -14,13 +14,15 @@ from numpy.typing import NDArray
 from allocator.problem import COST, Problem
 from allocator.scenario.model import YIELD_NAMES
 from allocator.solve.answers import Market
-from allocator.solve.branch import branch, tangent_at
+from allocator.solve.branch import Tangent, branch, tangent_at
 from allocator.solve.choose import Index, Menu, Priced, balance_menu, fill_budget, first_price, price_menu
 from allocator.solve.fixed import FixedAnswer, solve_fixed
 from allocator.solve.price import Near, build_duty
 from allocator.solve.reduce import gates_given, gates_of_first
 
 PASSES = 12
+NEARLY = 1e-3
+"""Share of the money by which the tangent of scrap may miss it at the first ways that are offered."""
 SHORT_LIST, LONGEST_LIST = 500, 20_000
 """Combinations kept while the budget is filled: at first, and where these leave more than the gap."""
 
@@ -123,7 +125,7 @@ class _Search:
 
     def one_pass(self) -> None:
         """Price the menu at the tangent of scrap seen last, lift the bound, and offer what answers."""
-        tangent = tangent_at(self.duty, self.here)
+        tangent = self._near_tangent()
         self.room, self.priced = 0.0, None
         if not self.duty.loads:
             priced = price_menu(self.menu, tangent.slope, tangent.slope, 0.0)
@@ -142,6 +144,22 @@ class _Search:
             self.offer(side.best)
         if over is not None and self.best is not None and self.menu.market.still:
             self.room, self.priced = under.price * (free - under.load), sides[best]
+
+    def _near_tangent(self) -> Tangent:
+        """Return the tangent of scrap; where no way moves, at ways whose scrap it nearly tells, before an offer."""
+        tangent, menu = tangent_at(self.duty, self.here), self.menu
+        if self.best is not None or not self.duty.loads or not menu.pinned:
+            return tangent
+        weight, used, budget = self.duty.loads[0]
+        for _ in range(PASSES):
+            under, _ = balance_menu(menu, tangent.slope, weight, budget - used, self.price)
+            here = under.answers.delta[under.best]
+            truer = tangent_at(self.duty, here)
+            off = truer.rest - tangent.rest + float((truer.slope - tangent.slope) @ here)
+            if off <= NEARLY * abs(least(under)):
+                break
+            tangent, self.here, self.price = truer, here, under.price or self.price
+        return tangent
 
     def fill(self, gap: float) -> None:
         """Fill the budget by combinations of ways at the last price, and lift the bound by what none of them saves.
