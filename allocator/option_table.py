@@ -74,7 +74,8 @@ def review_table(scenario: Scenario, step: str | None = None, *, watch: Watch | 
         targets={name: math.exp(-budget) for name, budget in problem.budgets.items()},
         target_losses={name: -math.expm1(-budget) for name, budget in problem.budgets.items()},
         reached=table.best is not None, steps=tuple(shares[i] for i in wanted), rows=tuple(rows),
-        not_offered=tuple(kind for kind in EXPECTED if kind not in seen), assumed=what_is_assumed(problem),
+        not_offered=tuple(kind for kind in EXPECTED if kind not in seen),
+        left_out=_left_out(problem, wanted) if step is None else (), assumed=what_is_assumed(problem),
         cautions=cautions_of_input(problem),
     )  # fmt: skip
 
@@ -90,6 +91,12 @@ def _steps_that_matter(problem: Problem, shares: list[ReviewedStep]) -> list[int
     wanted = {i for i, step in enumerate(problem.scenario.step) if step.alternative}
     wanted |= {*by_money[:MOST_BY_SHARE], *by_defects[:MOST_BY_SHARE]}
     return [i for i in by_money if i in wanted]
+
+
+def _left_out(problem: Problem, wanted: list[int]) -> tuple[str, ...]:
+    """Return the steps that only their law could improve and that are not among those looked at."""
+    steps = problem.scenario.step
+    return tuple(s.name for i, s in enumerate(steps) if i not in wanted and s.improve is not None and not s.fixed)
 
 
 @dataclass(frozen=True)

@@ -103,6 +103,13 @@ def refuse_unfit_money(spend: float | None, capital: float | None) -> None:
             raise refused(option, f"{amount:g}", "give an amount of money, 0 or more")
 
 
+def refuse_target_beside_money(target: bool, spend: float | None, capital: float | None) -> None:
+    """The best yield for the money has no target to meet; one given beside it would go unheard."""
+    option = "--spend" if spend is not None else "--capital" if capital is not None else None
+    if target and option is not None:
+        raise refused(option, "a target beside it", f"{option} asks for the best yield: leave the target out")
+
+
 def levels_held(texts: list[str]) -> dict[str, dict[str, float]]:
     """The levels that suppliers insist on, by step, from texts as "weld=cpk:1.33"."""
     held: dict[str, dict[str, float]] = {}

@@ -19,6 +19,7 @@ from allocator.cli.asked import (
     losses_asked,
     name_of,
     named,
+    refuse_target_beside_money,
     refuse_unfit_confidence,
     refuse_unfit_money,
     split_of,
@@ -91,6 +92,7 @@ def plan(
     yields = {Which.final: final_yield, Which.rolled: rolled_yield, Which.shipped: shipped_yield}
     losses = losses_asked({which: text for which, text in yields.items() if text is not None}, nines, ppm)
     refuse_unfit_money(spend, capital)
+    refuse_target_beside_money(bool(losses), spend, capital)
     if xlsx is not None and xlsx.suffix.lower() != ".xlsx":
         raise refused("--xlsx", str(xlsx), "name a workbook, as plan.xlsx")
     refuse_unfit_confidence(confidence, spend, capital)

@@ -31,4 +31,5 @@ def report(
     write_page(page_html(review), target)
     typer.echo(f"Wrote {target}. Open it in a browser; it needs no network.")
     if not review.plan.reached:
+        typer.echo("The target cannot be met: the page shows the best within reach, and what holds it.", err=True)
         raise typer.Exit(OUT_OF_REACH)

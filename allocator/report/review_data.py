@@ -19,7 +19,7 @@ def review_json(review: Review) -> dict[str, Any]:
         **pick(review, ("targets", "reached")),
         "steps": [asdict(step) for step in review.steps],
         "options": [_option(row) for row in review.rows],
-        **pick(review, ("not_offered", "assumed")),
+        **pick(review, ("not_offered", "left_out", "assumed")),
         "cautions": cautions_json(review.cautions),
     }
 

@@ -30,6 +30,10 @@ def review_text(review: Review, width: int = LOG_WIDTH) -> str:
     _write_options(paper, review)
     _write_alone(paper, review)
     _write_against(paper, review)
+    if review.left_out:
+        names = words.listed([words.clean(name) for name in review.left_out])
+        paper.heading(f"Not on this table, since only their law of improvement could change them: {names}.")
+        paper.say("See `allocator weigh` for what each is worth, or ask for one with --step.")
     if review.not_offered:
         paper.heading(f"Nobody has offered here: {', '.join(review.not_offered)}.")
     blocks.write_assumed(paper, review.assumed)

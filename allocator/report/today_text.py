@@ -53,7 +53,9 @@ def _write_steps(paper: Paper, today: Today) -> None:
 
 def level_row(step: StepToday) -> list[str]:
     level = step.level
-    first_pass = words.percent(step.first_pass_yield, 1.0 - step.first_pass_yield)
+    loss = 1.0 - step.first_pass_yield
+    # A gate that finds and rejects nothing says nothing of quality.
+    first_pass = "finds none" if loss == 0.0 else words.percent(step.first_pass_yield, loss)
     return [
         step.step, words.fixed(level.sigma_level), words.fixed(level.cpk), words.fixed(level.cpk_after_shift),
         first_pass, words.number(level.dpu), words.number(level.ppm),

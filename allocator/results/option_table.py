@@ -81,6 +81,8 @@ class Review:
     """Living with the scrap first, then the cheapest plan, then step by step: as it is, and each option."""
     not_offered: tuple[str, ...]
     """Kinds of option that the scenario offers at none of these steps."""
+    left_out: tuple[str, ...]
+    """Steps that only their law could improve, and that are not in the table."""
     assumed: tuple[str, ...]
     cautions: tuple[Caution, ...]
 

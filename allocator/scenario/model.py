@@ -213,7 +213,7 @@ class Demand(Table):
 
     shipped_per_year: Positive
     years: Positive | None = None
-    discount_rate: Nonnegative | None = None
+    discount_rate: BelowOne | None = None
 
 
 class Target(Table):
