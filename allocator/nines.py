@@ -13,6 +13,7 @@ from allocator.scenario.model import Scenario
 from allocator.solve.road import Solved, solve
 from allocator.standing import line_today
 
+TODAY = "today's yield"
 END = "highest reachable"
 SAME = 1e-9
 """Two losses within this share of each other are one point."""
@@ -93,7 +94,7 @@ def _loss(yields: Yields, split: str) -> float:
 
 def _stops(problem: Problem, today: float, highest: BestReachable, points: int | None) -> list[_Stop]:
     """Return the stops in rising yield, each loss once; nothing above the highest reachable."""
-    stops = [_Stop("today", today), _Stop(END, highest.loss)]
+    stops = [_Stop(TODAY, today), _Stop(END, highest.loss)]
     budget = problem.budgets.get(problem.split)
     if budget is not None:
         stops.append(_Stop("target", -math.expm1(-budget)))
@@ -104,7 +105,7 @@ def _stops(problem: Problem, today: float, highest: BestReachable, points: int |
         ]
         stops += _grid(nines_of(today), end, points or 0)
     kept: list[_Stop] = []
-    for stop in sorted(stops, key=lambda s: (-s.loss, s.label != "today")):
+    for stop in sorted(stops, key=lambda s: (-s.loss, s.label != TODAY)):
         reachable = stop.loss >= highest.loss * (1.0 - SAME)
         if reachable and 0.0 <= stop.loss < 1.0 and not (kept and abs(kept[-1].loss - stop.loss) <= SAME * stop.loss):
             kept.append(stop)

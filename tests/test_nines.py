@@ -52,7 +52,7 @@ def test_points_at_today_every_whole_nine_the_target_and_the_end() -> None:
     """Today 1 − 0.98·0.97·0.99 (1.23 nines); the end is 1 − 0.9999³ (3.52 nines)."""
     answer = nines(shop(final_yield=0.992))
     assert [point.label for point in answer.rows] == [
-        "today", "whole nine", "target", "whole nine", "highest reachable",
+        "today's yield", "whole nine", "target", "whole nine", "highest reachable",
     ]  # fmt: skip
     assert [point.nines for point in answer.rows] == pytest.approx(
         [nines_of(1 - 0.98 * 0.97 * 0.99), 2.0, nines_of(0.008), 3.0, nines_of(1 - 0.9999**3)], rel=1e-9
@@ -107,14 +107,14 @@ def test_a_point_is_the_plan_for_that_yield() -> None:
         assert plan.reached
         assert plan.money is not None
         assert point.total == pytest.approx(plan.money.total, rel=SAME)
-        if point.label not in ("today", "highest reachable"):  # at both ends the price is one-sided
+        if point.label not in ("today's yield", "highest reachable"):  # at both ends the price is one-sided
             assert point.price_of_defect_budget == pytest.approx(plan.price_of_defect_budget, rel=1e-4)
 
 
 def test_nothing_binds_at_the_yield_of_the_optimum() -> None:
     """Here the optimum is to leave the line as it is, so today's yield comes for nothing."""
     first = nines(shop()).rows[0]
-    assert first.label == "today"
+    assert first.label == "today's yield"
     assert first.price_of_defect_budget == 0.0
 
 
@@ -123,7 +123,7 @@ def test_totals_follow_the_prices_where_the_same_is_bought() -> None:
     compared = 0
     for before, after in pairwise(priced().rows):
         prices = (before.price_of_defect_budget, after.price_of_defect_budget)
-        if after.changes or not all(prices) or {before.label, after.label} & {"today", "highest reachable"}:
+        if after.changes or not all(prices) or {before.label, after.label} & {"today's yield", "highest reachable"}:
             continue
         low, high = budget(after), budget(before)
         left, right = (price * width for price, width in zip(prices, (high, low), strict=True) if price is not None)

@@ -15,7 +15,7 @@ REACH = 0.18
 """Half-length of the line that shows a local price [nines]."""
 ROOM = 0.22
 """Room above and below the curve, for the names of its points."""
-NAMED = ("today", "target", "highest reachable")
+NAMED = ("today's yield", "target", "highest reachable")
 
 
 def frontier(nines: Nines, ax: Axes | None = None) -> Axes:

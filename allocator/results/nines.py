@@ -21,7 +21,7 @@ class NinesPoint:
     """One point of the price of nines."""
 
     label: str
-    """'today', 'whole nine', 'target', 'highest reachable', 'grid' or 'economic optimum'."""
+    """today's yield, 'whole nine', 'target', 'highest reachable', 'grid' or 'economic optimum'."""
     nines: float
     target_yield: float
     target_loss: float
