@@ -11,7 +11,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.sparse import coo_array, csr_array
+from scipy.sparse import csr_array
 
 from allocator import curves as cv
 from allocator.flow import GATE_FIELDS
@@ -27,18 +27,32 @@ class Sheet:
     """Rows collected one by one as {variable: coefficient} ≤ or = a constant."""
 
     def __init__(self) -> None:
-        self.entries: list[tuple[int, int, float]] = []
+        self.variables: list[int] = []
+        self.values: list[float] = []
+        self.starts: list[int] = [0]
         self.constants: list[float] = []
 
+    def __len__(self) -> int:
+        return len(self.constants)
+
     def add(self, terms: Terms, constant: float) -> None:
-        row = len(self.constants)
-        self.entries.extend((row, variable, value) for variable, value in terms.items() if value != 0.0)
+        kept = [(variable, value) for variable, value in terms.items() if value != 0.0]
+        self.variables.extend([variable for variable, _ in kept])
+        self.values.extend([value for _, value in kept])
+        self.starts.append(len(self.variables))
         self.constants.append(constant)
 
-    def matrix(self, width: int) -> csr_array:
-        table = np.array(self.entries, dtype=float).reshape(len(self.entries), 3)
-        where = (table[:, 0].astype(np.int64), table[:, 1].astype(np.int64))
-        return coo_array((table[:, 2], where), shape=(len(self.constants), width)).tocsr()
+    def matrix(self, width: int, since: int = 0) -> csr_array:
+        """Return the coefficients of the rows from one on, shape (n_rows − since, width)."""
+        begin = self.starts[since]
+        starts = np.array(self.starts[since:], dtype=np.int32) - begin
+        variables = np.array(self.variables[begin:], dtype=np.int32)
+        values = np.array(self.values[begin:], dtype=float)
+        return csr_array((values, variables, starts), shape=(len(self) - since, width))
+
+    def limits(self, since: int = 0) -> Array:
+        """Return the constants of the rows from one on."""
+        return np.array(self.constants[since:], dtype=float)
 
 
 def plus(*terms: tuple[float, Terms]) -> Terms:
@@ -97,8 +111,8 @@ class Master:
         for variable, value in self.totals[self.problem.objective].items():
             cost[variable] = value
         return Rows(
-            cost, self.upper.matrix(width), np.array(self.upper.constants), self.equal.matrix(width),
-            np.array(self.equal.constants), np.array(self.layout.low), np.array(self.layout.high),
+            cost, self.upper.matrix(width), self.upper.limits(), self.equal.matrix(width),
+            self.equal.limits(), np.array(self.layout.low), np.array(self.layout.high),
             np.array(self.layout.binary),
         )  # fmt: skip
 
