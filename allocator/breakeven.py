@@ -7,6 +7,7 @@ from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 import numpy as np
+from scipy.optimize import brentq
 
 from allocator.asker import Track, ask, law_slope_at_start, takes, total_at, total_of, value_of_defects
 from allocator.capability import log_defects, sigma_from_log_defects
@@ -23,6 +24,8 @@ PER_DECADE = 3
 """Volumes per decade at which the plan is made to see where it changes."""
 FOUND = 1e-4
 """A volume, a price factor or a level is found when the verdict turns within this share of it."""
+ROOT = 0.25 * FOUND
+"""Share of a price within which its root is found, to be stepped back to the side that pays."""
 SAME = 2e-7
 """Totals that differ by less than this share are the same: each is solved to 1e-7."""
 CHEAPEST = 1e-4
@@ -242,21 +245,24 @@ def _price_kept(problem: Problem, thing: Thing, kept: Solved, low: float, high: 
 
 def _last_that_pays(total: Callable[[float], float], low: float, high: float, without: float) -> float:
     """Return the highest price up to which one choice, its levels worked out anew, costs no more than going without."""
-    if total(high) <= without:
+    loss = {high: total(high) - without}
+    if loss[high] <= 0.0:
         return high
-    for _ in range(3 * TURNS):
-        if high - low <= 0.5 * FOUND * high:
-            break
+    while not math.isfinite(loss[high]) and high - low > ROOT * high:
         middle = 0.5 * (low + high)
-        low, high = (middle, high) if total(middle) <= without else (low, middle)
-    return low
+        loss[middle] = total(middle) - without
+        low, high = (middle, high) if loss[middle] <= 0.0 else (low, middle)
+    if not math.isfinite(loss[high]) or loss.setdefault(low, total(low) - without) >= 0.0:
+        return low
+    even = brentq(lambda price: loss[price] if price in loss else total(price) - without, low, high, rtol=ROOT)
+    return max(low, float(even) * (1.0 - ROOT))
 
 
 def _kept_total(problem: Problem, solved: Solved) -> float:
     """Return the least total of an answer's choice in another question, infinite where it keeps no limit there."""
     assert solved.outcome is not None
     rows = problem.options.ways.find(solved.problem.options.ways, solved.outcome.choice.rows)
-    fixed = None if (rows < 0).any() else solve_fixed(problem, rows)
+    fixed = None if (rows < 0).any() else solve_fixed(problem, rows, near=solved.near)
     return math.inf if fixed is None else fixed.outcome.money.total
 
 

@@ -16,7 +16,9 @@ from scipy.special import log_ndtr, ndtri_exp
 Array = NDArray[np.float64]
 
 LOG_ROOT_TWO_PI = 0.5 * np.log(2.0 * np.pi)
-NEWTON_STEPS = 40
+MOST_STEPS = 40
+NEAR_ENOUGH = 1e-6
+"""Relative length of a step of Halley's method after which its error, of third order in the step, is rounding."""
 
 
 def _arguments(z: ArrayLike, k: ArrayLike, shift: ArrayLike, sides: ArrayLike) -> tuple[Array, Array, Array, Array]:
@@ -98,8 +100,8 @@ def sigma_from_log_defects(log_p: ArrayLike, k: ArrayLike = 0.0, shift: ArrayLik
 
     Notes
     -----
-    One limit: closed form. Two limits: p/2 ≤ near tail ≤ p brackets z; Newton on ln p from the upper end, where
-    ln p is concave, falls monotonically to the root.
+    One limit: closed form. Two limits: p/2 ≤ near tail ≤ p brackets z; Halley's method on ln p starts at the end
+    where one tail rules: the lower one where the mean lies off the middle, the upper one where the tails are alike.
 
     >>> round(float(sigma_from_log_defects(np.log(3.4e-6), shift=1.5, sides=1)), 3)
     6.0
@@ -111,23 +113,24 @@ def sigma_from_log_defects(log_p: ArrayLike, k: ArrayLike = 0.0, shift: ArrayLik
         return low[()]
     low = np.where(two, np.maximum(low, 0.0), low)
     high = np.maximum((drift - ndtri_exp(target - np.log(2.0))) / (1.0 - offset), low)
-    z = np.where(two, high, low)
+    z = np.where(two & (offset == 0.0) & (drift == 0.0), high, low)
     z, target, offset, drift, low, high, two = np.atleast_1d(z, target, offset, drift, low, high, two)
     z[two] = _inverted(*(x[two] for x in (z, target, offset, drift, low, high)))
     return z.reshape(limits.shape)[()]
 
 
 def _inverted(z: Array, target: Array, offset: Array, drift: Array, low: Array, high: Array) -> Array:
-    """Return the levels with two limits by Newton from z, all arrays of one shape (n,).
+    """Return the levels with two limits by Halley's method from z, all arrays of one shape (n,).
 
     A level that has settled is left alone, so that a result does not depend on what else is in the array.
     """
     moving = np.arange(len(z))
-    for _ in range(NEWTON_STEPS):
-        value, slope, _ = log_slopes(z[moving], offset[moving], drift[moving], 2)
-        stepped = z[moving] - (value - target[moving]) / slope
-        moved = np.clip(stepped, low[moving], high[moving])
-        far = np.abs(moved - z[moving]) > 1e-13 * np.maximum(np.abs(z[moving]), 1.0)
+    for _ in range(MOST_STEPS):
+        value, slope, bend = log_slopes(z[moving], offset[moving], drift[moving], 2)
+        newton = (value - target[moving]) / slope
+        step = newton / (1.0 - 0.5 * newton * (bend - slope**2) / slope)
+        moved = np.clip(z[moving] - step, low[moving], high[moving])
+        far = np.abs(moved - z[moving]) > NEAR_ENOUGH * np.maximum(np.abs(z[moving]), 1.0)
         z[moving] = moved
         moving = moving[far]
         if len(moving) == 0:

@@ -66,9 +66,10 @@ def solve_fixed(
         return _at_an_end(problem, rows, ways.z_high[rows])
     if problem.objective == CAPITAL and not problem.budgets and problem.spend is None:
         return _at_an_end(problem, rows, ways.z_low[rows])
-    by_price = _by_price(problem, rows, hopeless, near)
-    if by_price is not None:
-        return by_price
+    if _budgets_likely_rule(problem, near):
+        by_price = _by_price(problem, rows, hopeless, near)
+        if by_price is not None and keeps_limits(problem, by_price.outcome):
+            return by_price
     if int(ways.moves[rows].sum()) > MOST_LEVELS:
         raise SolverError(TOO_MANY.format(int(ways.moves[rows].sum()), MOST_LEVELS))
     program = build_program(problem, rows)
@@ -107,12 +108,19 @@ def _at_an_end(problem: Problem, rows: NDArray[np.int64], z: Array) -> FixedAnsw
     )
 
 
+def _budgets_likely_rule(problem: Problem, near: Near | None) -> bool:
+    """Return whether budgets alone are likely to couple the steps: a limit that bound nearby is likely to bind here."""
+    binds = problem.capital is not None and (near is None or near.prices.get(CAPITAL, 0.0) > 0.0)
+    return problem.by_price and problem.objective == COST and problem.spend is None and not binds
+
+
 def _by_price(
     problem: Problem, rows: NDArray[np.int64], hopeless: float | None, near: Near | None
 ) -> FixedAnswer | None:
-    """Return the answer of the price road, where budgets alone couple the steps and it closes the gap; else None."""
-    if not problem.by_price or problem.objective != COST or problem.capital is not None or problem.spend is not None:
-        return None
+    """Return the answer of the price road, a limit on capital left aside, where it closes the gap; else None.
+
+    What keeps that limit all the same is the best answer under it too, and its price is then 0.
+    """
     ways, line = problem.options.ways, problem.line
     gates = Gates(*(getattr(ways.gates, name)[rows] for name in GATE_FIELDS))
     curves = ways.curves.take(rows)
@@ -138,6 +146,8 @@ def _by_price(
     if not len(moving):
         return FixedAnswer(outcome, outcome.money.total, None, STILL)
     prices = dict(zip(problem.budgets, cleared.prices.tolist(), strict=True))
+    if problem.capital is not None:
+        prices[CAPITAL] = 0.0
     return FixedAnswer(outcome, min(cleared.bound + aside, outcome.money.total), prices, PRICE)
 
 

@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from allocator.problem import COST, Problem
 from allocator.solve.fixed import FixedAnswer, solve_fixed
+from allocator.solve.price import Near
 
 CLOSED = 0.3
 """Share of the gap aimed at within which a branch is closed: the rest is for the tolerances of what comes after."""
@@ -38,8 +39,10 @@ class Search:
         """Solve for one way per step (once) and keep it if it is the best so far."""
         key = rows.tobytes()
         if key not in self.tried:
-            hopeless = None if self.best is None else self.value(self.best)
-            self.tried[key] = solve_fixed(self.problem, rows, hopeless)
+            best = self.best
+            hopeless = None if best is None else self.value(best)
+            near = None if best is None else Near(best.outcome.flow.intensity, best.price or {})
+            self.tried[key] = solve_fixed(self.problem, rows, hopeless, near)
         answer = self.tried[key]
         if answer is not None and (self.best is None or self.value(answer) < self.value(self.best)):
             self.best = answer
