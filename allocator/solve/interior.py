@@ -19,7 +19,7 @@ Array = NDArray[np.float64]
 GAP = 1e-10
 """Relative gap aimed at."""
 ITERATIONS = 120
-CENTRING = 4.0
+CENTRING = 10.0
 """By how much the barrier weight grows per iteration."""
 INTERIOR = 1e-12
 """A budget with less room than this share of itself, which is the rounding of its figures, is taken as having none."""

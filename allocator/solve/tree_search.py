@@ -29,8 +29,8 @@ SETTLED = 1e-9
 """The root has settled when a round of tangents lifts its bound by less than this share."""
 ROUNDS_AT_BRANCH = 2
 ROUNDS_AT_LEAF = 30
-MOST_BRANCHES = 1_500
-"""Branches after which the master is better solved whole."""
+MOST_SPLITS = 500
+"""Splits after which the master is better solved whole."""
 WHOLE = 1e-6
 """How near to 0 or 1 a share must be to be taken as a choice."""
 
@@ -67,7 +67,7 @@ class TreeSearch:
         self._told = len(master.upper)
         self._closed = np.inf
         self._open: list[_Branch] = []
-        self._branches = itertools.count()
+        self._splits = 0
 
     def grow(self) -> None:
         """Grow until the gap is closed, no branch is left, or there are too many."""
@@ -86,7 +86,7 @@ class TreeSearch:
         return bool(self._open)
 
     def _spent(self) -> bool:
-        return next(self._branches) > MOST_BRANCHES or time.monotonic() > self.until
+        return self._splits > MOST_SPLITS or time.monotonic() > self.until
 
     def _settle_root(self) -> _Branch:
         """Add tangents until the bound of the whole settles, try its roundings, and leave out what it excludes."""
@@ -150,8 +150,9 @@ class TreeSearch:
         at = int(np.argmax(np.minimum(x, 1.0 - x)))
         up, down = branch.low.copy(), branch.high.copy()
         up[at], down[at] = 1.0, 0.0
-        taken = _Branch(branch.bound, next(self._branches), up, branch.high)
-        left = _Branch(branch.bound, next(self._branches), branch.low, down)
+        self._splits += 1
+        taken = _Branch(branch.bound, 2 * self._splits, up, branch.high)
+        left = _Branch(branch.bound, 2 * self._splits + 1, branch.low, down)
         return (taken, left) if x[at] >= 0.5 else (left, taken)
 
     def _relax(self, low: Array, high: Array) -> RelaxedAnswer | None:
