@@ -12,9 +12,8 @@ from numpy.typing import NDArray
 from allocator.problem import COST, Problem
 from allocator.solve.backend import solve_whole
 from allocator.solve.cuts import cuts_at, cuts_for_choice, first_cuts
-from allocator.solve.rows import Master, build_master
+from allocator.solve.rows import Master, build_master, nearest_choice
 from allocator.solve.search import Search
-from allocator.solve.tree_search import TreeSearch, nearest_choice
 
 Array = NDArray[np.float64]
 ROUNDS_WHOLE = 25
@@ -45,6 +44,8 @@ def solve_mixed(
             return search
     if search.best is None:
         return search
+    from allocator.solve.tree_search import TreeSearch  # here, because most questions need no solver
+
     master = _master(search)
     tree = TreeSearch(search, master, gap, began + seconds)
     tree.grow()

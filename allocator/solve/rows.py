@@ -316,3 +316,11 @@ def _limits(master: Master) -> None:
         master.upper.add({v: c / size for v, c in master.totals[CAPITAL].items()}, problem.capital / size)
     if problem.spend is not None:
         master.upper.add(master.totals[COST], problem.spend / master.money_scale)
+
+
+def nearest_choice(master: Master, x: Array) -> NDArray[np.int64]:
+    """Return for each step its way with the largest share in x."""
+    step, share = master.problem.options.ways.step, x[master.layout.pick]
+    order = np.lexsort((share, step))
+    last = np.flatnonzero(np.diff(step[order], append=master.problem.line.n_steps) != 0)
+    return np.asarray(order[last], dtype=np.int64)

@@ -18,7 +18,7 @@ from allocator.errors import SolverError
 from allocator.solve.backend import RelaxedAnswer, reduced_costs
 from allocator.solve.cuts import cuts_at, cuts_for_choice
 from allocator.solve.relaxed import Relaxed
-from allocator.solve.rows import Master
+from allocator.solve.rows import Master, nearest_choice
 from allocator.solve.search import CLOSED, Search
 
 Array = NDArray[np.float64]
@@ -187,11 +187,3 @@ class TreeSearch:
         value = self.search.value_of_best
         lifted = bound + reduced[self.master.layout.pick] * self.master.objective_scale
         return np.asarray(lifted > value + 1e-9 * abs(value))
-
-
-def nearest_choice(master: Master, x: Array) -> NDArray[np.int64]:
-    """Return for each step its way with the largest share in x."""
-    step, share = master.problem.options.ways.step, x[master.layout.pick]
-    order = np.lexsort((share, step))
-    last = np.flatnonzero(np.diff(step[order], append=master.problem.line.n_steps) != 0)
-    return np.asarray(order[last], dtype=np.int64)
