@@ -7,12 +7,12 @@ from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 import numpy as np
-from scipy.optimize import brentq
 
 from allocator.asker import Track, ask, law_slope_at_start, takes, total_at, total_of, value_of_defects
 from allocator.capability import log_defects, sigma_from_log_defects
 from allocator.changed import at_law_price, at_level, at_price, at_volume, level_of
 from allocator.problem import Problem, within
+from allocator.roots import root_between
 from allocator.scenario.level import Level
 from allocator.solve.fixed import solve_fixed
 from allocator.solve.road import BRANCHED, Solved
@@ -254,8 +254,10 @@ def _last_that_pays(total: Callable[[float], float], low: float, high: float, wi
         low, high = (middle, high) if loss[middle] <= 0.0 else (low, middle)
     if not math.isfinite(loss[high]) or loss.setdefault(low, total(low) - without) >= 0.0:
         return low
-    even = brentq(lambda price: loss[price] if price in loss else total(price) - without, low, high, rtol=ROOT)
-    return max(low, float(even) * (1.0 - ROOT))
+    even = root_between(
+        lambda price: loss[price] if price in loss else total(price) - without, low, high, relative=ROOT
+    )
+    return max(low, even * (1.0 - ROOT))
 
 
 def _kept_total(problem: Problem, solved: Solved) -> float:

@@ -10,10 +10,10 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike
-from scipy.optimize import brentq
 from scipy.special import betainc, chdtri, nctdtr, nctdtrit
 
 from allocator.errors import RangeError
+from allocator.roots import root_between
 
 MOST_PARTS = 10**15
 """Beyond this a count of parts is no longer exact in floating point, nor of use to anyone."""
@@ -145,7 +145,7 @@ def lower_bound_cpk(observed: float, n: int, confidence: float, degrees: float |
         low -= half
     while over(high) > 0.0:
         high += half
-    return float(brentq(over, low, high, xtol=1e-12 * (1.0 + abs(t)), rtol=8.9e-16)) / root
+    return root_between(over, low, high, absolute=1e-12 * (1.0 + abs(t))) / root
 
 
 def standard_error_cpk(observed: ArrayLike, n: ArrayLike, degrees: ArrayLike) -> Any:

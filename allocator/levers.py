@@ -13,12 +13,12 @@ from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.optimize import brentq
 
 from allocator.flow import money, run
 from allocator.money import capital_recovery
 from allocator.problem import Problem
 from allocator.results import Asset, Lever
+from allocator.roots import root_between
 from allocator.stands import Stand, rate_of
 
 QUARTER = (0.75, 1.25)
@@ -177,7 +177,7 @@ def _total(stand: Stand, paid: _Paid, changed: _Changed) -> float:
 def _nearest_root(worth: Callable[[float], float], base: float, grid: NDArray[np.float64]) -> float | None:
     values = [worth(float(x)) for x in grid]
     crossings = [i for i in range(len(grid) - 1) if values[i] * values[i + 1] <= 0.0 and values[i] != values[i + 1]]
-    roots = [float(brentq(worth, grid[i], grid[i + 1], xtol=1e-12, rtol=1e-12)) for i in crossings]
+    roots = [root_between(worth, grid[i], grid[i + 1], relative=1e-12) for i in crossings]
     return min(roots, key=lambda root: _distance(root, base), default=None)
 
 

@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 
 from allocator import curves as cv
 from allocator.curves import Curves
+from allocator.roots import root_between
 
 Array = NDArray[np.float64]
 GRID = 65
@@ -77,11 +78,9 @@ def _curvature(curve: Curves, levels: Array) -> Array:
 
 
 def _sign_changes(curve: Curves, levels: Array, bend: Array) -> list[float]:
-    from scipy.optimize import brentq  # here, because its import costs 0.2 s and few laws need it
-
     changes = np.flatnonzero((bend[:-1] < 0.0) != (bend[1:] < 0.0))
     return [
-        float(brentq(lambda z: _curvature(curve, np.array([z]))[0], levels[i], levels[i + 1], xtol=1e-13))
+        root_between(lambda z: _curvature(curve, np.array([z]))[0], levels[i], levels[i + 1], absolute=1e-13)
         for i in changes
     ]
 

@@ -49,6 +49,24 @@ def test_a_cold_command_answers_within(arguments: tuple[str, ...], seconds: floa
     assert best_seconds(*arguments, enough=seconds) <= seconds
 
 
+@pytest.mark.parametrize(
+    ("scenario", "absent"),
+    [
+        ("latch", ("highspy", "cvxpy", "pandas", "scipy.optimize", "matplotlib")),
+        ("latch_bought", ("highspy", "cvxpy", "pandas", "matplotlib")),
+        ("bracket", ("highspy", "cvxpy", "pandas", "matplotlib")),
+        ("parcels", ("cvxpy", "pandas", "matplotlib")),
+        ("pump", ("cvxpy", "pandas", "matplotlib")),
+    ],
+)
+def test_a_plan_loads_only_what_it_needs(scenario: str, absent: tuple[str, ...]) -> None:
+    told = f"import sys; from allocator.cli import main; sys.argv = ['allocator', 'plan', 'scenarios/{scenario}.toml']"
+    loaded = f"print([name for name in {absent!r} if name in sys.modules], file=sys.stderr)"
+    program = f"{told}\ntry:\n    main()\nexcept SystemExit:\n    pass\n{loaded}"
+    ran = subprocess.run([sys.executable, "-c", program], cwd=ROOT, check=True, capture_output=True, text=True)
+    assert ran.stderr.strip() == "[]"
+
+
 def long_line(steps: int, offers: int, seed: int = 7) -> dict[str, Any]:
     """A line in which every step has so many machines on offer, three in ten also a law; gates leak and mend."""
     draw = random.Random(seed)
