@@ -14,6 +14,7 @@ import pytest
 
 from allocator.plan import make_plan
 from allocator.scenario.read import scenario_from_dict
+from tests.benchmarks.cases import end_to_end
 
 ROOT = Path(__file__).parent.parent
 RUNS = 3
@@ -21,6 +22,8 @@ RUNS = 3
 MIXED_GAP = 1e-4
 """Promised up to 200 steps of 6 ways."""
 MIXED_SECONDS = 10.0
+TABLE_SECONDS = 12.0
+"""Promised from a table of 100,000 steps to the plan as JSON."""
 
 
 def processor_seconds() -> float:
@@ -65,6 +68,18 @@ def test_a_plan_loads_only_what_it_needs(scenario: str, absent: tuple[str, ...])
     program = f"{told}\ntry:\n    main()\nexcept SystemExit:\n    pass\n{loaded}"
     ran = subprocess.run([sys.executable, "-c", program], cwd=ROOT, check=True, capture_output=True, text=True)
     assert ran.stderr.strip() == "[]"
+
+
+@pytest.mark.long
+def test_a_table_of_a_hundred_thousand_steps_is_planned_within() -> None:
+    taken = []
+    for _ in range(RUNS):
+        taken.append(end_to_end(100_000))
+        assert taken[-1]["exit"] == 0
+        assert taken[-1]["gap"] <= 1e-9
+        if taken[-1]["seconds"] <= TABLE_SECONDS:
+            break
+    assert min(record["seconds"] for record in taken) <= TABLE_SECONDS
 
 
 def long_line(steps: int, offers: int, seed: int = 7) -> dict[str, Any]:

@@ -6,7 +6,8 @@ from collections.abc import Iterator
 
 from allocator.cautions.input import cautions_of_input, is_judged
 from allocator.problem import Problem
-from allocator.results import Caution, Plan
+from allocator.results import Caution, Plan, StepTarget
+from allocator.scenario.model import Step
 
 PROMISED_GAP = 1e-4
 DEMONSTRATED_BY = 3.0
@@ -25,7 +26,9 @@ def _of_answer(problem: Problem, plan: Plan) -> Iterator[Caution]:
             "at_cap", capped, "the plan sits at the end of what was demonstrated or quoted: the true optimum may lie beyond",
             "ask for a quotation, or demonstrate a better level, and raise up_to",
         )  # fmt: skip
-    rests = tuple(s.step for i, s in enumerate(plan.rows) if _bought_on_judgement(problem, plan, i))
+    rests = tuple(
+        row.step for step, row in zip(problem.scenario.step, plan.rows, strict=False) if _bought_on_judgement(step, row)
+    )
     if rests:
         yield Caution(
             "plan_rests_on_judgement", rests, "what the plan does here rests on judged figures",
@@ -51,11 +54,10 @@ def _of_answer(problem: Problem, plan: Plan) -> Iterator[Caution]:
         )  # fmt: skip
 
 
-def _bought_on_judgement(problem: Problem, plan: Plan, i: int) -> bool:
-    step, row = problem.scenario.step[i], plan.rows[i]
+def _bought_on_judgement(step: Step, row: StepTarget) -> bool:
     if row.law is not None and step.improve is not None and is_judged(step.improve):
         return True
-    return any(is_judged(a) for a in step.alternative if a.name in row.alternatives)
+    return bool(row.alternatives) and any(is_judged(a) for a in step.alternative if a.name in row.alternatives)
 
 
 def _cannot_be_shown(ppm: float, items: float) -> bool:

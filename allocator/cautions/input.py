@@ -15,9 +15,9 @@ from allocator.capability import study_index
 from allocator.cautions.clusters import cautions_of_clusters
 from allocator.problem import Problem, inspection_stated
 from allocator.results import Caution
-from allocator.scenario.level import LONG_TERM, given
-from allocator.scenario.levels import column
-from allocator.scenario.model import Alternative, Capability, Inspection, Step, Table
+from allocator.scenario.level import LONG_TERM
+from allocator.scenario.levels import column, given_in
+from allocator.scenario.model import Alternative, Inspection, Step
 from allocator.standing import flow_today
 from allocator.states import sigmas_meant
 
@@ -59,13 +59,29 @@ def _offering(problem: Problem, test: Callable[[Alternative], bool]) -> list[str
     return [step.name for step in problem.scenario.step if step.alternative and any(map(test, step.alternative))]
 
 
-def _quoting(problem: Problem, test: Callable[[Capability], bool]) -> list[str]:
-    """Return the names of the steps whose capability passes a test, or that of an alternative."""
+def _given(problem: Problem, *names: str) -> Flags:
+    """Return where a step's own capability gives any of some keys, shape (n_steps,)."""
+    capabilities = [step.capability for step in problem.scenario.step]
+    return np.asarray(np.logical_or.reduce([given_in(column(capabilities, name)) for name in names]))
+
+
+def _counting(problem: Problem, least: int, most: int) -> list[str]:
+    """Return the names of the steps that count so many bad items, themselves or in an alternative."""
 
     def offered(alternative: Alternative) -> bool:
-        return alternative.capability is not None and test(alternative.capability)
+        bad = None if alternative.capability is None else alternative.capability.bad
+        return bad is not None and least <= bad <= most
 
-    return [s.name for s in problem.scenario.step if test(s.capability) or any(map(offered, s.alternative))]
+    steps = problem.scenario.step
+    own = column([step.capability for step in steps], "bad")
+    found = (own >= least) & (own <= most)
+    for i in _with_alternatives(problem):
+        found[i] |= any(map(offered, steps[i].alternative))
+    return _named(problem, found)
+
+
+def _with_alternatives(problem: Problem) -> list[int]:
+    return [i for i, step in enumerate(problem.scenario.step) if step.alternative]
 
 
 def _named(problem: Problem, where: Flags) -> list[str]:
@@ -83,15 +99,16 @@ def _one_opportunity(problem: Problem) -> Iterator[Caution]:
 
 
 def _long_term(problem: Problem) -> Iterator[Caution]:
-    on_top = _steps(problem, lambda s, _: any(given(s.capability, LONG_TERM) and a.shift for a in s.alternative))
+    long_term = _given(problem, *LONG_TERM)
+    steps = problem.scenario.step
+    on_top = [steps[i].name for i in np.flatnonzero(long_term).tolist() if any(a.shift for a in steps[i].alternative)]
     yield from _about(
         "long_term_with_shift", on_top, "an alternative puts a shift on a long-term figure (pp, ppk), which holds the drift already",
         "give the short-term figure (cp, cpk) where a shift applies, or drop the shift",
     )  # fmt: skip
     if problem.scenario.default.shift:
-        ignored = _steps(problem, lambda s, _: bool(given(s.capability, LONG_TERM)))
         yield from _about(
-            "long_term_keeps_no_shift", ignored,
+            "long_term_keeps_no_shift", _named(problem, long_term),
             f"the line's shift of {problem.scenario.default.shift:g} is not put on a long-term figure (pp, ppk): it would count twice",
             "nothing to do if the figure really is long-term; else give cp, cpk",
         )  # fmt: skip
@@ -168,26 +185,20 @@ def _finds_all(inspection: Inspection | None) -> bool:
 
 
 def _counts(problem: Problem) -> Iterator[Caution]:
-    none = _quoting(problem, lambda c: c.bad == 0)
     yield from _about(
-        "zero_bad", none, "0 bad found is not 0 ppm; the rate is taken at which none had an even chance, 1 − 0.5^(1/n)",
+        "zero_bad", _counting(problem, 0, 0), "0 bad found is not 0 ppm; the rate is taken at which none had an even chance, 1 − 0.5^(1/n)",
         "count on a larger lot until a few bad ones are seen",
     )  # fmt: skip
-    few = _quoting(problem, lambda c: c.bad is not None and 0 < c.bad < FEW_BAD)
     yield from _about(
-        "few_bad", few, "a rate from fewer than five bad items is uncertain by a factor of two or more",
+        "few_bad", _counting(problem, 1, FEW_BAD - 1), "a rate from fewer than five bad items is uncertain by a factor of two or more",
         "pool more lots, or plan on an upper limit of the count",
     )  # fmt: skip
 
 
 def _near_tail(problem: Problem) -> Iterator[Caution]:
-    def near(c: Capability) -> bool:
-        return (c.cpk is not None and c.cp is None) or (c.ppk is not None and c.pp is None)
-
-    sides = problem.options.today.levels.sides
-    alone = _steps(problem, lambda s, i: near(s.capability) and bool(sides[i] == 1))
+    near = (_given(problem, "cpk") & ~_given(problem, "cp")) | (_given(problem, "ppk") & ~_given(problem, "pp"))
     yield from _about(
-        "near_tail_only", alone, "Cpk (Ppk) alone tells only the nearer tail; the far one is left out and recentring cannot be weighed",
+        "near_tail_only", _named(problem, near & (problem.options.today.levels.sides == 1)), "Cpk (Ppk) alone tells only the nearer tail; the far one is left out and recentring cannot be weighed",
         "give cp beside cpk, or the limits with mean and std",
     )  # fmt: skip
 
@@ -202,9 +213,8 @@ def _copies(problem: Problem) -> Iterator[Caution]:
 
 
 def _laws(problem: Problem) -> Iterator[Caution]:
-    open_ended = _steps(
-        problem, lambda s, _: s.improve is not None and s.improve.up_to is None and s.improve.law != "quotes"
-    )
+    steps = problem.scenario.step
+    open_ended = [s.name for s in steps if (i := s.improve) is not None and i.up_to is None and i.law != "quotes"]
     yield from _about(
         "no_up_to", open_ended, "the law states no `up_to`; nothing is extrapolated past one tenth of the starting defects",
         "set up_to to the best level demonstrated or quoted",
@@ -229,7 +239,7 @@ def _at_out_of_reach(problem: Problem) -> list[str]:
 
 def _judged(problem: Problem) -> Iterator[Caution]:
     yield from _about(
-        "judged", _steps(problem, lambda s, _: is_judged(s)), "figures here are judged, not measured or quoted; the answer rests on them",
+        "judged", [s.name for s in problem.scenario.step if is_judged(s)], "figures here are judged, not measured or quoted; the answer rests on them",
         "replace them by quotations or trials before money is committed",
     )  # fmt: skip
 
@@ -238,19 +248,20 @@ def is_judged(table: object) -> bool:
     """Return whether a table, or any table inside it, is marked as judged; a figure never is."""
     if not isinstance(table, BaseModel):
         return False
-    if isinstance(table, Table) and table.evidence == "judged":
+    given = table.model_fields_set
+    if "evidence" in given and getattr(table, "evidence", None) == "judged":
         return True
-    for name in _tables_in(type(table)):
+    for name in given & _tables_in(type(table)):  # What was not given holds nothing that was judged.
         value = table.__dict__[name]
-        if value is not None and (any(map(is_judged, value)) if type(value) is tuple else is_judged(value)):
+        if any(map(is_judged, value)) if type(value) is tuple else is_judged(value):
             return True
     return False
 
 
 @cache
-def _tables_in(kind: type[BaseModel]) -> tuple[str, ...]:
+def _tables_in(kind: type[BaseModel]) -> frozenset[str]:
     """Return the keys of a kind of table that can hold further tables; looked up once, since lines are long."""
-    return tuple(name for name, field in kind.model_fields.items() if _holds_table(field.annotation))
+    return frozenset(name for name, field in kind.model_fields.items() if _holds_table(field.annotation))
 
 
 def _holds_table(annotation: object) -> bool:
@@ -261,7 +272,7 @@ def _holds_table(annotation: object) -> bool:
 
 def _safety(problem: Problem) -> Iterator[Caution]:
     yield from _about(
-        "safety", _steps(problem, lambda s, _: s.safety),
+        "safety", [step.name for step in problem.scenario.step if step.safety],
         "a safety characteristic is a floor that money never trades away; the floor itself is not set by this program",
         "follow the governing code and let a qualified, where required licensed, practitioner decide",
     )  # fmt: skip
@@ -286,7 +297,7 @@ def _rework(problem: Problem) -> Iterator[Caution]:
 def _shifts(problem: Problem) -> Iterator[Caution]:
     levels = problem.options.today.levels
     measured = levels.shift[~levels.attribute].tolist()
-    if measured and max(measured) == 0.0 and not any(given(s.capability, LONG_TERM) for s in problem.scenario.step):
+    if measured and max(measured) == 0.0 and not _given(problem, *LONG_TERM).any():
         yield Caution(
             "no_drift_allowance", (), "all measured capabilities are taken to hold all year (shift 0)",
             "set default.shift (1.5 is the trade's usual allowance, unproven) or give long-term pp, ppk",
@@ -329,8 +340,7 @@ def _clustering(problem: Problem) -> Iterator[Caution]:
 
 
 def _loose_ends(problem: Problem) -> Iterator[Caution]:
-    nothing = _steps(problem, lambda s, _: not s.fixed and not s.alternative and s.improve is None)
-    if len(nothing) == len(problem.scenario.step):
+    if all(s.improve is None and not s.alternative and not s.fixed for s in problem.scenario.step):
         yield Caution(
             "nothing_to_choose", (), "no step has an alternative or a law of improvement, so there is nothing to decide",
             "enter quotes or `improve` for the steps that could get better",

@@ -2,14 +2,15 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import asdict
 from typing import Any
 
+from allocator.report.plain import Told, today_line_json, yields_json
 from allocator.report.plain import best_json as _best
 from allocator.report.plain import cautions_json as _cautions
 from allocator.report.plain import cost_json as _cost
 from allocator.report.plain import pick as _pick
-from allocator.report.plain import today_line_json, yields_json
 from allocator.report.words import nines_of
 from allocator.results import (
     Check,
@@ -17,14 +18,27 @@ from allocator.results import (
     Nines,
     NinesPoint,
     Plan,
-    StepTarget,
-    StepToday,
     Today,
-    Understood,
 )
 
 LEVEL_KEYS = ("sigma_level", "shift", "k", "cp", "cpk", "cpk_after_shift", "dpmo", "ppm")
 FULL_LEVEL_KEYS = (*LEVEL_KEYS[:3], "sides", *LEVEL_KEYS[3:], "dpu")
+
+
+TARGET_BEFORE = ("step", "supplier", "alternatives")
+TARGET_AFTER = ("budget_share", "starts_per_year", "scrap", "improvement", "capital", "at_cap")
+TODAY_BEFORE = ("step", "supplier")
+TODAY_AFTER = (
+    "first_pass_yield", "starts_per_year", "scrap", "rework", "inspection", "defect_share", "money_share",
+)  # fmt: skip
+CHECK_BEFORE = ("step", "supplier", "feeds", "items_per_unit", "opportunities", "given")
+CHECK_AFTER = ("lost_when_scrapped", "net_cost_added", "ways", "improves", "inspection")
+
+
+def _keys(before: Sequence[str], level: str, level_keys: Sequence[str], after: Sequence[str]) -> dict[str, str]:
+    """Return the keys of a step's record, those of its level among them, and where each figure stands."""
+    own = [(key, key) for key in before], [(key, key) for key in after]
+    return dict([*own[0], *((key, f"{level}.{key}") for key in level_keys), *own[1]])
 
 
 def plan_json(plan: Plan) -> dict[str, Any]:
@@ -45,7 +59,7 @@ def plan_json(plan: Plan) -> dict[str, Any]:
         "best_reachable": _best(plan.best_reachable),
         "binding": [held.step for held in plan.binding],
         "binding_reasons": [_pick(held, ("step", "reason")) for held in plan.binding],
-        "steps": [_step_target(step) for step in plan.rows],
+        "steps": Told(plan.rows, _keys(TARGET_BEFORE, "target", LEVEL_KEYS, TARGET_AFTER)),
         "rules": [_pick(rule, rules) for rule in plan.rules],
         "rules_note": plan.rules_note,
         "restraint": _restraint(plan),
@@ -84,15 +98,6 @@ def _proof(plan: Plan) -> dict[str, Any]:
     return dict.fromkeys(keys) if plan.proof is None else _pick(plan.proof, keys)
 
 
-def _step_target(step: StepTarget) -> dict[str, Any]:
-    money = ("budget_share", "starts_per_year", "scrap", "improvement", "capital", "at_cap")
-    return {
-        **_pick(step, ("step", "supplier", "alternatives")),
-        **_pick(step.target, LEVEL_KEYS),
-        **_pick(step, money),
-    }
-
-
 def nines_json(nines: Nines) -> dict[str, Any]:
     highest, optimum = nines.highest, None
     if nines.optimum_total is not None:
@@ -128,28 +133,17 @@ def today_json(today: Today) -> dict[str, Any]:
     return {
         **_pick(today, ("title", "currency", "shipped_per_year", "targets")),
         **today_line_json(today.line),
-        "steps": [_step_today(step) for step in today.rows],
+        "steps": Told(today.rows, _keys(TODAY_BEFORE, "level", FULL_LEVEL_KEYS, TODAY_AFTER)),
         "assumed": today.assumed,
         "cautions": _cautions(today.cautions),
     }
-
-
-def _step_today(step: StepToday) -> dict[str, Any]:
-    shares = ("first_pass_yield", "starts_per_year", "scrap", "rework", "inspection", "defect_share", "money_share")
-    return {**_pick(step, ("step", "supplier")), **_pick(step.level, FULL_LEVEL_KEYS), **_pick(step, shares)}
 
 
 def check_json(check: Check) -> dict[str, Any]:
     return {
         "sound": True,
         **_pick(check, ("title", "currency", "shipped_per_year", "file", "targets")),
-        "steps": [_understood(step) for step in check.rows],
+        "steps": Told(check.rows, _keys(CHECK_BEFORE, "level", FULL_LEVEL_KEYS, CHECK_AFTER)),
         "assumed": check.assumed,
         "cautions": _cautions(check.cautions),
     }
-
-
-def _understood(step: Understood) -> dict[str, Any]:
-    before = ("step", "supplier", "feeds", "items_per_unit", "opportunities", "given")
-    after = ("lost_when_scrapped", "net_cost_added", "ways", "improves", "inspection")
-    return {**_pick(step, before), **_pick(step.level, FULL_LEVEL_KEYS), **_pick(step, after)}

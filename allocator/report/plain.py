@@ -5,16 +5,44 @@ from __future__ import annotations
 import csv
 import json
 import math
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
+from dataclasses import dataclass
 from io import StringIO
+from itertools import islice
 from operator import attrgetter
+from types import NoneType
 from typing import Any
 
 from allocator.report.blocks import MONEY_KINDS
 from allocator.report.words import YIELDS
 from allocator.results import BestReachable, Caution, Money, TodayLine, Yields
 
-STRICT = json.JSONEncoder(allow_nan=False)
+MANY = 500
+"""Records written at a time: they, and what is written of them, stay within reach of the processor."""
+
+
+@dataclass(frozen=True)
+class Told:
+    """Records to be told of by the same keys (key -> where the figure stands); made into text a few at a time."""
+
+    records: Sequence[Any]
+    keys: dict[str, str]
+
+    def __iter__(self) -> Iterator[dict[str, Any]]:
+        return (dict(zip(self.keys, row, strict=True)) for row in self._rows())
+
+    def lines(self) -> Iterator[str]:
+        """Yield every record as JSON on one line, written column by column: long lines spend their time here."""
+        form = ", ".join(f"{json.dumps(key)}: %s" for key in self.keys)
+        rows = self._rows()
+        while some := list(islice(rows, MANY)):
+            yield from map(f"{{{form}}}".__mod__, zip(*map(_column, zip(*some, strict=True)), strict=True))
+
+    def _rows(self) -> Iterator[tuple[Any, ...]]:
+        return map(attrgetter(*self.keys.values()), self.records)
+
+
+STRICT = json.JSONEncoder(allow_nan=False, default=list)
 
 
 def to_json(content: dict[str, Any] | list[dict[str, Any]]) -> str:
@@ -28,15 +56,25 @@ def to_json(content: dict[str, Any] | list[dict[str, Any]]) -> str:
 def _value(value: Any) -> str:
     if isinstance(value, list | tuple) and value and all(isinstance(item, dict) for item in value):
         return _records(value, "  ")
-    return _one_line(value)
+    return _records(value, "  ") if isinstance(value, Told) else _one_line(value)
 
 
-def _records(records: Sequence[dict[str, Any]], indent: str) -> str:
-    lines = ",\n".join(f"{indent}  {_one_line(record)}" for record in records)
-    return f"[\n{lines}\n{indent}]" if records else "[]"
+def _records(records: Told | Sequence[dict[str, Any]], indent: str) -> str:
+    start = f"\n{indent}  "
+    lines = f",{start}".join(records.lines() if isinstance(records, Told) else map(_one_line, records))
+    return f"[{start}{lines}\n{indent}]" if lines else "[]"
+
+
+def _column(values: tuple[Any, ...]) -> list[str]:
+    kinds = set(map(type, values))
+    if kinds <= {float, NoneType}:
+        return ["null" if v is None or not math.isfinite(v) else repr(v) for v in values]
+    return ["true" if v else "false" for v in values] if kinds == {bool} else [_one_line(v) for v in values]
 
 
 def _one_line(value: Any) -> str:
+    if value is None or value == ():
+        return "null" if value is None else "[]"
     try:
         return STRICT.encode(value)
     except ValueError:  # NaN or infinite somewhere
@@ -47,7 +85,7 @@ def _finite(value: Any) -> Any:
     """The same content with None for NaN and the infinities, which JSON does not know."""
     if isinstance(value, dict):
         return {key: _finite(item) for key, item in value.items()}
-    if isinstance(value, list | tuple):
+    if isinstance(value, list | tuple | Told):
         return [_finite(item) for item in value]
     return None if isinstance(value, float) and not math.isfinite(value) else value
 

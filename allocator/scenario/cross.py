@@ -64,12 +64,14 @@ def _step_findings(i: int, step: Step, scenario: Scenario) -> Iterator[Finding]:
     owner = ("step", i)
     yield from cost_key_findings(i, step)
     unsound = form_remarks(step.capability, step.opportunities)
-    yield from _under("capability", owner, unsound)
+    if unsound:
+        yield from _under("capability", owner, unsound)
     if step.improve is not None:
         remarks = law_remarks(step.improve, step.opportunities)
-        yield from _under("improve", owner, remarks)
         if not remarks and not unsound:
-            yield from _under("improve", owner, start_remarks(step, step.improve, scenario.default.shift))
+            remarks = start_remarks(step, step.improve, scenario.default.shift)
+        if remarks:
+            yield from _under("improve", owner, remarks)
     if step.at_least is not None:
         yield from _floor_findings(owner, step.at_least)
     if step.safety or step.fixed:

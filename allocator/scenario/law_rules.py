@@ -3,19 +3,24 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from functools import cache
 
 from allocator.errors import RangeError
 from allocator.scenario.forms import Remark, form_remarks
 from allocator.scenario.level import Level, given, resolve
 from allocator.scenario.model import Capability, Costs, Law, Step
+from allocator.scenario.schema import REMARKS
 
 SCALES = ("price", "per_year", "per_item")
+RANGES = frozenset(f"{key}_{end}" for key in SCALES for end in ("low", "high"))
 PARAMETER = {"power": "exponent", "exponential": "rate"}
 ONE_SCALE = "give exactly one of price, per_year, per_item"
 
 
 def law_remarks(law: Law, opportunities: float) -> list[Remark]:
     """Return what is wrong with the keys of a law, taken by itself."""
+    if _sound_keys(frozenset(law.model_fields_set), law.law):
+        return []
     remarks = _parameter_remarks(law)
     remarks += _quote_remarks(law, opportunities) if law.law == "quotes" else _scale_remarks(law)
     remarks += range_remarks(law)
@@ -25,8 +30,19 @@ def law_remarks(law: Law, opportunities: float) -> list[Remark]:
     return remarks
 
 
+@cache
+def _sound_keys(given: frozenset[str], law: str) -> bool:
+    """Return whether these keys make a law sound, whatever their values; the same few sets recur on every step."""
+    needed = {PARAMETER[law]} if law in PARAMETER else set()
+    scales = given.intersection(SCALES)
+    rest = given - scales - {"law", "life_years", *REMARKS}
+    return law != "quotes" and len(scales) == 1 and rest == needed
+
+
 def range_remarks(costs: Law | Costs) -> list[Remark]:
     """Return what is wrong with how far the amounts of a law, an alternative or a purchase may turn out otherwise."""
+    if RANGES.isdisjoint(costs.model_fields_set):
+        return []
     remarks: list[Remark] = []
     for key in SCALES:
         amount = getattr(costs, key, None)

@@ -91,11 +91,13 @@ class _Quoted:
 
     def __init__(self, capabilities: Sequence[Capability]) -> None:
         self.capabilities = capabilities
+        self.given: set[str] = set().union(*[capability.model_fields_set for capability in capabilities])
         self.columns: dict[str, Array] = {}
 
     def __getitem__(self, name: str) -> Array:
         if name not in self.columns:
-            self.columns[name] = column(self.capabilities, name)
+            nowhere = np.full(len(self.capabilities), np.nan)
+            self.columns[name] = column(self.capabilities, name) if name in self.given else nowhere
         return self.columns[name]
 
     def has(self, name: str) -> Flags:

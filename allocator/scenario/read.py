@@ -180,11 +180,11 @@ def _read_head(data: dict[str, Any], reading: _Reading) -> Head:
 def _collect_steps(data: dict[str, Any], reading: _Reading) -> None:
     named = _table(data, "steps_from", Step, reading)
     for table in filter(None, (named, reading.tables.get(Step))):
-        for record, row in zip(table.records, table.rows, strict=True):
-            owner: Owner = ("step", len(reading.steps))
-            reading.steps.append(record)
-            reading.places.rows[owner] = (table.file, row)
-            reading.damage.update((owner, topic) for topic in table.lost)
+        before = len(reading.steps)
+        reading.steps += table.records
+        owners: list[Owner] = [("step", i) for i in range(before, len(reading.steps))]
+        reading.places.rows.update(zip(owners, [(table.file, row) for row in table.rows], strict=True))
+        reading.damage.update((owner, topic) for topic in table.lost for owner in owners)
     own = data.get("step", [])
     if not isinstance(own, list):
         reading.findings.append(Finding((), "step", shown(own), "write every step as [[step]], in double brackets"))
