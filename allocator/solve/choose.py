@@ -246,11 +246,11 @@ def _merge(
     later = np.concatenate([np.cumsum(fall[::-1])[::-1][1:], [0.0]]) if options else np.zeros(0)
     for place, rows in enumerate(options):
         picks = np.concatenate([[-1], rows])
-        all_load = (load[:, None] + np.concatenate([[0.0], change[rows]])).ravel()
-        all_added = (added[:, None] + np.concatenate([[0.0], extra[rows]])).ravel()
+        all_load = (np.concatenate([[0.0], change[rows]])[:, None] + load).ravel()
+        all_added = (np.concatenate([[0.0], extra[rows]])[:, None] + added).ravel()
         keep, cut = _undominated(all_load, all_added, price, room - later[place], allowed, longest)
         whole = whole and not cut
-        history.append((keep // len(picks), picks[keep % len(picks)]))
+        history.append((keep % len(load), picks[keep // len(load)]))
         load, added = all_load[keep], all_added[keep]
     fits = np.flatnonzero(load <= room)
     if len(fits) == 0:
@@ -267,13 +267,12 @@ def _merge(
 def _undominated(
     load: Array, added: Array, price: float, room: float, allowed: float, longest: int
 ) -> tuple[Index, bool]:
-    """Return the entries worth keeping, and whether some had to be cut for length."""
-    final = added - price * load
+    """Return the entries worth keeping by rising load, and whether some had to be cut for length."""
     keep = np.flatnonzero((added <= allowed) & (load <= room))
-    order = keep[np.lexsort((final[keep], load[keep]))]
-    least = np.minimum.accumulate(final[order]) if len(order) else np.zeros(0)
-    first = np.concatenate([[True], least[1:] < least[:-1]]) if len(order) else np.zeros(0, dtype=bool)
-    kept = order[first]
+    order = keep[np.argsort(load[keep], kind="stable")]  # quick, since one list after the other rises
+    final = added[order] - price * load[order]
+    kept = order[np.diff(np.minimum.accumulate(final), prepend=np.inf) < 0.0] if len(order) else order
     if len(kept) <= longest:
         return np.asarray(kept, dtype=np.int64), False
-    return np.asarray(kept[np.argsort(added[kept], kind="stable")[:longest]], dtype=np.int64), True
+    least = np.sort(np.argpartition(added[kept], longest)[:longest])
+    return np.asarray(kept[least], dtype=np.int64), True

@@ -13,6 +13,8 @@ from numpy.typing import NDArray
 
 Array = NDArray[np.float64]
 Index = NDArray[np.int64]
+FEW, SAMPLE = 2_000, 100
+"""Turns that are sorted at once, and how many tell where the middle of many more lies."""
 
 
 @dataclass(frozen=True)
@@ -51,8 +53,7 @@ def corners(step: Index, delta: Array, cost: Array) -> Corners:
     cost : array, shape (n_ways,) [currency/year]
     """
     rows = np.flatnonzero(np.isfinite(cost))
-    rows = rows[np.argsort(delta[rows])]
-    rows = rows[np.argsort(step[rows], kind="stable")]
+    rows = rows[_by_step_then(delta[rows], step[rows])]
     while True:
         joined, saved = np.diff(step[rows]) == 0, np.diff(delta[rows])
         twins = np.flatnonzero(joined & (saved == 0.0))
@@ -69,6 +70,20 @@ def corners(step: Index, delta: Array, cost: Array) -> Corners:
     turns = np.flatnonzero(joined)[::-1]
     last = np.append(np.flatnonzero(~joined), len(rows) - 1)
     return Corners(rows, last, step[rows[turns]], saved[turns], price[turns])
+
+
+def _by_step_then(value: Array, step: Index) -> Index:
+    """Return the order by step and, within each, by rising value; steps of alike many ways are sorted side by side."""
+    first = np.flatnonzero(np.diff(step, prepend=-1))
+    count = np.diff(np.append(first, len(step)))
+    widest = int(count.max(initial=0))
+    if widest * len(first) > 2 * len(step):
+        order = np.argsort(value)
+        return order[np.argsort(step[order], kind="stable")]
+    there = np.arange(widest) < count[:, None]
+    side_by_side = np.full(there.shape, np.inf)
+    side_by_side[there] = value
+    return (first[:, None] + np.argsort(side_by_side, axis=1))[there]
 
 
 def balance(
@@ -98,16 +113,44 @@ def balance(
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
         price = (hull.price - slope[hull.step]) / weight[hull.step]
     price[np.isnan(price)] = -np.inf
-    order = np.argsort(price, kind="stable")
-    price, step = price[order], hull.step[order]
-    left = np.append(load, load - np.cumsum(weight[step] * hull.saved[order]))
-    taken = idle = int(np.searchsorted(price, 0.0, side="right"))
-    if left[idle] > free:
-        taken += int(np.searchsorted(-left[idle:], -free))
-    if taken == len(left):
+    saved = weight[hull.step] * hull.saved
+    turned = price <= 0.0
+    left = load - float(saved[turned].sum())
+    if left <= free:
+        return 0.0, _after(hull, hull.step[turned]), None
+    order, left, enough = _last_to_turn(price, saved, turned, left, free)
+    taken = int(np.searchsorted(np.cumsum(saved[order]), left - free))
+    if taken >= len(order) and not enough:
         return None
-    under = _after(hull, step[:taken])
-    return (0.0, under, None) if taken == idle else (float(price[taken - 1]), under, _after(hull, step[: taken - 1]))
+    taken = min(taken, len(order) - 1)  # What is enough before rounding is enough after it.
+    before = np.append(hull.step[turned], hull.step[order[:taken]])
+    last = order[taken]
+    return float(price[last]), _after(hull, np.append(before, hull.step[last])), _after(hull, before)
+
+
+def _last_to_turn(
+    price: Array, saved: Array, turned: NDArray[np.bool_], left: float, free: float
+) -> tuple[Index, float, bool]:
+    """Return in order of price the turns among which the budget comes to be kept, the load before them, and if it does.
+
+    Turns that are worth it before any of these are added to `turned`. Few are ever sorted: half of what is open is
+    taken or left at a time.
+    """
+    open_, enough = np.flatnonzero(~turned), False
+    while len(open_) > FEW:
+        those = price[open_]
+        pivot = np.median(those[:: len(those) // SAMPLE])
+        low = those <= pivot if (those > pivot).any() else those < pivot
+        if not low.any():
+            break
+        after = left - float(saved[open_[low]].sum())
+        enough = enough or after <= free
+        if after > free:
+            turned[open_[low]] = True
+            left, open_ = after, open_[~low]
+        else:
+            open_ = open_[low]
+    return open_[np.argsort(price[open_], kind="stable")], left, enough
 
 
 def _after(hull: Corners, turned: Index) -> Index:

@@ -122,6 +122,10 @@ def _by_price(
     What keeps that limit all the same is the best answer under it too, and its price is then 0.
     """
     ways, line = problem.options.ways, problem.line
+    moving = np.flatnonzero(ways.moves[rows])
+    if not len(moving):
+        outcome = evaluate(line, problem.options, Choice(rows, ways.z_low[rows]))
+        return FixedAnswer(outcome, outcome.money.total, None, STILL) if keeps_limits(problem, outcome) else None
     gates = Gates(*(getattr(ways.gates, name)[rows] for name in GATE_FIELDS))
     curves = ways.curves.take(rows)
     market = Market(curves, ways.z_low[rows], ways.z_high[rows], ways.lines.take(rows).pieces)
@@ -130,21 +134,17 @@ def _by_price(
     cleared = clear(market, duty, curves, GAP, near, np.inf if hopeless is None else hopeless - aside)
     if cleared is None:
         return None
-    many = int(ways.moves[rows].sum()) > MOST_LEVELS
+    many = len(moving) > MOST_LEVELS
     given_up = hopeless is not None and cleared.bound + aside > hopeless
     if cleared.gap > 10.0 * GAP and not many and not given_up:
         return None
     z = ways.z_low[rows].copy()
-    moving = np.flatnonzero(ways.moves[rows])
-    if len(moving):
-        z[moving] = np.clip(
-            cv.sigma(curves.take(moving), cleared.delta[moving]), ways.z_low[rows[moving]], ways.z_high[rows[moving]]
-        )
+    z[moving] = np.clip(
+        cv.sigma(curves.take(moving), cleared.delta[moving]), ways.z_low[rows[moving]], ways.z_high[rows[moving]]
+    )
     outcome = evaluate(line, problem.options, Choice(rows, z))
     if not keeps_limits(problem, outcome):
         return None
-    if not len(moving):
-        return FixedAnswer(outcome, outcome.money.total, None, STILL)
     prices = dict(zip(problem.budgets, cleared.prices.tolist(), strict=True))
     if problem.capital is not None:
         prices[CAPITAL] = 0.0
