@@ -52,8 +52,9 @@ class _Node:
 class _Branching:
     """The branches still open, and the least bound of those closed."""
 
-    def __init__(self, menu: Menu, duty: Duty, tangent: Tangent, offer: Offer, gap: float) -> None:
-        self.menu, self.duty, self.tangent, self.offer, self.gap = menu, duty, tangent, offer, gap
+    def __init__(self, menu: Menu, weight: Array, free: float, tangent: Tangent, offer: Offer, gap: float) -> None:
+        self.menu, self.weight, self.free = menu, weight, free
+        self.tangent, self.offer, self.gap = tangent, offer, gap
         self.open: list[_Node] = []
         self.closed, self.total, self.count = np.inf, np.inf, 0
 
@@ -65,17 +66,17 @@ class _Branching:
         """Price a branch, offer both sides of its price, and keep it open unless that settles it."""
         fixed = self.menu.fixed.copy()
         fixed[forbidden] = np.inf
-        weight, used, budget = self.duty.loads[0]
-        under, over = balance_menu(
-            replace(self.menu, fixed=fixed), self.tangent.slope, weight, budget - used, max(price, 1e-9)
-        )
+        menu = replace(self.menu, fixed=fixed)
+        under, over = balance_menu(menu, self.tangent.slope, self.weight, self.free, max(price, 1e-9))
         sides = [side for side in (under, over) if side is not None]
-        bound = max(float(np.sum(side.value[side.best])) - side.price * (budget - used) for side in sides)
+        bound = max(float(np.sum(side.value[side.best])) - side.price * self.free for side in sides)
         bound = max(bound + self.tangent.rest, least)
         if not self.enough(bound):
-            for side in sides:
-                self.total = min(self.offer(side.best), self.total)
-        step = _changing(weight, under, over)
+            # Where no way moves, the side over the budget cannot keep it, and a way's tangent is below its true cost.
+            for side in sides[:1] if self.menu.pinned else sides:
+                if not self.menu.pinned or self.tangent.rest + side.cost < self.total:
+                    self.total = min(self.offer(side.best), self.total)
+        step = _changing(self.weight, under, over)
         if step < 0 or self.enough(bound):
             self.closed = min(self.closed, bound)
             return
@@ -89,15 +90,19 @@ class _Branching:
             self.look(np.union1d(node.forbidden, forbidden), node.price, node.bound)
 
 
-def branch(menu: Menu, duty: Duty, tangent: Tangent, price: float, offer: Offer, gap: float, seconds: float) -> float:
+def branch(
+    menu: Menu, weight: Array, free: float, tangent: Tangent, price: float, offer: Offer, gap: float, seconds: float
+) -> float:
     """Offer choices until their best is within `gap` of what is proven; return the lower bound proven by then.
 
     Parameters
     ----------
     menu : Menu
         The ways that a better plan can take.
-    duty : Duty
-        With one budget.
+    weight : shape (n_steps,)
+        What the steps' defects use of the budget.
+    free : float
+        The budget.
     tangent : Tangent
     price : float
         Where the search for the balancing price starts.
@@ -108,7 +113,7 @@ def branch(menu: Menu, duty: Duty, tangent: Tangent, price: float, offer: Offer,
         Time after which the open branches set the bound.
     """
     ends = time.monotonic() + seconds
-    branches = _Branching(menu, duty, tangent, offer, gap)
+    branches = _Branching(menu, weight, free, tangent, offer, gap)
     branches.look(np.zeros(0, dtype=np.int64), price, -np.inf)
     while branches.open:
         node = heapq.heappop(branches.open)

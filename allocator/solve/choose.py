@@ -68,6 +68,11 @@ class Priced:
     load: float
     price: float
 
+    @property
+    def cost(self) -> float:
+        """What the best ways cost by the tangent of scrap, the budget's price apart."""
+        return float(np.sum(self.value[self.best])) - self.price * self.load
+
 
 def price_menu(menu: Menu, slope: Array, weight: Array, price: float) -> Priced:
     """Return all answers at λ = `price`, with scrap's slope and the load weight per step [shape (n_steps,)]."""

@@ -140,7 +140,7 @@ class _Search:
         bounds = [tangent.rest + least(side) - side.price * free for side in sides]
         best = int(np.argmax(bounds))
         self._note(sides[best], bounds[best])
-        for side in sides:
+        for side in sides[:1] if self.menu.pinned else sides:  # Where no way moves, the other cannot keep the budget.
             self.offer(side.best)
         if over is not None and self.best is not None and self.menu.market.still:
             self.room, self.priced = under.price * (free - under.load), sides[best]
@@ -196,10 +196,25 @@ class _Search:
             self.menu, self.extra = _menu(self.problem, self.rows), self.extra[kept]
 
     def branch(self, gap: float, seconds: float) -> None:
-        """Branch over the ways left."""
+        """Branch over the ways left, without the steps that have one way only, which does not move."""
         self.shrink()
-        tangent = tangent_at(self.duty, self.here)
-        bound = branch(self.menu, self.duty, tangent, self.price, self.offer, gap, seconds)
+        tangent, menu = tangent_at(self.duty, self.here), self.menu
+        weight, used, budget = self.duty.loads[0]
+        moves = self.problem.options.ways.moves[self.rows]
+        settled = (np.bincount(menu.step, minlength=len(menu.first)) == 1) & ~moves[menu.first]
+        open_steps, rows, alone = np.flatnonzero(~settled), np.flatnonzero(~settled[menu.step]), menu.first[settled]
+        delta = menu.market.high[alone]
+        cost = menu.fixed[alone] + menu.market.still_cost[alone] + tangent.slope[settled] * delta
+
+        def offer(chosen: Index) -> float:
+            every = menu.first.copy()
+            every[open_steps] = rows[chosen]
+            return self.offer(every)
+
+        bound = branch(
+            _menu(self.problem, self.rows[rows]), weight[open_steps], budget - used - float(weight[settled] @ delta),
+            Tangent(tangent.slope[open_steps], tangent.rest + float(np.sum(cost))), self.price, offer, gap, seconds,
+        )  # fmt: skip
         self.bound = max(self.bound, min(bound, self.value))
 
     def excluded(self) -> NDArray[np.bool_]:
@@ -217,12 +232,13 @@ class _Search:
 
 
 def _menu(problem: Problem, rows: Index) -> Menu:
+    """Return the menu of some ways; the steps that have any are numbered one after another."""
     ways, line = problem.options.ways, problem.line
     step = ways.step[rows]
     per_item = (line.shipped * line.per_finished)[step] * ways.gates.per_item[rows]
     market = Market(ways.curves.take(rows), ways.z_low[rows], ways.z_high[rows], ways.lines.take(rows).pieces)
-    first = np.searchsorted(step, np.arange(line.n_steps)).astype(np.int64)
-    return Menu(market, first, step, ways.fixed_cost[rows] + per_item)
+    new = np.diff(step, prepend=-1) > 0
+    return Menu(market, np.flatnonzero(new), np.cumsum(new) - 1, ways.fixed_cost[rows] + per_item)
 
 
 def least(priced: Priced) -> float:
