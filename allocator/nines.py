@@ -155,7 +155,7 @@ def _answer(
     if stop.label == END:
         return best
     starts = [rows_in(problem, solved) for solved in (before, best) if solved is not None]
-    return solve(asked, starts)
+    return solve(asked, starts, (before or optimum).near)
 
 
 def _changes(problem: Problem, before: Solved | None, after: Solved) -> tuple[str, ...]:

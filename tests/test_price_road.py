@@ -38,7 +38,7 @@ ROUNDING = 1e-9
 """Totals are sums of a few kinds of money that may cancel; this much of them is rounding."""
 CONTINUOUS_GAP, MIXED_GAP = 1e-9, 1e-6
 LONG_MIXED_SECONDS = 2.0
-"""Measured 1.3 to 1.7 s of processor time."""
+"""Measured 0.7 to 1.1 s of processor time."""
 
 
 def size(solved: Solved) -> float:

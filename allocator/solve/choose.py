@@ -22,8 +22,8 @@ PRICE_STEPS = 60
 CLOSE = 1e-13
 WIDEST = 30.0
 """Most by which the price is changed at once in search of the other side."""
-BOUND_CLOSE = 1e-9
-"""Share of the bound that may be left in it: far below the gaps that are promised."""
+BOUND_CLOSE = 1e-8
+"""Share of the bound that may be left in it: a hundredth of the gap that is aimed at with equipment."""
 CORE_STEPS = 40
 """Steps whose second-best ways are close enough to the best to be worth combining."""
 

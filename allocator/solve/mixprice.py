@@ -202,6 +202,8 @@ class _Search:
         weight, used, budget = self.duty.loads[0]
         moves = self.problem.options.ways.moves[self.rows]
         settled = (np.bincount(menu.step, minlength=len(menu.first)) == 1) & ~moves[menu.first]
+        if settled.all():
+            return
         open_steps, rows, alone = np.flatnonzero(~settled), np.flatnonzero(~settled[menu.step]), menu.first[settled]
         delta = menu.market.high[alone]
         cost = menu.fixed[alone] + menu.market.still_cost[alone] + tangent.slope[settled] * delta
