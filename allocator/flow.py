@@ -106,12 +106,17 @@ def gate_values(inspection: Inspection | None, rework: Rework | None) -> tuple[f
 
 def gate_table(inspections: Iterable[Inspection | None], reworks: Iterable[Rework | None]) -> Gates:
     """Return the gates of many steps, figures of a table that several share worked out once."""
-    pairs = list(zip(inspections, reworks, strict=True))
-    keys = [(id(inspection), id(rework)) for inspection, rework in pairs]
-    alike = dict(zip(keys, pairs, strict=True))
-    table = np.array([gate_values(*pair) for pair in alike.values()], dtype=float).reshape(-1, len(GATE_FIELDS))
-    known = {key: i for i, key in enumerate(alike)}
-    return Gates(*table[[known[key] for key in keys]].T)
+    known: dict[tuple[int, int], int] = {}
+    figures: list[tuple[float, ...]] = []
+    place = []
+    for inspection, rework in zip(inspections, reworks, strict=True):
+        key = (id(inspection), id(rework))
+        if key not in known:
+            known[key] = len(figures)
+            figures.append(gate_values(inspection, rework))
+        place.append(known[key])
+    table = np.array(figures, dtype=float).reshape(len(figures), len(GATE_FIELDS))
+    return Gates(*table[place].T)
 
 
 def build_line(scenario: Scenario) -> Line:

@@ -238,7 +238,11 @@ def _menu(problem: Problem, rows: Index) -> Menu:
     ways, line = problem.options.ways, problem.line
     step = ways.step[rows]
     per_item = (line.shipped * line.per_finished)[step] * ways.gates.per_item[rows]
-    market = Market(ways.curves.take(rows), ways.z_low[rows], ways.z_high[rows], ways.lines.take(rows).pieces)
+    # A copy of every way would be most of the memory that a long line takes.
+    curves, lines = (
+        (ways.curves, ways.lines) if len(rows) == len(ways) else (ways.curves.take(rows), ways.lines.take(rows))
+    )
+    market = Market(curves, ways.z_low[rows], ways.z_high[rows], lines.pieces)
     new = np.diff(step, prepend=-1) > 0
     return Menu(market, np.flatnonzero(new), np.cumsum(new) - 1, ways.fixed_cost[rows] + per_item)
 
