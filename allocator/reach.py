@@ -201,7 +201,7 @@ def _quoted_stretch(
     many = curve.take(np.zeros(len(z), dtype=int))
     delta, costs, kept = laws.lower_envelope(cv.intensity(many, z), cost)
     above = [
-        f"quote {quote} (sigma level {z[quote]:.4g}) lies above the others' envelope"
+        f"quote {quote} (sigma level {z[quote]:.4g}) is never used: the others reach its level for no more"
         for quote in np.flatnonzero(~kept)
         if quote > 0
     ]

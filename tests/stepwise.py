@@ -242,7 +242,8 @@ def _quoted_stretch(
     delta, costs, kept = laws.lower_envelope(cv.intensity(many, z), cost)
     for quote in np.flatnonzero(~kept):
         if quote > 0:
-            notes.append(f"'{step.name}': quote {quote} (sigma level {z[quote]:.4g}) lies above the others' envelope")
+            place = f"'{step.name}': quote {quote} (sigma level {z[quote]:.4g})"
+            notes.append(f"{place} is never used: the others reach its level for no more")
     ends = cv.intensity(curve.take(np.zeros(2, dtype=int)), np.array([high, low]))
     start = cv.intensity(curve, curve.start)[0]
     inside = (delta > ends[0]) & (delta < ends[1])

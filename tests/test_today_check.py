@@ -129,6 +129,12 @@ def offering(**keys: Any) -> Drawn:
     return step_with(alternative=[{"name": "other", "price": 100.0} | keys])
 
 
+def quoting(*quotes: tuple[float, float]) -> Drawn:
+    """Two sound steps, the second (1,000 dpmo today) with these quotes: dpmo and yearly cost."""
+    points = [{"dpmo": dpmo, "per_year": cost} for dpmo, cost in quotes]
+    return step_with(improve={"law": "quotes", "points": points})
+
+
 def looked_at(**keys: Any) -> Drawn:
     """Two steps with imperfect inspections that reject some good items; the second with these keys."""
     gate = {"finds": 0.9, "rejects_good": 0.001}
@@ -225,6 +231,18 @@ CAUSES: list[tuple[str, Drawn, Drawn]] = [
     ("free_rework", step_with(rework={"share": 0.5}), step_with(rework={"share": 0.5, "cost": 1.0})),
     ("nothing_to_choose", step_with(), step_with(improve=LAW)),
     ("free_alternative", offering(price=0.0, capability={"dpmo": 90}), offering(capability={"dpmo": 90})),
+    ("free_alternative", offering(price=0.0, capability={"dpmo": 90}), offering(price=0.0)),
+    ("alternative_changes_nothing", offering(price=0.0), offering(price=0.0, capability={"dpmo": 90})),
+    ("alternative_changes_nothing", offering(capability={"defect_rate": 0.001}), offering(per_item=-0.01)),
+    ("alternative_changes_nothing", offering(k=0.0), offering(inspection={"finds": 0.9})),
+    ("floor_out_of_reach", offering(capability={"dpmo": 90}) | {"step": [
+        *step_with()["step"][:1], offering(capability={"dpmo": 90})["step"][1] | {"at_least": {"dpmo": 80}}]},
+        step_with(at_least={"dpmo": 200}, improve=LAW)),
+    ("quote_no_better_than_today", quoting((900, 5.0), (1000, 2.0)), quoting((900, 5.0), (990, 2.0))),
+    ("quote_beaten_by_another", quoting((900, 5.0), (950, 6.0)), quoting((900, 5.0), (950, 4.9))),
+    ("quote_beaten_by_another", quoting((900, 5.0), (900, 5.0)), quoting((900, 5.0), (800, 5.1))),
+    ("purchase_without_use", step_with() | {"purchase": [{"name": "rig", "price": 1.0}]},
+        offering(uses="rig", capability={"dpmo": 90}) | {"purchase": [{"name": "rig", "price": 1.0}]}),
 ]  # fmt: skip
 
 
@@ -240,6 +258,12 @@ def test_each_caution_is_given_for_its_cause(code: str, cause: Drawn, _without: 
 @pytest.mark.parametrize(("code", "_cause", "without"), CAUSES, ids=[code for code, _, _ in CAUSES])
 def test_and_not_without_it(code: str, _cause: Drawn, without: Drawn) -> None:
     assert code not in cautions_of(without)
+
+
+def test_a_caution_numbers_the_quotes_it_is_about() -> None:
+    found = cautions_of(quoting((900, 5.0), (1000, 2.0), (950, 6.0), (850, 7.0), (860, 7.0)))
+    assert found["quote_no_better_than_today"].reason.startswith("quote 2 of 's1' is no better than the step stands")
+    assert found["quote_beaten_by_another"].reason.startswith("quote 3 of 's1', quote 5 of 's1' are each no better")
 
 
 @pytest.mark.parametrize(

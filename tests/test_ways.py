@@ -261,12 +261,12 @@ def test_quotes_are_joined_by_their_lower_envelope_and_the_rest_is_reported() ->
     between = ways.states[0].sigma_at(math.log(3_000e-6))
     share = (math.log1p(-3e-3) - math.log1p(-5e-3)) / (math.log1p(-1e-3) - math.log1p(-5e-3))
     assert cost_at(ways, 0, between) == pytest.approx(100 + share * 900, rel=1e-9)
-    assert any("quote 2" in note and "envelope" in note for note in options.notes)
+    assert any("quote 2" in note and "never used" in note for note in options.notes)
 
 
 def test_quotes_that_all_lie_on_the_envelope_are_not_reported() -> None:
     convex = QUOTES | {"points": [QUOTES["points"][0], QUOTES["points"][2]]}
-    assert not any("envelope" in note for note in options_of({"capability": {"dpmo": 1e4}, "improve": convex}).notes)
+    assert not any("never used" in note for note in options_of({"capability": {"dpmo": 1e4}, "improve": convex}).notes)
 
 
 def test_quotes_on_top_of_an_alternative_cost_what_lies_between() -> None:

@@ -13,6 +13,12 @@ from pydantic import BaseModel
 
 from allocator.capability import study_index
 from allocator.cautions.clusters import cautions_of_clusters
+from allocator.cautions.offered import (
+    cautions_of_alternatives,
+    cautions_of_floors,
+    cautions_of_purchases,
+    cautions_of_quotes,
+)
 from allocator.problem import Problem, inspection_stated
 from allocator.results import Caution
 from allocator.scenario.level import LONG_TERM
@@ -345,21 +351,10 @@ def _loose_ends(problem: Problem) -> Iterator[Caution]:
             "nothing_to_choose", (), "no step has an alternative or a law of improvement, so there is nothing to decide",
             "enter quotes or `improve` for the steps that could get better",
         )  # fmt: skip
-    free = _offering(problem, _costs_nothing)
-    yield from _about(
-        "free_alternative", free, "an alternative is entered as costing nothing: it will be taken wherever it helps",
-        "enter its price, per_year or per_item, or note why it is free (recentring may be)",
-    )  # fmt: skip
-
-
-def _costs_nothing(a: Alternative) -> bool:
-    money = (a.price, a.per_year, a.per_item, a.price_allowance)
-    dearer_gate = a.inspection is not None and a.inspection.per_item > 0.0
-    return not any(money) and a.uses is None and not dearer_gate and not (a.rework is not None and a.rework.cost > 0.0)
 
 
 LOOKS: tuple[Callable[[Problem], Iterator[Caution]], ...] = (
-    _safety, _inspection, _long_term, _shifts, _small_sample, _beyond_the_data, _counts, _near_tail, _one_opportunity,
+    cautions_of_floors, _safety, _inspection, _long_term, _shifts, _small_sample, _beyond_the_data, _counts, _near_tail, _one_opportunity,
     _three_sigma, _copies, _laws, _judged, _widening, _rework, _false_rejects,
-    _clustering, _loose_ends,
+    _clustering, _loose_ends, cautions_of_quotes, cautions_of_alternatives, cautions_of_purchases,
 )  # fmt: skip

@@ -7,6 +7,7 @@ from allocator.report.paper import LOG_WIDTH, Paper, columns
 from allocator.results import Check, Understood
 
 ASSUMED = "assumed"
+NO_PLAN = "floor_out_of_reach"
 
 
 def check_text(check: Check, width: int = LOG_WIDTH) -> str:
@@ -19,9 +20,15 @@ def check_text(check: Check, width: int = LOG_WIDTH) -> str:
     _write_choices(paper, check.rows)
     blocks.write_assumed(paper, check.assumed)
     blocks.write_cautions(paper, check.cautions)
-    ways = sum(step.ways for step in check.rows)
-    paper.heading(f"sound: {len(check.rows):,} steps, {ways:,} ways in all, {len(check.cautions):,} cautions")
+    paper.heading(_verdict(check))
     return paper.text()
+
+
+def _verdict(check: Check) -> str:
+    ways = sum(step.ways for step in check.rows)
+    no_plan = any(caution.code == NO_PLAN for caution in check.cautions)
+    sound = "sound as written, but no plan can keep its floors" if no_plan else "sound"
+    return f"{sound}: {len(check.rows):,} steps, {ways:,} ways in all, {len(check.cautions):,} cautions"
 
 
 def _write_levels(paper: Paper, steps: tuple[Understood, ...]) -> None:
