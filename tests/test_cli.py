@@ -18,6 +18,7 @@ from typer.testing import CliRunner
 import allocator
 from allocator.cli import app
 from allocator.errors import Fault, InputError, RangeError, SolverError
+from allocator.files import refuse_unfit_file, refuse_unfit_folder
 
 HELP_SECONDS = 0.5
 FAULTS = (
@@ -30,7 +31,6 @@ OPENINGS = {
     "today": "Today the final yield",
     "check": "File: line.toml",
 }
-MISUSED = ["plan", "plan x --of best", "fly", "nines x --points 1", "plan x --nines many"]
 
 
 class Api:
@@ -199,12 +199,71 @@ def test_a_programming_error_is_not_hidden(api: Api) -> None:
     assert isinstance(run("plan", "line.toml").exception, ZeroDivisionError)
 
 
-@pytest.mark.parametrize(
-    "arguments", [["plan"], ["plan", "x", "--of", "best"], ["fly"], ["nines", "x", "--points", "1"]]
-)
-def test_usage_errors_exit_with_2(api: Api, arguments: list[str]) -> None:
-    result = run(*arguments)
-    assert (result.exit_code, result.stdout) == (2, "")
+MISUSES = {
+    "plan": "command line, plan: found no FILE; give it: scenario file",
+    "compare": "command line, compare: found no FILE FILE...; give it",
+    "plan x --nins 3": "command line, plan: found the option --nins; did you mean '--nines'?",
+    "--bogus": "command line: found the option --bogus; there is none of that name",
+    "fly": "command line: found the command 'fly'; there is none of that name; the commands are new, check",
+    "plna x": "command line: found the command 'plna'; did you mean 'plan'?",
+    "plan x --of best": "command line, plan, --of: found 'best'; give final, rolled or shipped",
+    "plan x --nines=many": "command line, plan, --nines: found 'many'; give a number",
+    "rehearse x --units 1.5": "command line, rehearse, --units: found '1.5'; give a whole number",
+    "plan x --nines": "command line, plan, --nines: found nothing after it; give its value",
+    "plan x --json=3": "command line, plan, --json: found a value; it takes none",
+    "plan x y": "command line, plan: found 'y' beside what it takes; leave it out",
+    "nines x --points 1": "command line, --points: found 1; give 2 or more",
+}
+
+
+@pytest.mark.parametrize(("arguments", "said"), MISUSES.items())
+def test_a_misused_command_is_told_in_one_line(api: Api, arguments: str, said: str) -> None:
+    result = run(*arguments.split())
+    assert (result.exit_code, result.stdout, api.calls) == (2, "", [])
+    assert result.stderr.startswith(f"allocator: {said}")
+    assert result.stderr.count("\n") == 1
+
+
+def test_no_arguments_show_the_help(api: Api) -> None:
+    assert "Exit codes" in run().output
+
+
+UNFIT = {
+    "plan line.toml --figures there": "there: found a file at there; name a folder",
+    "weigh line.toml --figures there/in": "there/in: found a file at there; name a folder",
+    "case line.toml --figures there": "there: found a file at there; name a folder",
+    "today line.toml --figures there": "there: found a file at there; name a folder",
+    "nines line.toml --figures there": "there: found a file at there; name a folder",
+    "plan line.toml --xlsx lost/plan.xlsx": "lost/plan.xlsx: found no folder lost; name a file in a folder that exists",
+    "plan line.toml --xlsx folder.xlsx": "folder.xlsx: found a folder; name a file",
+    "report line.toml -o lost/page.html": "lost/page.html: found no folder lost",
+    "new lost/line.toml": "lost/line.toml: found no folder lost",
+    "new folder.xlsx": "folder.xlsx: found a folder; name a file",
+}
+
+
+@pytest.mark.parametrize(("arguments", "said"), UNFIT.items())
+def test_what_cannot_be_written_is_found_before_any_work(
+    api: Api, arguments: str, said: str, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.chdir(tmp_path)
+    (tmp_path / "there").write_text("")
+    (tmp_path / "folder.xlsx").mkdir()
+    result = run(*arguments.split())
+    assert (result.exit_code, result.stdout, api.calls) == (2, "", [])
+    assert result.stderr.startswith(f"allocator: {said}")
+    assert result.stderr.count("\n") == 1
+    assert sorted(path.name for path in tmp_path.iterdir()) == ["folder.xlsx", "there"]
+
+
+def test_a_folder_that_takes_no_files_is_refused(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    def refuse(dir: Path) -> None:
+        raise PermissionError(13, "Permission denied")
+
+    monkeypatch.setattr("allocator.files.tempfile.TemporaryFile", refuse)
+    for refuse_unfit in (refuse_unfit_file, refuse_unfit_folder):
+        with pytest.raises(InputError, match=r"nothing can be written into .*Permission denied.*; name a place"):
+            refuse_unfit(tmp_path / "made")
 
 
 def test_new_writes_a_starter_once(api: Api, tmp_path: Path) -> None:

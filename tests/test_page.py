@@ -312,7 +312,7 @@ def test_command_refuses_a_directory_that_does_not_exist(tmp_path: Path) -> None
     page = tmp_path / "lost" / "review.html"
     answer = CliRunner().invoke(app, ["report", str(ROOT / "scenarios/latch.toml"), "-o", str(page)])
     assert answer.exit_code == 2
-    assert "no directory" in answer.output
+    assert "found no folder" in answer.output
     assert not page.parent.exists()
 
 

@@ -141,7 +141,7 @@ def test_the_command_writes_it_beside_its_text(tmp_path: Path) -> None:
 
 
 @pytest.mark.parametrize(
-    ("name", "said"), [("plan.csv", "name a workbook, as plan.xlsx"), ("no/plan.xlsx", "no such folder")]
+    ("name", "said"), [("plan.csv", "name a workbook, as plan.xlsx"), ("no/plan.xlsx", "found no folder")]
 )
 def test_names_that_cannot_be_written_are_refused(name: str, said: str, tmp_path: Path) -> None:
     answer = CliRunner().invoke(app, ["plan", str(FOLDER / "latch.toml"), "--xlsx", str(tmp_path / name)])

@@ -72,6 +72,7 @@ def test_file_that_is_none(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> N
         "no.toml: found no such file; check the name; it was looked for as no.toml"
     ]
     assert faults_of(read_scenario, "folder.toml") == ["folder.toml: found a folder; name a file"]
+    assert faults_of(read_scenario, ".") == [".: found a folder; name a file"]
     assert faults_of(read_scenario, "latin.toml") == [
         "latin.toml: found bytes on line 3 that are no UTF-8; save the file as UTF-8"
     ]

@@ -12,12 +12,14 @@ import os
 import shutil
 import sys
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated, Any
+from typing import TYPE_CHECKING, Annotated, Any, NoReturn
 
 import typer
 from typer.core import TyperGroup
 
+from allocator.cli.misuse import COMMAND_LINE, UsageError, asks_for_help, misuse
 from allocator.errors import AllocatorError, Fault, InputError, RangeError
+from allocator.files import refuse_unfit_file, refuse_unfit_folder
 
 if TYPE_CHECKING:
     from allocator.scenario.model import Scenario
@@ -26,7 +28,6 @@ OUT_OF_REACH = 1
 FAILED = 1
 WRONG_INPUT = 2
 PIPE_CLOSED = 141  # What a shell reports for a program that a closed pipe ended (128 + SIGPIPE).
-COMMAND_LINE = "command line"
 
 
 ORDER = (
@@ -39,8 +40,24 @@ ORDER = (
 class Boundary(TyperGroup):
     """The one place where an error turns into lines on stderr and an exit code."""
 
+    typed: tuple[str, ...] = ()
+    """The arguments of this call."""
+
     def list_commands(self, ctx: Any) -> list[str]:
         return sorted(super().list_commands(ctx), key=ORDER.index)
+
+    def make_context(self, info_name: Any, args: list[str], parent: Any = None, **extra: Any) -> Any:
+        self.typed = tuple(args)
+        try:
+            return super().make_context(info_name, args, parent, **extra)
+        except UsageError as error:
+            self._refused(error)
+
+    def _refused(self, error: Exception) -> NoReturn:
+        if asks_for_help(error):
+            raise error
+        commands = {name: self.commands[name] for name in self.list_commands(None)}
+        raise _said([str(misuse(error, self.typed, commands))], WRONG_INPUT) from None
 
     def invoke(self, ctx: Any) -> Any:
         for stream in (sys.stdout, sys.stderr):
@@ -61,6 +78,8 @@ class Boundary(TyperGroup):
         except OSError as error:
             place = f"{error.filename}: " if error.filename else ""
             raise _said([f"{place}{error.strerror or error}"], WRONG_INPUT) from None
+        except UsageError as error:
+            self._refused(error)
 
 
 def _said(lines: list[str], code: int) -> typer.Exit:
@@ -122,6 +141,16 @@ def form_of(as_json: bool, as_csv: bool) -> Any:
     if as_json and as_csv:
         raise refused("--json", "--csv beside it", "ask for one of the two")
     return "json" if as_json else "csv" if as_csv else "text"
+
+
+def refuse_unfit_outputs(figures: Path | None = None, xlsx: Path | None = None) -> None:
+    """Find before any work is done what could not be written after it."""
+    if figures is not None:
+        refuse_unfit_folder(figures)
+    if xlsx is not None:
+        if xlsx.suffix.lower() != ".xlsx":
+            raise refused("--xlsx", str(xlsx), "name a workbook, as plan.xlsx")
+        refuse_unfit_file(xlsx)
 
 
 def show(answer: object, form: Any) -> None:

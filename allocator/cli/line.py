@@ -8,7 +8,20 @@ from typing import Annotated
 
 import typer
 
-from allocator.cli.app import OUT_OF_REACH, AsCsv, AsJson, Figures, File, app, draw, form_of, load, refused, show
+from allocator.cli.app import (
+    OUT_OF_REACH,
+    AsCsv,
+    AsJson,
+    Figures,
+    File,
+    app,
+    draw,
+    form_of,
+    load,
+    refuse_unfit_outputs,
+    refused,
+    show,
+)
 from allocator.cli.asked import (
     Hold,
     Of,
@@ -27,6 +40,7 @@ from allocator.cli.asked import (
 )
 from allocator.cli.progress import progress
 from allocator.errors import Fault, InputError
+from allocator.files import refuse_unfit_file
 
 
 @app.command()
@@ -37,6 +51,7 @@ def new(
     ] = False,
 ) -> None:
     """Write a small commented scenario to start from. As in: allocator new line.toml"""
+    refuse_unfit_file(file)
     if file.exists():
         raise InputError([Fault(str(file), "", "a file of that name", "name a new file; nothing was overwritten")])
     from allocator.scenario.starter import write_starter
@@ -58,6 +73,7 @@ def check(file: File, as_json: AsJson = False, as_csv: AsCsv = False) -> None:
 def today(file: File, figures: Figures = None, as_json: AsJson = False, as_csv: AsCsv = False) -> None:
     """Show where the line stands and where its money goes."""
     form = form_of(as_json, as_csv)
+    refuse_unfit_outputs(figures)
     from allocator import api
 
     answer = api.see_today(load(file))
@@ -89,12 +105,11 @@ def plan(
 ) -> None:
     """Find the cheapest plan that meets the target. As in: allocator plan line.toml --nines 3"""
     form = form_of(as_json, as_csv)
+    refuse_unfit_outputs(figures, xlsx)
     yields = {Which.final: final_yield, Which.rolled: rolled_yield, Which.shipped: shipped_yield}
     losses = losses_asked({which: text for which, text in yields.items() if text is not None}, nines, ppm)
     refuse_unfit_money(spend, capital)
     refuse_target_beside_money(bool(losses), spend, capital)
-    if xlsx is not None and xlsx.suffix.lower() != ".xlsx":
-        raise refused("--xlsx", str(xlsx), "name a workbook, as plan.xlsx")
     refuse_unfit_confidence(confidence, spend, capital)
     levels = levels_held(hold or [])
     from allocator import api
@@ -120,7 +135,7 @@ def plan(
 @app.command()
 def nines(
     file: File,
-    points: Annotated[int | None, typer.Option(min=2, help="Add an even grid of this many points.")] = None,
+    points: Annotated[int | None, typer.Option(help="Add an even grid of this many points.")] = None,
     of: Of = None,
     figures: Figures = None,
     as_json: AsJson = False,
@@ -128,6 +143,9 @@ def nines(
 ) -> None:
     """Price each extra nine, up to the highest yield within reach."""
     form = form_of(as_json, as_csv)
+    if points is not None and points < 2:
+        raise refused("--points", str(points), "give 2 or more: an even grid has two ends")
+    refuse_unfit_outputs(figures)
     from allocator import api
 
     answer = api.price_nines(load(file), of=name_of(of), points=points)

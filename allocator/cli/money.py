@@ -7,7 +7,20 @@ from typing import Annotated
 
 import typer
 
-from allocator.cli.app import OUT_OF_REACH, AsCsv, AsJson, Figures, File, app, draw, form_of, load, refused, show
+from allocator.cli.app import (
+    OUT_OF_REACH,
+    AsCsv,
+    AsJson,
+    Figures,
+    File,
+    app,
+    draw,
+    form_of,
+    load,
+    refuse_unfit_outputs,
+    refused,
+    show,
+)
 from allocator.cli.progress import progress
 
 Files = Annotated[list[Path], typer.Argument(metavar="FILE FILE...", help="Scenario files.", show_default=False)]
@@ -42,6 +55,7 @@ def case(
 ) -> None:
     """Make the capital case of the plan, or of one purchase. As in: allocator case line.toml 'new press'"""
     form = form_of(as_json, as_csv)
+    refuse_unfit_outputs(figures)
     from allocator import api
 
     answer = api.capital_case(load(file), name)
@@ -74,6 +88,7 @@ def review(
 def weigh(file: File, figures: Figures = None, as_json: AsJson = False, as_csv: AsCsv = False) -> None:
     """Say what to buy and what to leave. As in: allocator weigh line.toml"""
     form = form_of(as_json, as_csv)
+    refuse_unfit_outputs(figures)
     from allocator import api
 
     scenario = load(file)

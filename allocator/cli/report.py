@@ -9,6 +9,7 @@ import typer
 
 from allocator.cli.app import OUT_OF_REACH, File, app, load
 from allocator.cli.progress import progress
+from allocator.files import refuse_unfit_file
 
 
 @app.command()
@@ -21,10 +22,10 @@ def report(
 ) -> None:
     """Write the page for the design review. As in: allocator report line.toml -o review.html"""
     target = output if output is not None else Path(f"{file.stem}.html")
+    refuse_unfit_file(target)
     from allocator import api
-    from allocator.report.page import page_html, refuse_lost_folder, write_page
+    from allocator.report.page import page_html, write_page
 
-    refuse_lost_folder(target)
     scenario = load(file)
     with progress("working out the stops") as watch:
         review = api.review_page(scenario, watch=watch)

@@ -60,7 +60,7 @@ def read_scenario(path: str | Path) -> Scenario:
     if path.suffix.lower() == ".csv":
         allowed = 'give the scenario file (TOML or .xlsx); it names its tables by steps_from = "steps.csv"'
         raise InputError([Fault(path.name, "", "a table", allowed)])
-    text = read_text(path, path.name)
+    text = read_text(path, path.name or str(path))  # "." has no name
     try:
         data = tomllib.loads(text)
     except ValueError as error:  # Also for a whole number of thousands of digits.

@@ -1,5 +1,5 @@
 """The page for the design review: one self-contained file from one record."""
 
-from allocator.report.page.build import page_html, refuse_lost_folder, write_page
+from allocator.report.page.build import page_html, write_page
 
-__all__ = ["page_html", "refuse_lost_folder", "write_page"]
+__all__ = ["page_html", "write_page"]

@@ -6,8 +6,7 @@ from importlib.resources import files
 from pathlib import Path
 from typing import Any
 
-from allocator.errors import Fault, InputError
-from allocator.files import written_aside
+from allocator.files import refuse_unfit_file, written_aside
 from allocator.report.page.case import case_said
 from allocator.report.page.certainty import played_said, proof_said
 from allocator.report.page.choices import choices_said
@@ -57,22 +56,8 @@ def _read(name: str) -> str:
     return files(TEMPLATES).joinpath("templates", name).read_text(encoding="utf-8")
 
 
-def refuse_lost_folder(file: Path) -> None:
-    """Refuse a page in a directory that does not exist, before any work is done.
-
-    Raises
-    ------
-    InputError
-    """
-    folder = file.parent
-    if not folder.is_dir():
-        raise InputError([Fault(str(file), "", f"no directory {folder}", "name a file in a directory that exists")])
-    if file.is_dir():
-        raise InputError([Fault(str(file), "", "a directory", "name a file")])
-
-
 def write_page(text: str, file: Path) -> None:
     """Write the page aside and move it into place, so that no half page is ever there."""
-    refuse_lost_folder(file)
+    refuse_unfit_file(file)
     with written_aside(file) as aside:
         aside.write_text(text, encoding="utf-8", newline="\n")
