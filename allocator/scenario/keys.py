@@ -14,6 +14,7 @@ from typing import Any, TypeVar
 from pydantic import TypeAdapter, ValidationError
 
 from allocator.scenario.faults import Damage, Finding, Owner, did_you_mean, hint, listed, shown, topic_of
+from allocator.scenario.misplaced import instead
 from allocator.scenario.model import MOST_COUNTED, NUMBER_TAG, TABLE_TAG, Head, Step, Table
 from allocator.scenario.schema import Spec, known_keys, spec
 
@@ -28,6 +29,8 @@ REQUIRED = {
     "shipped_per_year": "state how many good units are shipped per year",
     "law": "give one of 'power', 'exponential', 'decade', 'quotes'",
 }
+NOT_WRITTEN = ("losses",)
+"""Worked out from what is written."""
 NAMELESS = "?"
 STAND_IN_VALUES: dict[str, Any] = {
     "name": NAMELESS,
@@ -133,7 +136,10 @@ def _texts(record: type[Table], kind: str, path: Path, found: object) -> tuple[s
     if kind == "missing":
         return "nothing", REQUIRED.get(str(path[-1]), f"state it: {spec(record, path).words}")
     if kind == "extra_forbidden":
-        known = known_keys(record, path[:-1])
+        misplaced = instead(record, path)
+        if misplaced is not None:
+            return "a key that does not belong here", misplaced
+        known = [key for key in known_keys(record, path[:-1]) if key not in NOT_WRITTEN]
         return "an unknown key", did_you_mean(str(path[-1]), known, f"the keys known here are {listed(known)}")
     if kind == "string_too_short":
         return "an empty text", "give it a name"

@@ -11,6 +11,7 @@ from typing import Any
 
 from allocator.errors import Fault, InputError
 from allocator.scenario.faults import SHOWN, did_you_mean, hint
+from allocator.scenario.misplaced import instead
 from allocator.scenario.model import Alternative, Quote, Table
 from allocator.scenario.schema import columns, spec
 from allocator.scenario.sheets import Cells, is_workbook, one_sheet, place
@@ -168,9 +169,8 @@ def _report_column(
         table.lost.add(name.split(".")[0])
         return
     otherwise = "a column bears the name of a key, as name, cost_added, cp, inspection.finds, improve.law"
-    table.faults.append(
-        Fault(table.file, f"column '{name}'", "an unknown column", did_you_mean(name, known, otherwise))
-    )
+    allowed = instead(record, (name,)) or did_you_mean(name, known, otherwise)
+    table.faults.append(Fault(table.file, f"column '{name}'", "an unknown column", allowed))
     near = hint(name, known)
     table.lost.add(known[near][0] if near else name)
 
