@@ -144,6 +144,7 @@ def _weighed(problem: Problem, plan: Solved, thing: Thing) -> Weighing:
         free=_is_free(problem, thing),
         capital=_capital(problem, thing, plan),
         stated_price=price,
+        price_per=_price_per(problem, thing),
         break_even_price=even,
         break_even_price_factor=factor,
         break_even_volume=None,
@@ -167,6 +168,14 @@ def _prices(
     if banned is None or taken is None or per_price is None:
         return price, None, None
     return price, break_even_price(problem, thing, price, per_price, total_of(banned), taken), None
+
+
+def _price_per(problem: Problem, thing: Thing) -> str:
+    law = problem.scenario.step[thing.step].improve if thing.kind == LAW else None
+    if law is None:
+        return "once"
+    amount = law.points[0] if law.points else law
+    return "year" if amount.per_year is not None else "item" if amount.per_item is not None else "once"
 
 
 def _level(problem: Problem, thing: Thing, banned: Solved | None, taken: Solved | None) -> BreakEvenLevel | None:

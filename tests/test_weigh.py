@@ -16,6 +16,7 @@ from typer.testing import CliRunner, Result
 
 from allocator import make_plan, read_scenario
 from allocator.cli import app
+from allocator.report.render import render
 from allocator.results import Plan, Weighed, Weighing
 from allocator.scenario.read import scenario_from_dict
 from allocator.weigh import weigh_purchases
@@ -261,6 +262,31 @@ def test_the_forms_of_the_answer() -> None:
     assert {thing["alternative"] for thing in things} == {"improve", "orbital riveter"}
     rows = list(csv.DictReader(io.StringIO(run(file, "--csv").stdout)))
     assert [row["verdict"] for row in rows] == [thing["verdict"] for thing in things]
+
+
+def test_every_price_has_its_unit_and_every_volume_its_side() -> None:
+    answer = shipped("bracket")
+    by_name = {(row["step"], row["alternative"]): row for row in csv.DictReader(io.StringIO(render(answer, "csv")))}
+    units = {
+        name: by_name[name]["price_unit"] for name in [("deburr", "improve"), ("coat", "improve"), ("bore", "improve")]
+    }
+    assert list(units.values()) == ["EUR/year", "EUR/item", "EUR"]
+    sides = {
+        "mill faces": "from the volume up to one below today's",
+        "bore": "from the volume",
+        "coat": "at no volume looked at",
+    }
+    assert {step: by_name[(step, "improve")]["pays"] for step in sides} == sides
+    text = " ".join(render(answer, width=200).split())
+    assert "mill faces: improve leave 0 210,000 162,062 57,795 to <180,000" in text
+    assert "deburr: improve buy 6.85 2,600/year 2,900/year from 161,158" in text
+    assert "looked at from 1,800 to 18,000,000 units a year" in text
+
+
+def test_what_pays_at_every_volume_says_where_looking_began() -> None:
+    row = next(row for row in csv.DictReader(io.StringIO(render(shipped("latch"), "csv"))) if row["step"] == "rivet")
+    assert (row["pays"], row["pays_from_volume_units_per_year"]) == ("from the smallest volume looked at", "")
+    assert "any from 1,000" in render(shipped("latch"), width=200)
 
 
 def test_out_of_reach_nothing_is_weighed(tmp_path: Path) -> None:

@@ -11,11 +11,11 @@ from allocator.results import Weighed, Weighing
 MOST_AGAINST = 40
 HOW = (
     "Worth: the best plan without it, less the best plan with it, everything else planned anew. Price: what it may "
-    "cost at most to pay (a law: its scale, the equipment of these plans kept). Volume: units shipped per year from "
-    "which it pays. Sigma: the level that it must really reach to pay."
+    "cost at most to pay (a law: its scale, the equipment of these plans kept; x: all its quotations times this). "
+    "Volume: units shipped per year from which it pays, and up to which where something better takes its place. Sigma: "
+    "the level that it must really reach to pay."
 )
 NEEDED = "needed: without it the promise, a floor or a limit cannot be kept."
-ANY, NONE = "any", "none"
 
 
 def weigh_text(weighed: Weighed, width: int = LOG_WIDTH) -> str:
@@ -52,37 +52,41 @@ def _write_rows(paper: Paper, weighed: Weighed) -> None:
     free = [row for row in weighed.rows if row.free]
     capital = [row for row in weighed.rows if not row.free]
     if free:
-        paper.heading(f"What ties up no capital (worth in {money}/year, price in {money})")
-        _write_table(paper, free)
+        paper.heading(
+            f"What ties up no capital (worth in {money}/year; price in {money} once, unless per year or item)"
+        )
+        _write_table(paper, free, weighed)
     if capital:
         base = ", measured from the line that the free moves above have already improved" if free else ""
-        paper.heading(f"What ties up capital{base} (worth in {money}/year, price in {money})")
-        _write_table(paper, capital)
+        paper.heading(
+            f"What ties up capital{base} (worth in {money}/year; price in {money} once, unless per year or item)"
+        )
+        _write_table(paper, capital, weighed)
     if any(row.verdict == "needed" for row in weighed.rows):
         paper.say(NEEDED)
-    gone = [_name(row) for row in weighed.rows if _gives_way(row, weighed)]
+    lowest, highest = map(words.number, weighed.volumes)
+    paper.say(f"Volumes were looked at from {lowest} to {highest} units a year.")
+    gone = [_name(row) for row in weighed.rows if weighed.gives_way(row)]
     if gone:
+        now = words.number(weighed.shipped_per_year)
         paper.say(
-            f"Pays at a smaller volume than today's, and then gives way to something better: {words.listed(gone)}."
+            f"Pays at a smaller volume than today's {now}, and gives way to something better before it (to <{now}): "
+            f"{words.listed(gone)}."
         )
 
 
-def _gives_way(row: Weighing, weighed: Weighed) -> bool:
-    from_here = row.break_even_volume is not None and row.break_even_volume <= weighed.shipped_per_year
-    return not row.in_plan and (from_here or row.pays_from == "any volume")
-
-
-def _write_table(paper: Paper, rows: Sequence[Weighing]) -> None:
-    figures = ["worth\nper year", "price", "pays up\nto price", "pays from\nvolume", "pays from\nsigma"]
+def _write_table(paper: Paper, rows: Sequence[Weighing], weighed: Weighed) -> None:
+    figures = ["worth\nper year", "price", "pays up\nto price", "pays at\nvolume", "pays from\nsigma"]
     heads = columns(["what", "verdict"], figures)
-    paper.table(heads, (_row(row) for row in rows), len(rows))
+    paper.table(heads, (_row(row, weighed) for row in rows), len(rows))
 
 
-def _row(row: Weighing) -> list[str]:
+def _row(row: Weighing, weighed: Weighed) -> list[str]:
     level = row.break_even_capability
     return [
         _name(row), row.verdict, "-" if row.worth_per_year is None else words.money(row.worth_per_year),
-        _price(row.stated_price), _up_to(row), _volume(row), words.fixed(None if level is None else level.sigma_level),
+        _price(row.stated_price, row), _up_to(row), _volume(row, weighed),
+        words.fixed(None if level is None else level.sigma_level),
     ]  # fmt: skip
 
 
@@ -91,20 +95,26 @@ def _name(row: Weighing) -> str:
     return f"{own} (shared)" if row.step is None else f"{words.clean(row.step)}: {own}"
 
 
-def _price(price: float | None) -> str:
-    return "-" if price is None else words.money(price)
+def _price(price: float | None, row: Weighing) -> str:
+    if price is None:
+        return "-"
+    return words.money(price) if row.price_per == "once" else f"{words.money(price)}/{row.price_per}"
 
 
 def _up_to(row: Weighing) -> str:
     if row.break_even_price is None and row.break_even_price_factor is not None:
         return f"x {words.number(row.break_even_price_factor)}"
-    return _price(row.break_even_price)
+    return _price(row.break_even_price, row)
 
 
-def _volume(row: Weighing) -> str:
-    if row.break_even_volume is not None:
-        return words.number(row.break_even_volume)
-    return ANY if row.pays_from == "any volume" else NONE
+def _volume(row: Weighing, weighed: Weighed) -> str:
+    smallest = words.number(weighed.volumes[0])
+    start = None if row.break_even_volume is None else words.number(row.break_even_volume)
+    if weighed.gives_way(row):
+        return f"{start or smallest} to <{words.number(weighed.shipped_per_year)}"
+    if start is None:
+        return "none" if row.pays_from == "no volume" else f"any from {smallest}"
+    return f"from {start}"
 
 
 def _write_against(paper: Paper, rows: Sequence[Weighing]) -> None:

@@ -47,6 +47,8 @@ class Weighing:
     """What it ties up: price less trade-in; for a law, what the plan spends on it."""
     stated_price: float | None
     """Its price; for a law the one amount it states; None where quotes state several."""
+    price_per: str
+    """What `stated_price` is for: 'once', 'year' or 'item'."""
     break_even_price: float | None
     """On the scale of `stated_price`."""
     break_even_price_factor: float | None
@@ -54,7 +56,7 @@ class Weighing:
     break_even_volume: float | None
     """The smallest number of units shipped per year from which it pays."""
     pays_from: str
-    """'a volume' (the one above), 'any volume' or 'no volume' of those looked at."""
+    """'a volume' (the one above), 'any volume' (the smallest looked at already) or 'no volume' of those looked at."""
     break_even_capability: BreakEvenLevel | None
     against: tuple[str, ...]
     """What speaks against it, in words."""
@@ -92,6 +94,11 @@ class Weighed:
     """The volumes between which break-even was looked for."""
     assumed: tuple[str, ...]
     cautions: tuple[Caution, ...]
+
+    def gives_way(self, row: Weighing) -> bool:
+        """Return whether a thing pays at a smaller volume than today's, but no longer at today's."""
+        smaller = row.break_even_volume is not None and row.break_even_volume <= self.shipped_per_year
+        return not row.in_plan and (smaller or row.pays_from == "any volume")
 
     @cached_property
     def things(self) -> pandas.DataFrame:

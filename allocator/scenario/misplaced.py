@@ -16,7 +16,8 @@ IN_TARGET = {
 }
 IN_ALTERNATIVE = {
     "supplier": "it belongs to the step: name the alternative after the other supplier and give its per_item and "
-    "capability here, or write that supplier's line as a file of its own and set both side by side with allocator compare",
+    "capability here, or write the line with that supplier as a file of its own and set both side by side with "
+    "allocator compare",
     "cost_added": "what the item is worth belongs to the step: give what it costs more or less here as per_item",
     "scrap_cost": "what the item is worth belongs to the step: give what it costs more or less here as per_item",
     "improve": "a law belongs to the step: it goes on from the level of the alternative that is chosen",

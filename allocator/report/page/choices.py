@@ -46,17 +46,17 @@ def choices_said(weighed: Weighed | None) -> ChoicesSaid | None:
     shown = weighed.rows[:MOST_SHOWN]
     worths = [row.worth_per_year for row in shown if row.worth_per_year is not None]
     scale = Scale(min([0.0, *worths]), max([0.0, *worths]))
-    money, more = words.clean(weighed.currency), len(weighed.rows) - len(shown)
+    more = len(weighed.rows) - len(shown)
     things, laws = [row for row in shown if row.kind != LAW], [row for row in shown if row.kind == LAW]
     groups = [
-        (head, [_choice(row, scale, money, weighed.shipped_per_year) for row in things if row.free == free])
+        (head, [_choice(row, scale, weighed) for row in things if row.free == free])
         for head, free in (("What ties up no capital", True), ("What ties up capital, the free moves made", False))
     ]
     return ChoicesSaid(
         said=_said(weighed),
         zero=scale.at(0.0),
         groups=[(head, rows) for head, rows in groups if rows],
-        laws=[_choice(row, scale, money, weighed.shipped_per_year) for row in laws],
+        laws=[_choice(row, scale, weighed) for row in laws],
         notes=_notes(shown, more),
     )
 
@@ -84,7 +84,7 @@ def _opened(text: str) -> str:
     return said[:1].upper() + said[1:]
 
 
-def _choice(row: Weighing, scale: Scale, money: str, shipped: float) -> Choice:
+def _choice(row: Weighing, scale: Scale, weighed: Weighed) -> Choice:
     worth = row.worth_per_year
     low, high = sorted((scale.at(0.0), scale.at(worth or 0.0)))
     name = "steady improvement" if row.kind == LAW else words.clean(row.alternative)
@@ -97,12 +97,12 @@ def _choice(row: Weighing, scale: Scale, money: str, shipped: float) -> Choice:
         start=low,
         width=round(high - low, 2),
         gains=worth is None or worth >= 0.0,
-        turns=_turns(row, money, shipped),
+        turns=_turns(row, weighed),
         against=[] if row.kind == LAW else [_opened(text) for text in row.against],
     )
 
 
-def _turns(row: Weighing, money: str, shipped: float) -> list[str]:
+def _turns(row: Weighing, weighed: Weighed) -> list[str]:
     """Where the verdict turns: price, volume, and how good it must really be."""
     texts = []
     pays = "would pay" if row.verdict == "leave" else "pays"
@@ -110,15 +110,23 @@ def _turns(row: Weighing, money: str, shipped: float) -> list[str]:
         if row.break_even_price_factor is not None:
             texts.append(f"{pays} up to {words.number(row.break_even_price_factor)} times its cost")
     elif row.break_even_price is not None:
-        texts.append(f"{pays} up to a price of {words.money(row.break_even_price)} {money}")
-    from_here = row.break_even_volume is not None and row.break_even_volume <= shipped
-    if row.verdict == "leave" and (from_here or row.pays_from == "any volume"):
+        texts.append(f"{pays} up to a price of {words.money(row.break_even_price)} {words.clean(weighed.currency)}")
+    if weighed.gives_way(row):
         texts.append("pays at smaller volumes, then gives way to something better")
     elif row.break_even_volume is not None:
         texts.append(f"{pays} from {words.number(row.break_even_volume)} units a year")
     elif row.verdict != "needed":
-        texts.append(f"{pays} at {row.pays_from}")
+        texts.append(f"{pays} {_where_no_volume_turns(row, weighed)}")
     level = row.break_even_capability
     if level is not None:
         texts.append(f"{pays} if it reaches {words.fixed(level.sigma_level)} sigma (Cpk {words.fixed(level.cpk)})")
     return texts
+
+
+def _where_no_volume_turns(row: Weighing, weighed: Weighed) -> str:
+    lowest, highest = map(words.number, weighed.volumes)
+    return (
+        f"at no volume up to {highest} a year"
+        if row.pays_from == "no volume"
+        else f"from {lowest} units a year or fewer"
+    )
