@@ -190,7 +190,8 @@ class _Table:
     def option(self, offer: _Offer) -> ReviewRow:
         problem, thing = self.problem, offer.thing
         solved = None if self.best is None else answer(self._asked(offer), self.best)
-        alone = None if thing is None else line_alone(problem, thing, solved)
+        idle = thing is not None and thing.kind == LAW and solved is not None and not takes(solved, thing)
+        alone = None if thing is None or idle else line_alone(problem, thing, solved)
         everywhere = frozenset(range(problem.line.n_steps))
         return ReviewRow(
             step=problem.scenario.step[offer.step].name,
@@ -199,7 +200,8 @@ class _Table:
             in_plan=self.best is not None and _takes(problem, self.best, offer),
             figures=None if solved is None else self._figures(stand(problem, solved), everywhere),
             alone=None if alone is None or thing is None else self._figures(alone, frozenset({thing.step})),
-            against=self._against(offer),
+            against=() if idle else self._against(offer),
+            idle=idle,
         )
 
     def _asked(self, offer: _Offer) -> Problem:

@@ -86,7 +86,8 @@ def line_today(problem: Problem) -> TodayLine:
         money=money(problem.line, flow, 0.0) if reason is None else None,
         money_reason=reason,
         dpu=defects_per_unit(today, today.levels.sigma_level, problem.line.per_finished),
-        bad_per_lot=tuple((lot, lot * seen.rolled_loss) for lot in LOTS),
+        bad_per_lot=tuple((lot, lot * seen.final_loss) for lot in LOTS),
+        escaped_per_lot=() if seen.shipped_loss is None else tuple((lot, lot * seen.shipped_loss) for lot in LOTS),
     )
 
 

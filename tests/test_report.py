@@ -84,7 +84,7 @@ def money(scrap: float = 350_000.0) -> Money:
 def today_line(known: bool = True) -> TodayLine:
     reason = None if known else "the flow exponent is above 700"
     lots = ((100, 2.5), (1_000, 25.0), (10_000, 250.0))
-    return TodayLine(yields(0.025), money(560_000.0) if known else None, reason, 0.034, lots)
+    return TodayLine(yields(0.025), money(560_000.0) if known else None, reason, 0.034, lots, ())
 
 
 def step_target(name: str, **changes: Any) -> StepTarget:

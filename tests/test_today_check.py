@@ -42,7 +42,10 @@ def test_identities_of_today(scenario: Drawn) -> None:
         assert sum(getattr(s, kind) for s in today.rows) == pytest.approx(getattr(money, kind), rel=EXACT, abs=1e-9)
     assert money.improvement == 0.0
     for lot, bad in today.line.bad_per_lot:
-        assert bad == pytest.approx(lot * (1.0 - today.line.yields.rolled_yield), rel=1e-9)
+        assert bad == pytest.approx(lot * (1.0 - today.line.yields.final_yield), rel=1e-9)
+    for lot, bad in today.line.escaped_per_lot:
+        assert bad == pytest.approx(lot * today.line.yields.shipped_loss, rel=1e-9)
+    assert bool(today.line.escaped_per_lot) == (today.line.yields.shipped_yield is not None)
 
 
 @quick(30)

@@ -11,6 +11,10 @@ from allocator.results import BestReachable, Binding, Caution, Money, TodayLine,
 
 MONEY_KINDS = ("scrap", "rework", "escapes", "inspection", "improvement")
 YIELDS_NOTE = "(final yield here subtracts escapes; the common shop-floor figure does not)"
+LOST_NOTE = (
+    "Money lost at a step is the scrap, rework and inspection there. What escapes costs the line as a whole and is in "
+    "no step's share."
+)
 SAFETY_CODE = "safety"
 INDEX_NOTE = (
     "Cpk is the study index, as measured on parts, without the drift allowance; Cpk after shift is what is left of it "

@@ -108,8 +108,11 @@ def cost_json(money: Money | None) -> dict[str, Any] | None:
 
 def today_line_json(line: TodayLine) -> dict[str, Any]:
     cost = {"annual_cost": cost_json(line.money), "annual_cost_reason": line.money_reason}
-    lots = [{"lot": size, "bad": bad} for size, bad in line.bad_per_lot]
-    return {**yields_json(line.yields), **cost, "dpu": line.dpu, "bad_per_lot": lots}
+    per_lot = {
+        name: [{"lot": size, "bad": bad} for size, bad in getattr(line, name)]
+        for name in ("bad_per_lot", "escaped_per_lot")
+    }
+    return {**yields_json(line.yields), **cost, "dpu": line.dpu, **per_lot}
 
 
 def best_json(best: BestReachable | None) -> dict[str, Any] | None:

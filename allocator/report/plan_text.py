@@ -9,6 +9,8 @@ from allocator.report.confidence_text import write_confidence
 from allocator.report.paper import LOG_WIDTH, Paper, columns
 from allocator.results import Plan, Restraint, RuleOutcome, StepTarget
 
+SAME_LOSS = 1e-8
+"""A loss within this share of the target's is the target's: rules split the budget to the last digit."""
 NO_COST = 1e-6
 """A restraint that costs less than this share of the total costs nothing: it is the gap of the solve."""
 
@@ -100,20 +102,23 @@ def _cost(plan: Plan) -> str:
 
 
 def _actions(plan: Plan) -> str:
-    shared = [f"buy {words.quoted(bought.name)} (shared)" for bought in plan.purchases]
-    acts = shared + list(_step_actions(plan.rows))
-    return words.listed(acts, more="more changes (in the table)") if acts else "buy nothing and change nothing"
+    """What to do, the dearest first."""
+    shared = [(bought.per_year_cost, f"buy {words.quoted(bought.name)} (shared)") for bought in plan.purchases]
+    dearest_first = sorted([*shared, *_step_actions(plan.rows)], key=lambda act: -act[0])
+    acts = [said for _, said in dearest_first]
+    return words.listed(acts, more="cheaper changes (in the table)") if acts else "buy nothing and change nothing"
 
 
-def _step_actions(steps: tuple[StepTarget, ...]) -> Iterator[str]:
+def _step_actions(steps: tuple[StepTarget, ...]) -> Iterator[tuple[float, str]]:
+    """What is done at each step, with its yearly cost."""
     for step in steps:
         at, level = words.quoted(step.step), words.fixed(step.target.sigma_level)
         if step.alternatives:
             names = words.listed([words.quoted(name) for name in step.alternatives], joint=" and ")
             further = f" and improve it to {level} sigma" if step.law else ""
-            yield f"{'buy' if step.capital > 0.0 else 'take'} {names} at {at}{further}"
+            yield step.improvement, f"{'buy' if step.capital > 0.0 else 'take'} {names} at {at}{further}"
         elif step.law:
-            yield f"raise {at} from {words.fixed(step.today.sigma_level)} to {level} sigma"
+            yield step.improvement, f"raise {at} from {words.fixed(step.today.sigma_level)} to {level} sigma"
 
 
 def _write_out_of_reach(paper: Paper, plan: Plan) -> None:
@@ -207,17 +212,29 @@ def _write_rules(paper: Paper, plan: Plan) -> None:
             paper.heading(f"Simpler rules: {plan.rules_note}")
         return
     paper.heading(f"What simpler rules would cost ({words.clean(plan.currency)}/year)")
-    heads = columns(["rule"], ["total", words.yield_name(plan.split), "target", "the plan\nsaves"])
-    paper.table(heads, [_rule_row(rule) for rule in plan.rules], len(plan.rules))
+    name = words.yield_name(plan.split)
+    heads = columns(["rule"], ["total", name, f"ppm lost of\n{name}", "target", "the plan\nsaves"])
+    paper.table(heads, [_rule_row(rule, plan.target_losses.get(plan.split)) for rule in plan.rules], len(plan.rules))
     broken = [f"{rule.rule} breaks: {words.listed(rule.broken, joint='; ')}" for rule in plan.rules if rule.broken]
     if broken:
         paper.bullets(broken)
 
 
-def _rule_row(rule: RuleOutcome) -> list[str]:
+def _rule_row(rule: RuleOutcome, target_loss: float | None) -> list[str]:
     reached = words.percent(rule.yield_reached, rule.loss_reached)
     saving = "-" if rule.saving is None else words.money(rule.saving)
-    return [rule.rule, words.money(rule.total), reached, "met" if rule.meets_target else "missed", saving]
+    return [
+        rule.rule, words.money(rule.total), reached, words.ppm(rule.loss_reached), _against_target(rule, target_loss),
+        saving,
+    ]  # fmt: skip
+
+
+def _against_target(rule: RuleOutcome, target_loss: float | None) -> str:
+    """Met or missed, and by how much: a difference that the digits of the yield may hide."""
+    word = "met" if rule.meets_target else "missed"
+    if target_loss is None or abs(rule.loss_reached - target_loss) <= SAME_LOSS * target_loss:
+        return word
+    return f"{word} by {words.ppm(abs(rule.loss_reached - target_loss))} ppm"
 
 
 def _write_next_nine(paper: Paper, plan: Plan) -> None:

@@ -50,19 +50,26 @@ def played(answer: Rehearsal) -> str:
 
 
 def verdict(answer: Rehearsal) -> str:
-    missed = [words.yield_name(name) for name in answer.missed]
-    count = len(answer.losses) + len(answer.money)
-    said = (
-        f"All {count} computed yields and amounts lie within their intervals."
-        if not missed
-        else f"{count - len(missed)} of {count} computed yields and amounts lie within their intervals; "
-        f"not so: {words.listed(missed)}."
-    )
+    said = _compared(answer)
     if answer.uncertain and not any(row.drawn for row in answer.rows):
         return f"{said} No step states a `sample` (or counts), so nothing could be drawn: every line is the same."
     if any(row.clustering is not None for row in answer.rows):
         return f"{said} Defects cluster here, and the computed figures are Poisson: a difference is expected."
     return said
+
+
+def _compared(answer: Rehearsal) -> str:
+    """How many figures lie outside, beside what chance alone gives; amounts without any chance are left out."""
+    figures = {**answer.losses, **answer.money}
+    moved = [name for name, figure in figures.items() if figure.upper > figure.lower or name in answer.missed]
+    missed = [words.yield_name(name) for name in answer.missed]
+    if not missed:
+        return f"All {len(moved)} computed yields and amounts that chance moves lie within their 95 % intervals."
+    return (
+        f"{len(moved) - len(missed)} of {len(moved)} computed yields and amounts that chance moves lie within their "
+        f"95 % intervals; outside: {words.listed(missed)}. Chance alone puts one in twenty outside, and figures that "
+        "hang together go outside together: play it again with another --seed, which moves chance but no error."
+    )
 
 
 def _cells(figure: Rehearsed, show: Callable[[float], str]) -> list[str]:

@@ -26,7 +26,7 @@ def review_json(review: Review) -> dict[str, Any]:
 
 def _option(row: ReviewRow) -> dict[str, Any]:
     return {
-        **pick(row, ("step", "option", "kinds", "in_plan")),
+        **pick(row, ("step", "option", "kinds", "in_plan", "idle")),
         "figures": _figures(row.figures),
         "alone": _figures(row.alone),
         "against": row.against,
@@ -46,9 +46,9 @@ def review_csv(review: Review) -> str:
         f"total_{money}_per_year", f"over_living_{money}_per_year", f"over_plan_{money}_per_year", f"capital_{money}",
         "misses", "allowed", *_YIELDS,
     ]  # fmt: skip
-    header = ["step", "option", "kinds", "in_plan", *names, *(f"alone_{name}" for name in names), "against"]
+    header = ["step", "option", "kinds", "in_plan", "idle", *names, *(f"alone_{name}" for name in names), "against"]
     rows = [
-        [row.step, row.option, row.kinds, row.in_plan, *_cells(row.figures), *_cells(row.alone), row.against]
+        [row.step, row.option, row.kinds, row.in_plan, row.idle, *_cells(row.figures), *_cells(row.alone), row.against]
         for row in review.rows
     ]
     return sheet([header, *rows])

@@ -46,6 +46,7 @@ def _write_steps(paper: Paper, review: Review) -> None:
     paper.heading("The steps, with their part of today's losses")
     rows = [[step.step, words.share(step.money_share), words.share(step.defect_share)] for step in review.steps]
     paper.table(columns(["step"], ["of the money", "of the defects"]), rows, len(rows))
+    paper.say(blocks.LOST_NOTE)
 
 
 def _write_options(paper: Paper, review: Review) -> None:
@@ -91,6 +92,8 @@ def _name(row: ReviewRow) -> str:
 
 
 def _option(row: ReviewRow) -> str:
+    if row.idle:
+        return f"{row.kinds[0]}: pays at no level, so as it is"
     kind = " and ".join(row.kinds)
     return f"{kind}: {words.clean(row.option)}" if row.option else kind
 

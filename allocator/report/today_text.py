@@ -22,6 +22,7 @@ def today_text(today: Today, width: int = LOG_WIDTH) -> str:
         [(step.step, step.defect_share) for step in today.rows],
         [(step.step, step.money_share) for step in today.rows],
     )
+    paper.say(blocks.LOST_NOTE)
     blocks.write_assumed(paper, today.assumed)
     blocks.write_cautions(paper, today.cautions)
     blocks.write_last_word(paper, blocks.safety_steps(today.cautions))
@@ -36,9 +37,13 @@ def _standing(today: Today) -> str:
 
 
 def _write_lots(paper: Paper, today: Today) -> None:
-    if today.line.bad_per_lot:
-        lots = [f"of {size:,} about {words.number(bad)}" for size, bad in today.line.bad_per_lot]
-        paper.say(f"Bad units to expect: {', '.join(lots)}.")
+    for lots, of, which in (
+        (today.line.bad_per_lot, "started", "that do not come out good (final yield)"),
+        (today.line.escaped_per_lot, "shipped", "with a defect that escaped (shipped yield)"),
+    ):
+        if lots:
+            said = ", ".join(f"of {size:,} {of} about {words.number(bad)}" for size, bad in lots)
+            paper.say(f"Units to expect {which}: {said}.")
 
 
 def _write_steps(paper: Paper, today: Today) -> None:

@@ -77,4 +77,6 @@ class TodayLine:
     money_reason: str | None
     dpu: float
     bad_per_lot: tuple[tuple[int, float], ...]
-    """Units not right first time, by lot size."""
+    """Units started that do not come out good (the loss of the final yield), by lot size."""
+    escaped_per_lot: tuple[tuple[int, float], ...]
+    """Units shipped with a defect, by lot size; none where the shipped yield is unknown."""

@@ -51,6 +51,8 @@ class ReviewRow:
     """With it alone added to today's line; None where it cannot stand alone, or is nothing to add."""
     against: tuple[str, ...]
     """What speaks against it, or rests on an assumption."""
+    idle: bool = False
+    """Whether it is a law that pays at no level: the figures are those of the step as it is."""
 
 
 @dataclass(frozen=True)
