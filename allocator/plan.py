@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import replace
 
 import numpy as np
@@ -13,8 +13,9 @@ from allocator.cautions import cautions_of_plan, what_is_assumed
 from allocator.confidence import confident_plan
 from allocator.errors import RangeError
 from allocator.flow import yields
+from allocator.least import capital_for_targets, least_capital, least_total
 from allocator.problem import CAPITAL, COST, Problem, pose
-from allocator.results import BestReachable, Binding, Bought, Plan, Proof, Restraint
+from allocator.results import BestReachable, Binding, Bought, LeastNeeded, Plan, Proof, Restraint
 from allocator.rules import simpler_rules
 from allocator.scenario.model import Scenario
 from allocator.solve.road import Solved, solve
@@ -173,35 +174,33 @@ def _words(yield_name: str) -> str:
 
 def _out_of_reach(problem: Problem, blocked: Solved) -> Plan:
     """Return the best reachable plan, marked as not reaching the target."""
-    if blocked.blocked in (CAPITAL, COST) or (blocked.blocked != problem.split and blocked.blocked is not None):
-        return _other_limit_blocks(problem, blocked)
-    best = best_reachable(problem)
-    binding = binding_steps(problem, best, problem.budgets.get(problem.split))
-    plan = describe(best, "cheapest", problem)
-    return _with_cautions(
-        replace(plan, reached=False, binding=binding, best_reachable=summarise(problem, best, binding)), problem
-    )
+    if blocked.blocked in (CAPITAL, COST):
+        return _too_little_money(problem, least_capital if blocked.blocked == CAPITAL else least_total)
+    split = blocked.blocked or problem.split
+    asked = problem
+    if split != problem.split:  # The split yield is not even in question: another target cannot be kept.
+        asked = replace(problem, split=split, budgets={k: v for k, v in problem.budgets.items() if k == split})
+    best = best_reachable(asked)
+    binding = binding_steps(asked, best, problem.budgets.get(split))
+    plan = replace(
+        describe(best, "cheapest", problem),
+        reached=False, binding=binding, best_reachable=summarise(asked, best, binding),
+        least_needed=capital_for_targets(problem),
+    )  # fmt: skip
+    return _with_cautions(plan, problem)
 
 
-def _other_limit_blocks(problem: Problem, blocked: Solved) -> Plan:
-    """The split yield is not even in question: another target or the money cannot be kept; say which, and its best."""
-    name, least = blocked.blocked, blocked.least
-    assert name is not None
-    if name in (CAPITAL, COST):
-        limit = problem.capital if name == CAPITAL else problem.spend
-        what = "capital" if name == CAPITAL else "yearly total"
-        reason = (
-            f"the {what} cannot be brought below {least:,.0f} with the floors and targets kept (limit {limit:,.0f})"
-        )
-        plan = _no_plan(problem, (Binding("(whole line)", reason),))
-        return replace(plan, spend_limit=problem.spend, capital_limit=problem.capital)
-    other = replace(problem, split=name, budgets={k: v for k, v in problem.budgets.items() if k == name})
-    best = best_reachable(other)
-    binding = binding_steps(other, best, problem.budgets[name])
-    plan = describe(best, "cheapest", problem)
-    return _with_cautions(
-        replace(plan, reached=False, binding=binding, best_reachable=summarise(other, best, binding)), problem
-    )
+def _too_little_money(problem: Problem, least: Callable[[Problem], tuple[LeastNeeded, Solved]]) -> Plan:
+    """Return the plan that needs the least of the money of which there is too little."""
+    needed, nearest = least(problem)
+    what = "capital" if needed.of == CAPITAL else "yearly total"
+    reason = f"the {what} cannot be brought below {needed.without_targets:,.0f} (limit {needed.limit:,.0f})"
+    plan = replace(
+        describe(nearest, "best yield" if needed.of == "total" else "cheapest", problem),
+        reached=False, binding=(Binding("(whole line)", reason),), least_needed=needed,
+        spend_limit=problem.spend, capital_limit=problem.capital,
+    )  # fmt: skip
+    return _with_cautions(plan, problem)
 
 
 def summarise(problem: Problem, best: Solved, binding: tuple[Binding, ...]) -> BestReachable:

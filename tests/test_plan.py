@@ -227,10 +227,15 @@ def test_the_plan_for_the_yield_that_capital_buys_needs_no_more_than_the_capital
     assert not better.reached
 
 
-def test_too_little_money_for_any_plan_is_said() -> None:
-    plan = plan_of(shop(), spend=0.5 * total_of(plan_of(shop())))
-    assert (plan.reached, plan.money) == (False, None)
+def test_too_little_money_for_any_plan_shows_the_cheapest_there_is() -> None:
+    least = plan_of(shop())
+    plan = plan_of(shop(), spend=0.5 * total_of(least))
+    assert not plan.reached
+    assert total_of(plan) == pytest.approx(total_of(least), rel=SAME)
     assert "yearly total" in plan.binding[0].reason
+    assert plan.least_needed is not None
+    assert (plan.least_needed.of, plan.least_needed.limit) == ("total", 0.5 * total_of(least))
+    assert plan_of(shop(), spend=plan.least_needed.without_targets * (1 + SAME)).reached
 
 
 @pytest.mark.parametrize("question", [{}, {"spend": 7_000.0}, {"capital": 12_000.0}])

@@ -53,7 +53,7 @@ PLAN_KEYS = keys(
     "lower_bound gap price_of_defect_budget cost_of_next_nine assumed best_reachable binding steps"
 )
 PLAN_ADDED = keys(
-    "title currency question split_yield dpu method seconds binding_reasons rules rules_note restraint "
+    "title currency question split_yield dpu method seconds binding_reasons least_needed rules rules_note restraint "
     "confidence cautions"
 )
 STEP_KEYS = keys(

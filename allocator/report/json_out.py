@@ -57,6 +57,7 @@ def plan_json(plan: Plan) -> dict[str, Any]:
         **_proof(plan),
         **_pick(plan, ("price_of_defect_budget", "cost_of_next_nine", "assumed")),
         "best_reachable": _best(plan.best_reachable),
+        "least_needed": None if plan.least_needed is None else asdict(plan.least_needed),
         "binding": [held.step for held in plan.binding],
         "binding_reasons": [_pick(held, ("step", "reason")) for held in plan.binding],
         "steps": Told(plan.rows, _keys(TARGET_BEFORE, "target", LEVEL_KEYS, TARGET_AFTER)),

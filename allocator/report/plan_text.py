@@ -7,7 +7,7 @@ from collections.abc import Iterator
 from allocator.report import blocks, words
 from allocator.report.confidence_text import write_confidence
 from allocator.report.paper import LOG_WIDTH, Paper, columns
-from allocator.results import Plan, Restraint, RuleOutcome, StepTarget
+from allocator.results import LeastNeeded, Plan, Restraint, RuleOutcome, StepTarget
 
 SAME_LOSS = 1e-8
 """A loss within this share of the target's is the target's: rules split the budget to the last digit."""
@@ -67,6 +67,9 @@ def _restraint(plan: Plan, kept: Restraint) -> str:
 def answer(plan: Plan) -> str:
     """The answer in one sentence, or for a target out of reach, that it is out of reach."""
     wanted = words.targets_in_full(plan.targets, plan.target_losses, plan.split)
+    needed = plan.least_needed
+    if not plan.reached and needed is not None and needed.without_targets is not None:
+        return _too_little_money(plan, needed)
     if not plan.reached and plan.confidence is not None:
         return f"No plan was found that is {_percent(plan.confidence.confidence)} sure of {wanted}."
     if not plan.reached:
@@ -74,10 +77,27 @@ def answer(plan: Plan) -> str:
     opening = {
         "cheapest": f"For {wanted}",
         "confident": f"To be {_sureness(plan)} sure of {wanted}",
-        "best yield": f"The best {words.yield_name(plan.split)} for the money is {_reached(plan)}",
+        "best yield": f"The best {words.yield_name(plan.split)} for {_money_given(plan)} is {_reached(plan)}",
         "optimum": f"No target is set; the least cost is at a {words.yield_name(plan.split)} of {_reached(plan)}",
     }.get(plan.question, f"For {wanted}")
     return f"{opening}: {_actions(plan)}; it costs {_cost(plan)}."
+
+
+def _money_given(plan: Plan) -> str:
+    if plan.spend_limit is not None:
+        return f"at most {words.per_year(plan.spend_limit, plan.currency)} in all"
+    return f"at most {words.money(plan.capital_limit)} {words.clean(plan.currency)} of capital"
+
+
+def _too_little_money(plan: Plan, needed: LeastNeeded) -> str:
+    currency = words.clean(plan.currency)
+    least, limit = words.money(needed.without_targets), words.money(needed.limit)
+    if needed.of == "total":
+        return f"No plan costs as little as {limit} {currency}/year: the least is {least} {currency}/year."
+    said = f"No plan keeps the floors with {limit} {currency} of capital: the least is {least} {currency}"
+    if needed.with_targets is not None:
+        return f"{said}, and {words.money(needed.with_targets)} {currency} to meet the target as well."
+    return f"{said}." if not plan.targets else f"{said}; the target is out of reach with any capital."
 
 
 def _percent(share: float) -> str:
@@ -122,17 +142,34 @@ def _step_actions(steps: tuple[StepTarget, ...]) -> Iterator[tuple[float, str]]:
 
 
 def _write_out_of_reach(paper: Paper, plan: Plan) -> None:
+    needed, which = plan.least_needed, "best reachable" if plan.confidence is None else "surest"
+    if needed is not None and needed.without_targets is not None:
+        which = "nearest"  # The answer has said already what holds it: the money.
+    else:
+        _write_what_holds(paper, plan)
+    if plan.yields is not None:
+        paper.heading(f"The {which} plan: {_actions(plan)}; it costs {_cost(plan)}. The tables show this plan.")
+
+
+def _write_what_holds(paper: Paper, plan: Plan) -> None:
     if plan.yields is None:
         paper.say("No choice at all keeps the floors and the limits.")
     if plan.best_reachable is not None:
         best = blocks.best_in_words(plan.best_reachable, plan.currency)
         paper.say(f"The best reachable {words.yield_name(plan.best_reachable.of)} is {best}.")
+    if plan.least_needed is not None:
+        paper.say(_capital_that_would_do(plan, plan.least_needed))
     if plan.binding:
         paper.heading("What holds it out of reach")
         blocks.write_binding(paper, plan.binding)
-    if plan.yields is not None:
-        which = "best reachable" if plan.confidence is None else "surest"
-        paper.heading(f"The {which} plan: {_actions(plan)}; it costs {_cost(plan)}. The tables show this plan.")
+
+
+def _capital_that_would_do(plan: Plan, needed: LeastNeeded) -> str:
+    currency = words.clean(plan.currency)
+    limit = f"the limit of {words.money(needed.limit)} {currency}"
+    if needed.with_targets is None:
+        return f"No capital would do: beyond {limit} too the target stays out of reach."
+    return f"With {words.money(needed.with_targets)} {currency} of capital, above {limit}, it can be met."
 
 
 def _write_tables(paper: Paper, plan: Plan) -> None:

@@ -22,7 +22,17 @@ from allocator.results.page import (
     Stated,
     Stop,
 )
-from allocator.results.plan import BestReachable, Binding, Bought, Plan, Proof, Restraint, RuleOutcome, StepTarget
+from allocator.results.plan import (
+    BestReachable,
+    Binding,
+    Bought,
+    LeastNeeded,
+    Plan,
+    Proof,
+    Restraint,
+    RuleOutcome,
+    StepTarget,
+)
 from allocator.results.rehearsal import Rehearsal, Rehearsed, StepRehearsed
 from allocator.results.sheets import Sheet, SupplierSheet, SupplierSheets
 from allocator.results.study import Fit, Index, Indices, Outlier, Signal, Study
@@ -50,6 +60,7 @@ __all__ = [
     "Fit",
     "Index",
     "Indices",
+    "LeastNeeded",
     "Level",
     "Lever",
     "LineFigures",

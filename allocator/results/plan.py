@@ -108,6 +108,19 @@ class BestReachable:
 
 
 @dataclass(frozen=True)
+class LeastNeeded:
+    """Where a limit on money stands in the way: the least that would do."""
+
+    of: str
+    """'capital' or 'total' (the yearly total)."""
+    limit: float
+    without_targets: float | None
+    """With the floors kept (a total: with all else that was asked); None where the limit leaves that much."""
+    with_targets: float | None
+    """With the targets kept too; None without targets, or where no amount does."""
+
+
+@dataclass(frozen=True)
 class Restraint:
     """What the plan was told to keep to, and what the plan would be without it (None where it misses the target)."""
 
@@ -155,6 +168,8 @@ class Plan:
     restraint: Restraint | None = None
     confidence: Confidence | None = None
     """How sure the plan is, where that was asked."""
+    least_needed: LeastNeeded | None = None
+    """Where a limit on money is what leaves no plan, or keeps the target out of reach."""
 
     @property
     def cost_of_restraint(self) -> float | None:

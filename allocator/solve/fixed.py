@@ -178,4 +178,6 @@ def _choice(problem: Problem, rows: NDArray[np.int64], program: Program, point: 
         some = rows[moving]
         inside = np.clip(delta[moving], ways.delta_low[some], ways.delta_high[some])
         z[moving] = np.clip(cv.sigma(ways.curves.take(some), inside), ways.z_low[some], ways.z_high[some])
+        unmoved = moving[inside >= ways.delta_high[some]]
+        z[unmoved] = ways.z_low[rows[unmoved]]  # To the last digit: a limit of 0 on money takes no rounding of it.
     return Choice(rows, z)

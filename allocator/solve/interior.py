@@ -7,7 +7,7 @@ multipliers λ ≥ 0 the least of f + λ·c over the box is at least its value a
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -85,6 +85,15 @@ def minimise(program: Program, objective: str, limits: dict[str, float], hopeles
     hopeless : float, optional
         Stop as soon as the bound passes this: whoever asks has something better already.
     """
+    unpaid = _without_money(program, limits)
+    if unpaid is None:
+        return None
+    program, limits, fixed = unpaid
+    point = _minimise(program, objective, limits, hopeless)
+    return None if point is None else _with_fixed(point, fixed)
+
+
+def _minimise(program: Program, objective: str, limits: dict[str, float], hopeless: float | None) -> Point | None:
     rising = {n: b for n, b in limits.items() if not program.functions[n].law.any()}
     falling = {n: b for n, b in limits.items() if n not in rising}
     pinned = _without_room(program, rising)
@@ -124,6 +133,31 @@ def _without_room(
     if free.all():
         return program, kept, (free, program.low)
     return _pinned(program, free), kept, (free, program.low)
+
+
+def _without_money(
+    program: Program, limits: dict[str, float]
+) -> tuple[Program, dict[str, float], tuple[NDArray[np.bool_], Array]] | None:
+    """Pin the variables of limits on laws alone that only the highest intensities keep; None where not even these do.
+
+    Where all the money is spent before any law is (a limit on capital of 0, say), no point lies inside the limit.
+    """
+    free, kept = np.ones(program.size, dtype=bool), dict(limits)
+    for name, limit in limits.items():
+        f = program.functions[name]
+        if f.scrap or f.linear.any() or not f.law.any():
+            continue
+        least, most = program.value(name, program.high), program.value(name, program.low)
+        rounding = INTERIOR * max(most - least, abs(limit))
+        if least > limit + rounding:
+            return None
+        if least >= limit - rounding:
+            free &= f.law == 0.0
+            del kept[name]
+    held = np.where(free, program.low, program.high)
+    if free.all():
+        return program, kept, (free, held)
+    return _pinned(replace(program, low=held), free), kept, (free, held)
 
 
 def _pinned(program: Program, free: NDArray[np.bool_]) -> Program:
