@@ -17,9 +17,7 @@ from typing import TYPE_CHECKING, Annotated, Any, NoReturn
 import typer
 from typer.core import TyperGroup
 
-from allocator.cli.misuse import COMMAND_LINE, UsageError, asks_for_help, misuse
 from allocator.errors import AllocatorError, Fault, InputError, RangeError
-from allocator.files import refuse_unfit_file, refuse_unfit_folder
 
 if TYPE_CHECKING:
     from allocator.scenario.model import Scenario
@@ -27,6 +25,11 @@ if TYPE_CHECKING:
 OUT_OF_REACH = 1
 FAILED = 1
 WRONG_INPUT = 2
+COMMAND_LINE = "command line"
+UsageError: Any = typer.BadParameter.__mro__[1]
+"""The library exports only its kind for bad values; every misuse of a command is of this, the kind above it."""
+HELP_ASKED = "NoArgsIsHelpError"
+"""The kind raised where there is no argument at all, which is answered with the help."""
 PIPE_CLOSED = 141  # What a shell reports for a program that a closed pipe ended (128 + SIGPIPE).
 
 
@@ -54,8 +57,10 @@ class Boundary(TyperGroup):
             self._refused(error)
 
     def _refused(self, error: Exception) -> NoReturn:
-        if asks_for_help(error):
+        if type(error).__name__ == HELP_ASKED:
             raise error
+        from allocator.cli.misuse import misuse
+
         commands = {name: self.commands[name] for name in self.list_commands(None)}
         raise _said([str(misuse(error, self.typed, commands))], WRONG_INPUT) from None
 
@@ -145,6 +150,8 @@ def form_of(as_json: bool, as_csv: bool) -> Any:
 
 def refuse_unfit_outputs(figures: Path | None = None, xlsx: Path | None = None) -> None:
     """Find before any work is done what could not be written after it."""
+    from allocator.files import refuse_unfit_file, refuse_unfit_folder
+
     if figures is not None:
         refuse_unfit_folder(figures)
     if xlsx is not None:

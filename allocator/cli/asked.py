@@ -8,8 +8,7 @@ from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
-from allocator.cli.app import refused
-from allocator.cli.misuse import COMMAND_LINE
+from allocator.cli.app import COMMAND_LINE, refused
 from allocator.errors import Fault, InputError
 
 if TYPE_CHECKING:

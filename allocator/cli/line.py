@@ -40,7 +40,6 @@ from allocator.cli.asked import (
 )
 from allocator.cli.progress import progress
 from allocator.errors import Fault, InputError
-from allocator.files import refuse_unfit_file
 
 
 @app.command()
@@ -51,6 +50,8 @@ def new(
     ] = False,
 ) -> None:
     """Write a small commented scenario to start from. As in: allocator new line.toml"""
+    from allocator.files import refuse_unfit_file
+
     refuse_unfit_file(file)
     if file.exists():
         raise InputError([Fault(str(file), "", "a file of that name", "name a new file; nothing was overwritten")])

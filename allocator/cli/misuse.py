@@ -6,22 +6,12 @@ import re
 from collections.abc import Iterable, Sequence
 from typing import Any
 
-import typer
-
+from allocator.cli.app import COMMAND_LINE
 from allocator.errors import Fault
 from allocator.scenario.faults import hint
 
-UsageError: Any = typer.BadParameter.__mro__[1]
-"""The library exports only its kind for bad values; every misuse is of this, the kind above it."""
-COMMAND_LINE = "command line"
-HELP_ASKED = "NoArgsIsHelpError"
 WHOLE = ("points", "units", "seed")
 """Options that take a whole number; all others that take a figure take any number."""
-
-
-def asks_for_help(error: Exception) -> bool:
-    """Return whether there was no argument at all, which is answered with the help."""
-    return type(error).__name__ == HELP_ASKED
 
 
 def misuse(error: Any, typed: Sequence[str], commands: dict[str, Any]) -> Fault:

@@ -9,7 +9,6 @@ import typer
 
 from allocator.cli.app import OUT_OF_REACH, File, app, load
 from allocator.cli.progress import progress
-from allocator.files import refuse_unfit_file
 
 
 @app.command()
@@ -22,6 +21,8 @@ def report(
 ) -> None:
     """Write the page for the design review. As in: allocator report line.toml -o review.html"""
     target = output if output is not None else Path(f"{file.stem}.html")
+    from allocator.files import refuse_unfit_file
+
     refuse_unfit_file(target)
     from allocator import api
     from allocator.report.page import page_html, write_page
