@@ -64,8 +64,8 @@ def price_nines(
     today = _loss(line_today(problem).yields, problem.split)
     answer = Nines(
         title=scenario.title, currency=scenario.currency, split=problem.split, today_nines=nines_of(today), rows=(),
-        highest=None, optimum_yield=None, optimum_loss=None, optimum_total=None, assumed=what_is_assumed(problem),
-        cautions=cautions_of_input(problem),
+        highest=None, missed_target_loss=None, optimum_yield=None, optimum_loss=None, optimum_total=None,
+        assumed=what_is_assumed(problem), cautions=cautions_of_input(problem),
     )  # fmt: skip
     if problem.options.no_way:
         return answer
@@ -77,10 +77,17 @@ def price_nines(
     assert optimum.outcome is not None
     load = optimum.outcome.loads[problem.split]
     return replace(
-        answer, highest=highest, optimum_yield=math.exp(-load), optimum_loss=-math.expm1(-load),
-        optimum_total=optimum.outcome.money.total,
+        answer, highest=highest, missed_target_loss=_missed(problem, highest),
+        optimum_yield=math.exp(-load), optimum_loss=-math.expm1(-load), optimum_total=optimum.outcome.money.total,
         rows=_priced(problem, _stops(problem, today, highest, points), best, optimum),
     )  # fmt: skip
+
+
+def _missed(problem: Problem, highest: BestReachable) -> float | None:
+    """Return the loss that the target allows, where no plan has as little."""
+    budget = problem.budgets.get(problem.split)
+    allowed = math.inf if budget is None else -math.expm1(-budget)
+    return allowed if allowed < highest.loss * (1.0 - SAME) else None
 
 
 def _loss(yields: Yields, split: str) -> float:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 
 from allocator.case import capital_case
 from allocator.confidence import confident_plan
@@ -16,6 +16,7 @@ from allocator.results import (
     BestReachable,
     CapitalCase,
     Confidence,
+    LeftOut,
     Plan,
     Rehearsal,
     ReviewPage,
@@ -75,6 +76,7 @@ def review_page(scenario: Scenario, *, watch: Watch | None = None) -> ReviewPage
         confidence=_confidence(problem, plan),
         rehearsal=_rehearsal(scenario, plan),
         sheets=_sheets(scenario, plan, watch),
+        left_out=tuple(_left_out(problem, scenario, plan)),
     )
 
 
@@ -96,6 +98,14 @@ def _rehearsal(scenario: Scenario, plan: Plan) -> Rehearsal | None:
         return None
 
 
+def _left_out(problem: Problem, scenario: Scenario, plan: Plan) -> Iterator[LeftOut]:
+    """Yield what a plan allows to be shown, but of which there is too much for a page."""
+    if plan.reached and len(things(problem)) > MOST_WEIGHED:
+        yield LeftOut("weigh", len(things(problem)), MOST_WEIGHED)
+    if plan.reached and _parts_bought(scenario) > MOST_SHEETS:
+        yield LeftOut("suppliers", _parts_bought(scenario), MOST_SHEETS)
+
+
 def _weighed(problem: Problem, scenario: Scenario, plan: Plan, watch: Watch | None) -> Weighed | None:
     """Return what everything is worth, where there is a plan to measure by and not too much to weigh."""
     if not plan.reached or len(things(problem)) > MOST_WEIGHED:
@@ -115,8 +125,12 @@ def _confidence(problem: Problem, plan: Plan) -> Confidence | None:
 
 
 def _sheets(scenario: Scenario, plan: Plan, watch: Watch | None) -> SupplierSheets | None:
-    named = sum(1 for step in scenario.step if step.supplier is not None)
-    return supplier_sheets(scenario, watch=watch) if plan.reached and 0 < named <= MOST_SHEETS else None
+    fits = 0 < _parts_bought(scenario) <= MOST_SHEETS
+    return supplier_sheets(scenario, watch=watch) if plan.reached and fits else None
+
+
+def _parts_bought(scenario: Scenario) -> int:
+    return sum(1 for step in scenario.step if step.supplier is not None)
 
 
 def _opens_with(found: Sequence[Answer], plan: Plan) -> int:

@@ -9,7 +9,7 @@ from dataclasses import replace
 import numpy as np
 from numpy.typing import NDArray
 
-from allocator.cautions import cautions_of_plan, what_is_assumed
+from allocator.cautions import cautions_of_held, cautions_of_plan, what_is_assumed
 from allocator.confidence import confident_plan
 from allocator.errors import RangeError
 from allocator.flow import yields
@@ -84,7 +84,8 @@ def make_plan(
     free = _plan_of(problem, *asked)
     total = free.money.total if free.reached and free.money is not None else None
     loss = split_loss(free) if free.reached else None
-    return replace(plan, restraint=Restraint(restraint_words(hold, without, with_), total, loss))
+    kept = Restraint(restraint_words(hold, without, with_), total, loss)
+    return replace(plan, restraint=kept, cautions=(*cautions_of_held(plan, hold or ()), *plan.cautions))
 
 
 def _plan_of(problem: Problem, spend: float | None, capital: float | None, confidence: float | None) -> Plan:
@@ -162,7 +163,8 @@ def _best_for_the_money(problem: Problem, spend: float | None, capital: float | 
         return _out_of_reach(asked, best)
     cheapest = cheapest_at(asked, best)
     plan = describe(cheapest, "best yield", asked)
-    load_gap = f"no plan within the limit has a {_words(problem.split)} loss below {-math.expm1(-best.bound):.6g}"
+    lowest = -1e6 * math.expm1(-best.bound)
+    load_gap = f"No plan within the limit loses less than {lowest:,.6g} ppm of the {_words(problem.split)}."
     assert plan.proof is not None
     plan = replace(plan, proof=replace(plan.proof, note=load_gap), spend_limit=spend, capital_limit=capital)
     return _with_cautions(plan, asked)
@@ -246,7 +248,7 @@ def _what_holds(problem: Problem, best: Solved, those: NDArray[np.int64]) -> Ite
         elif limited:
             yield f"at {at}{chosen}; the capital limit allows no more"
         else:
-            yield f"at {at}{chosen}: {cap}{missing}"
+            yield f"at {at}{chosen} and no further: {cap}{missing}"
 
 
 def describe(solved: Solved, question: str, problem: Problem) -> Plan:

@@ -26,7 +26,7 @@ from allocator.states import States
 
 Array = NDArray[np.float64]
 UNITS, UNITS_UNCERTAIN = 1_000_000, 10_000_000
-LEAST_UNITS = 1_000
+LEAST_UNITS, MOST_UNITS = 1_000, 100_000_000
 HOPELESS = 100.0
 """A line that starts more items than this for one that is shipped is not played through: it would take for ever."""
 
@@ -58,7 +58,7 @@ def rehearse(
     scenario : Scenario
         As read by `read_scenario`.
     units : int, optional
-        Units to ship in all, 1,000 or more; 1,000,000 unless given, with `uncertain` 10,000,000.
+        Units to ship in all, 1,000 to 100,000,000; 1,000,000 unless given, with `uncertain` 10,000,000.
     seed : int
         The same seed gives the same rehearsal.
     uncertain : bool
@@ -82,8 +82,8 @@ def rehearse(
         When there are too few units to say anything.
     """
     units = units if units is not None else UNITS_UNCERTAIN if uncertain else UNITS
-    if units < LEAST_UNITS:
-        raise RangeError(f"{units:,} units are too few to rehearse; give {LEAST_UNITS:,} or more")
+    if not LEAST_UNITS <= units <= MOST_UNITS:
+        raise RangeError(_unfit(units))
     if seed < 0:
         raise RangeError(f"a seed is a whole number, 0 or more, not {seed}")
     problem = pose(scenario)
@@ -101,6 +101,15 @@ def rehearse(
         shop, (lambda chance: _redrawn(problem, hand, shop, chance)) if uncertain else None, units, rng, watch
     )
     return _compared(problem, hand, played, seed, "today" if today else "plan")
+
+
+def _unfit(units: int) -> str:
+    if units < LEAST_UNITS:
+        return f"{units:,} units are too few to rehearse; give {LEAST_UNITS:,} or more"
+    return (
+        f"{units:,} units are too many to rehearse: every one is followed, which for {MOST_UNITS:,} takes minutes, and "
+        f"ten times the units narrow the intervals only threefold; give {MOST_UNITS:,} or fewer"
+    )
 
 
 def _today(problem: Problem) -> AtHand:

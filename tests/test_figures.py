@@ -7,6 +7,7 @@ import math
 import re
 from collections.abc import Iterator
 from dataclasses import replace
+from itertools import pairwise
 from pathlib import Path
 from typing import Any
 
@@ -88,6 +89,18 @@ def test_frontier_is_the_points(nines: Nines) -> None:
     said = " ".join(text.get_text() for text in ax.texts)
     assert "target" in said
     assert "12,930" in said
+
+
+def test_between_two_points_nothing_is_claimed_but_the_field_they_bound(nines: Nines) -> None:
+    ax = figures.frontier(nines)
+    assert all(line.get_linestyle() == "None" for line in ax.lines if line.get_label() in ("least total", "points"))
+    fields = [
+        field.get_paths()[0].get_extents() for field in ax.collections if field.get_label() == "between two points"
+    ]
+    assert len(fields) == len(nines.rows) - 1
+    for field, (before, after) in zip(fields, pairwise(nines.rows), strict=True):
+        assert (field.x0, field.x1) == pytest.approx((before.nines, after.nines))
+        assert (field.y0, field.y1) == pytest.approx((before.total, after.total))
 
 
 def test_local_prices_touch_the_curve_with_the_slope_of_the_price(nines: Nines) -> None:

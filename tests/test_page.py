@@ -297,6 +297,26 @@ def test_line_that_keeps_no_floor_still_has_a_page() -> None:
     assert "No choice at all keeps the floors" in said
 
 
+def test_capital_too_small_says_how_much_would_do() -> None:
+    line = long_line(2) | {"limits": {"capital": 10.0}}
+    line["step"][0] |= {"at_least": {"dpmo": 20.0}}
+    page = review_page(scenario_from_dict(line))
+    said = " ".join(Tags(page_html(page)).said)
+    assert "No plan keeps the floors with 10.00 EUR of capital: the least is" in said
+    assert "Everything below shows the plan that comes nearest." in said
+
+
+def test_what_is_too_much_for_the_page_is_said(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr("allocator.page.MOST_WEIGHED", 1)
+    monkeypatch.setattr("allocator.page.MOST_SHEETS", 0)
+    page = review_page(read_scenario(ROOT / "scenarios/latch_bought.toml"))
+    assert (page.weighed, page.sheets) == (None, None)
+    said = " ".join(Tags(page_html(page)).said)
+    assert "1 bought parts have a target sheet; a page takes 0, so all of them are left out here." in said
+    assert "4 things could be bought, changed or improved; a page takes 1" in said
+    assert all("are left out here" not in " ".join(Tags(html(name)).said) for name in ("out of reach", "hostile"))
+
+
 # ------------------------------------------------------------------ the command
 
 

@@ -8,16 +8,24 @@ from pathlib import Path
 
 import pytest
 from test_report import a_plan, step_target
+from typer.testing import CliRunner
 
+from allocator.cli import app
+from allocator.errors import RangeError
+from allocator.nines import price_nines
 from allocator.option_table import review_table
 from allocator.plan import make_plan
 from allocator.rehearsal import rehearse
+from allocator.report.page.certainty import proof_said
 from allocator.report.plan_text import answer
 from allocator.report.rehearsal_text import verdict
 from allocator.report.render import render
+from allocator.report.words import found_by
 from allocator.results import Bought, Rehearsal
 from allocator.scenario.model import Scenario
 from allocator.scenario.read import read_scenario
+from allocator.solve.fixed import AT_AN_END, INTERIOR, PRICE, STILL
+from allocator.solve.road import BRANCHED
 from allocator.today import see_today
 
 SCENARIOS = Path(__file__).parent.parent / "scenarios"
@@ -89,7 +97,46 @@ def test_a_law_that_pays_at_no_level_is_no_improvement() -> None:
     assert used.alone is not None
 
 
+def test_a_review_is_of_one_step_or_of_all() -> None:
+    result = CliRunner().invoke(app, ["review", str(SCENARIOS / "latch.toml"), "--step", "stamp", "--step", "bend"])
+    assert (result.exit_code, result.stdout) == (2, "")
+    assert result.stderr == (
+        "allocator: command line, --step: found 2 steps; name one step, or leave it out for all the steps that matter\n"
+    )
+
+
+# ---------------------------------------------------------------- nines, and what is told to be kept
+
+
+def test_nines_say_that_the_target_lies_beyond_them() -> None:
+    beyond = price_nines(shipped("latch"), targets={"final_yield": 1e-9})
+    assert beyond.missed_target_loss == pytest.approx(1e-9, rel=1e-6)
+    said = "The target, a final yield of 99.9999999 % (0.0010 ppm, 9.00 nines), is out of reach"
+    assert said in in_one_line(render(beyond))
+    within = price_nines(shipped("latch"))
+    assert within.missed_target_loss is None
+    assert "out of reach" not in render(within)
+
+
+def test_nines_without_any_plan_say_where_the_reason_stands() -> None:
+    text = in_one_line(render(replace(price_nines(shipped("latch")), rows=(), highest=None, optimum_total=None)))
+    assert "there is nothing to price. `allocator plan` says what holds them out of reach" in text
+    assert "point nines" not in text
+
+
+@pytest.mark.parametrize(("ppm", "worse"), [(30_000.0, True), (20_000.0, False), (15_000.0, False)])
+def test_a_step_held_below_today_is_cautioned(ppm: float, worse: bool) -> None:
+    plan = make_plan(shipped("latch"), hold={"stamp": {"ppm": ppm}})
+    held = [caution.steps for caution in plan.cautions if caution.code == "held_below_today"]
+    assert held == ([("stamp",)] if worse else [])
+
+
 # ---------------------------------------------------------------- the rehearsal
+
+
+def test_more_units_than_anyone_would_wait_for_are_refused() -> None:
+    with pytest.raises(RangeError, match=r"100,000,001 units are too many to rehearse: .* give 100,000,000 or fewer"):
+        rehearse(shipped("latch"), units=100_000_001)
 
 
 @cache
@@ -103,3 +150,23 @@ def test_figures_outside_their_interval_stand_beside_what_chance_gives() -> None
     unlucky = verdict(replace(rehearsed(1), missed=("scrap", "total")))
     assert unlucky.startswith("2 of 4 computed yields and amounts that chance moves lie within")
     assert "outside: scrap, total. Chance alone puts one in twenty outside" in unlucky
+
+
+# ---------------------------------------------------------------- the proof
+
+
+def test_every_method_of_the_solvers_is_put_plainly() -> None:
+    for method in (PRICE, INTERIOR, AT_AN_END, STILL, f"cutting planes and {BRANCHED}"):
+        assert method not in found_by(method)
+        assert found_by(method).isascii()
+    assert found_by(f"all 12 choices, each by {PRICE} or {STILL}") == (
+        "all 12 choices of equipment tried; in each, every step set to the same price of a defect or worked out as it "
+        "is, since no level can move"
+    )
+    assert found_by(f"{PRICE}, {BRANCHED} over the 40 ways left").endswith("branch and bound over the 40 ways left")
+
+
+def test_a_plan_out_of_reach_is_proved_for_what_it_reaches() -> None:
+    said = " ".join(proof_said(make_plan(shipped("latch"), targets={"final_yield": 1e-9})))
+    assert "No plan that comes as near to what was asked can cost less" in said
+    assert "No plan that keeps the same promises" in " ".join(proof_said(make_plan(shipped("latch"))))

@@ -142,7 +142,9 @@ def some_nines(**changes: Any) -> Nines:
     first = NinesPoint("today", 1.6, 0.975, 0.025, 0.975, 0.025, 557_000.0, None, None, (), 0.0)
     last = NinesPoint("highest reachable", 11.7, 1.0, 2e-12, 1.0, 1.5e-12, 9e5, 3e5, math.inf, NAMES * 3, 1e-9)
     highest = BestReachable("final_yield", 1.0, 2e-12, 9e5, (Binding(MARKUP, "at its cap"),))
-    answered = Nines("Frame line", "EUR", "final_yield", 1.6, (first, last), highest, 0.99, 0.01, 2e5, (), (CAUTION,))
+    answered = Nines(
+        "Frame line", "EUR", "final_yield", 1.6, (first, last), highest, None, 0.99, 0.01, 2e5, (), (CAUTION,)
+    )
     return replace(answered, **changes)
 
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator
 
 from allocator.cautions.input import cautions_of_input, is_judged
 from allocator.problem import Problem
@@ -10,6 +10,8 @@ from allocator.results import Caution, Plan, StepTarget
 from allocator.scenario.model import Step
 
 PROMISED_GAP = 1e-4
+ROUNDING = 1e-9
+"""A level held as the one of today is the one of today."""
 DEMONSTRATED_BY = 3.0
 """−ln(1 − 0.95): expected defects at which none seen shows the rate with 95 % confidence."""
 
@@ -17,6 +19,21 @@ DEMONSTRATED_BY = 3.0
 def cautions_of_plan(problem: Problem, plan: Plan) -> tuple[Caution, ...]:
     """Return the cautions of a plan and of the scenario behind it."""
     return (*_of_answer(problem, plan), *cautions_of_input(problem))
+
+
+def cautions_of_held(plan: Plan, held: Iterable[str]) -> tuple[Caution, ...]:
+    """Return the caution where a step is held at a level below the one at which it stands today."""
+    names = {name.strip() for name in held}
+    worse = tuple(
+        row.step for row in plan.rows if row.step in names and row.target.dpmo > row.today.dpmo * (1.0 + ROUNDING)
+    )
+    if not worse:
+        return ()
+    said = Caution(
+        "held_below_today", worse, "the level that is held is worse than the one of today, and the plan counts on no better",
+        "hold the step at today's level or above, unless it really is to get worse",
+    )  # fmt: skip
+    return (said,)
 
 
 def _of_answer(problem: Problem, plan: Plan) -> Iterator[Caution]:

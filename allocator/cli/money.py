@@ -68,17 +68,21 @@ def case(
 @app.command()
 def review(
     file: File,
-    step: Annotated[str | None, typer.Option(metavar="NAME", help="One step alone, and later checks for it.")] = None,
+    step: Annotated[
+        list[str] | None, typer.Option(metavar="NAME", help="One step alone, and later checks for it.")
+    ] = None,
     as_json: AsJson = False,
     as_csv: AsCsv = False,
 ) -> None:
     """Set all options in one table for a design review. As in: allocator review line.toml --step weld"""
     form = form_of(as_json, as_csv)
+    if step is not None and len(step) > 1:
+        raise refused("--step", f"{len(step)} steps", "name one step, or leave it out for all the steps that matter")
     from allocator import api
 
     scenario = load(file)
     with progress("weighing the options") as watch:
-        answer = api.review_table(scenario, step, watch=watch)
+        answer = api.review_table(scenario, step[0] if step else None, watch=watch)
     show(answer, form)
     if not answer.reached:
         raise typer.Exit(OUT_OF_REACH)

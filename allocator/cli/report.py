@@ -3,12 +3,15 @@
 from __future__ import annotations
 
 from pathlib import Path
-from typing import Annotated
+from typing import TYPE_CHECKING, Annotated
 
 import typer
 
 from allocator.cli.app import OUT_OF_REACH, File, app, load
 from allocator.cli.progress import progress
+
+if TYPE_CHECKING:
+    from allocator.results import Plan
 
 
 @app.command()
@@ -33,5 +36,13 @@ def report(
     write_page(page_html(review), target)
     typer.echo(f"Wrote {target}. Open it in a browser; it needs no network.")
     if not review.plan.reached:
-        typer.echo("The target cannot be met: the page shows the best within reach, and what holds it.", err=True)
+        typer.echo(_out_of_reach(review.plan), err=True)
         raise typer.Exit(OUT_OF_REACH)
+
+
+def _out_of_reach(plan: Plan) -> str:
+    if plan.yields is None:
+        return "No choice keeps the floors and the limits: the page shows the line of today, and what holds it."
+    if plan.best_reachable is None:
+        return "No plan keeps the limits: the page shows the one that comes nearest, and how much would do."
+    return "The target cannot be met: the page shows the best within reach, and what holds it."

@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
 from typing import TYPE_CHECKING
 
-from allocator.figures.style import ACCENT, INK, MID, RULE, SMALL, SOFT, calm, cut, money_ticks, new_axes, plain
+from allocator.figures.style import ACCENT, INK, MID, PALE, RULE, SMALL, SOFT, calm, cut, money_ticks, new_axes, plain
 from allocator.report import words
 from allocator.results import Nines, NinesPoint
 
@@ -15,6 +16,7 @@ REACH = 0.18
 """Half-length of the line that shows a local price [nines]."""
 ROOM = 0.22
 """Room above and below the curve, for the names of its points."""
+BETWEEN = "between two points"
 NAMED = ("today's yield", "target", "highest reachable")
 
 
@@ -24,7 +26,8 @@ def frontier(nines: Nines, ax: Axes | None = None) -> Axes:
     Parameters
     ----------
     nines : Nines
-        As given by `price_nines`; with `points` the curve between the whole nines is followed too.
+        As given by `price_nines`; with `points` the curve between the whole nines is followed too. Between two points
+        only a field is drawn, within which the least total lies.
     ax : matplotlib Axes, optional
         Where to draw; a new figure without it.
 
@@ -35,7 +38,8 @@ def frontier(nines: Nines, ax: Axes | None = None) -> Axes:
     """
     ax = new_axes(ax, 7.5, 4.4)
     yield_name, currency = words.yield_name(nines.split), cut(nines.currency)
-    calm(ax, f"What each nine of {yield_name} costs", f"nines of {yield_name}", f"least total, {currency}/year")
+    below = f"nines of {yield_name} (grey: range of the least total between points; bar: local price)"
+    calm(ax, f"What each nine of {yield_name} costs", below, f"least total, {currency}/year")
     money_ticks(ax.yaxis)
     ax.grid(axis="y", color=RULE, linewidth=0.6)
     ax.set_axisbelow(True)
@@ -43,26 +47,33 @@ def frontier(nines: Nines, ax: Axes | None = None) -> Axes:
         ax.text(0.5, 0.5, "no choice keeps the floors and limits", transform=ax.transAxes, ha="center", color=SOFT)
         return ax
     x, y = [point.nines for point in nines.rows], [point.total for point in nines.rows]
-    ax.plot(x, y, color=ACCENT, linewidth=1.8, label="least total")
+    _draw_between(ax, x, y)
+    ax.plot(x, y, linestyle="", marker="o", markersize=2.5, color=ACCENT, label="least total")
     whole = [point for point in nines.rows if point.label != "grid"]
     ax.plot(
         [p.nines for p in whole], [p.total for p in whole], linestyle="", marker="o", markersize=5, color=ACCENT,
         label="points",
     )  # fmt: skip
     for point in whole:
-        _draw_price(ax, point)
+        _draw_price(ax, point, min(REACH, max(x) - point.nines))
     _name_points(ax, nines, currency)
     _mark_end(ax, nines)
     ax.margins(y=ROOM)
     return ax
 
 
-def _draw_price(ax: Axes, point: NinesPoint) -> None:
-    """Draw the slope of the total at a point, as long as the choices made there are kept."""
+def _draw_between(ax: Axes, x: list[float], y: list[float]) -> None:
+    """Draw what is known between points: a better yield costs no less, so the least total stays within each field."""
+    for (x0, y0), (x1, y1) in pairwise(zip(x, y, strict=True)):
+        ax.fill_between([x0, x1], min(y0, y1), max(y0, y1), color=PALE, linewidth=0.0, zorder=0, label=BETWEEN)
+
+
+def _draw_price(ax: Axes, point: NinesPoint, reach: float) -> None:
+    """Draw the slope of the total at a point with its choices kept, over no more nines than can be reached."""
     slope = point.price_per_nine
-    if slope:
-        ends = (point.nines - REACH, point.nines + REACH)
-        rise = (point.total - REACH * slope, point.total + REACH * slope)
+    if slope and reach > 0.0:
+        ends = (point.nines - reach, point.nines + reach)
+        rise = (point.total - reach * slope, point.total + reach * slope)
         ax.plot(ends, rise, color=MID, linewidth=5, alpha=0.55, solid_capstyle="butt", zorder=1, label="local price")
 
 

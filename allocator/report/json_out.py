@@ -116,6 +116,7 @@ def nines_json(nines: Nines) -> dict[str, Any]:
             "binding": [held.step for held in highest.binding],
             "binding_reasons": [_pick(held, ("step", "reason")) for held in highest.binding],
         },
+        "missed_target_loss": nines.missed_target_loss,
         "economic_optimum": optimum,
         "assumed": nines.assumed,
         "cautions": _cautions(nines.cautions),

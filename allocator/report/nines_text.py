@@ -7,6 +7,10 @@ from allocator.report.paper import LOG_WIDTH, Paper, columns
 from allocator.results import Nines, NinesPoint
 
 MOST_CHANGES = 8
+NO_CHOICE = (
+    "No choice at all keeps the floors, the limits and the other targets, so there is nothing to price. "
+    "`allocator plan` says what holds them out of reach, and what comes nearest."
+)
 
 
 def nines_text(nines: Nines, width: int = LOG_WIDTH) -> str:
@@ -17,7 +21,12 @@ def nines_text(nines: Nines, width: int = LOG_WIDTH) -> str:
         f"What each nine of {name} costs; today the line stands at {words.fixed(nines.today_nines)} nines. One nine "
         "more means ten times fewer losses."
     )
-    _write_points(paper, nines)
+    missed = nines.missed_target_loss
+    if missed is not None:
+        target = words.yield_in_full(1.0 - missed, missed)
+        paper.heading(f"The target, a {name} of {target}, is out of reach: the points end below it.")
+    if nines.rows:
+        _write_points(paper, nines)
     _write_changes(paper, nines)
     _write_ends(paper, nines, name)
     blocks.write_assumed(paper, nines.assumed)
@@ -60,7 +69,7 @@ def _write_changes(paper: Paper, nines: Nines) -> None:
 
 def _write_ends(paper: Paper, nines: Nines, name: str) -> None:
     if nines.highest is None:
-        paper.heading("No choice at all keeps the floors and the limits.")
+        paper.heading(NO_CHOICE)
     else:
         paper.heading(f"Highest reachable {name}: {blocks.best_in_words(nines.highest, nines.currency)}.")
         if nines.highest.binding:

@@ -69,7 +69,7 @@ def answer(plan: Plan) -> str:
     wanted = words.targets_in_full(plan.targets, plan.target_losses, plan.split)
     needed = plan.least_needed
     if not plan.reached and needed is not None and needed.without_targets is not None:
-        return _too_little_money(plan, needed)
+        return too_little_money(plan, needed)
     if not plan.reached and plan.confidence is not None:
         return f"No plan was found that is {_percent(plan.confidence.confidence)} sure of {wanted}."
     if not plan.reached:
@@ -89,7 +89,8 @@ def _money_given(plan: Plan) -> str:
     return f"at most {words.money(plan.capital_limit)} {words.clean(plan.currency)} of capital"
 
 
-def _too_little_money(plan: Plan, needed: LeastNeeded) -> str:
+def too_little_money(plan: Plan, needed: LeastNeeded) -> str:
+    """That no plan at all can be had for the money, and how much would do."""
     currency = words.clean(plan.currency)
     least, limit = words.money(needed.without_targets), words.money(needed.limit)
     if needed.of == "total":
@@ -158,13 +159,14 @@ def _write_what_holds(paper: Paper, plan: Plan) -> None:
         best = blocks.best_in_words(plan.best_reachable, plan.currency)
         paper.say(f"The best reachable {words.yield_name(plan.best_reachable.of)} is {best}.")
     if plan.least_needed is not None:
-        paper.say(_capital_that_would_do(plan, plan.least_needed))
+        paper.say(capital_that_would_do(plan, plan.least_needed))
     if plan.binding:
         paper.heading("What holds it out of reach")
         blocks.write_binding(paper, plan.binding)
 
 
-def _capital_that_would_do(plan: Plan, needed: LeastNeeded) -> str:
+def capital_that_would_do(plan: Plan, needed: LeastNeeded) -> str:
+    """With how much capital a target out of reach can be met."""
     currency = words.clean(plan.currency)
     limit = f"the limit of {words.money(needed.limit)} {currency}"
     if needed.with_targets is None:
@@ -292,7 +294,7 @@ def _write_proof(paper: Paper, plan: Plan) -> None:
     proof = plan.proof
     if proof is None:
         return
-    took = f"{words.clean(proof.method) or 'method not named'}, {words.number(proof.seconds)} s"
+    took = f"{words.found_by(proof.method) or 'method not named'}; {words.number(proof.seconds)} s"
     if proof.lower_bound is None:
         paper.heading(f"Proof: total {words.per_year(proof.total, plan.currency)}; no lower bound is proven; {took}.")
     else:

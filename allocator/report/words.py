@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 import unicodedata
 from collections.abc import Iterable, Sequence
 from decimal import Decimal
@@ -166,3 +167,26 @@ def targets_in_full(targets: dict[str, float], losses: dict[str, float], first: 
     names: Iterable[str] = sorted(targets, key=lambda name: (name != first, name))
     texts = [f"a {yield_name(name)} of {yield_in_full(targets[name], losses[name])}" for name in names]
     return " and ".join(texts)
+
+
+PLAINLY = {
+    "one price for all steps": "every step set to the same price of a defect",
+    "interior point": "all levels searched together (an interior-point method)",
+    "plain evaluation": "worked out as it is, since no level can move",
+    "every step at its best": "every step set as good as it gets",
+    "cutting planes and branch and bound": "a search that proves what it leaves out (branch and bound)",
+}
+"""Names that the solvers give to their methods, for people who never met them."""
+
+
+def found_by(method: str) -> str:
+    """How a plan was found, in plain words.
+
+    >>> found_by("all 2 choices, each by one price for all steps")
+    'all 2 choices of equipment tried; in each, every step set to the same price of a defect'
+    """
+    choices = re.match(r"all ([\d,]+) choices, each by (.*)", clean(method))
+    how = choices[2] if choices else clean(method)
+    for name, plain in PLAINLY.items():
+        how = how.replace(name, plain)
+    return f"all {choices[1]} choices of equipment tried; in each, {how}" if choices else how

@@ -13,6 +13,7 @@ from allocator.results.option_table import LineFigures, Review, ReviewedStep, Re
 from allocator.results.page import (
     Carried,
     Division,
+    LeftOut,
     LinePart,
     ReviewPage,
     Row,
@@ -61,6 +62,7 @@ __all__ = [
     "Index",
     "Indices",
     "LeastNeeded",
+    "LeftOut",
     "Level",
     "Lever",
     "LineFigures",

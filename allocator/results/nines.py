@@ -53,6 +53,8 @@ class Nines:
     today_nines: float
     rows: tuple[NinesPoint, ...]
     highest: BestReachable | None
+    missed_target_loss: float | None
+    """1 − the target of this yield, where it is out of reach."""
     optimum_yield: float | None
     optimum_loss: float | None
     optimum_total: float | None

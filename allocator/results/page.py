@@ -146,6 +146,18 @@ class Sources:
 
 
 @dataclass(frozen=True)
+class LeftOut:
+    """What is too much for a page and left to its own command."""
+
+    command: str
+    """'weigh' or 'suppliers'."""
+    count: int
+    """Of things to weigh, of parts bought."""
+    most: int
+    """What a page takes."""
+
+
+@dataclass(frozen=True)
 class ReviewPage:
     """Everything the page shows; each figure on it stands in here."""
 
@@ -170,4 +182,5 @@ class ReviewPage:
     rehearsal: Rehearsal | None
     """None where no plan keeps the promise."""
     sheets: SupplierSheets | None
-    """None where no supplier is named, or no plan keeps the promise."""
+    """None where no supplier is named, or too many, or no plan keeps the promise."""
+    left_out: tuple[LeftOut, ...]

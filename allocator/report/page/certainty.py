@@ -29,9 +29,11 @@ def proof_said(plan: Plan) -> list[str]:
     else:
         gap = words.UNKNOWN if proof.gap is None else f"{proof.gap:.1e}"
         bound = words.per_year(proof.lower_bound, plan.currency)
+        as_good = "keeps the same promises" if plan.reached else "comes as near to what was asked"
         texts = [
-            f"{total} No plan that keeps the same promises can cost less than {bound}: the proven gap is {gap} of it.",
-            f"Found by: {words.clean(proof.method)}. Every figure was worked out again from the finished choice alone.",
+            f"{total} No plan that {as_good} can cost less than {bound}: the proven gap is {gap} of it.",
+            f"How it was found: {words.found_by(proof.method)}.",
+            "Every figure was worked out again from the finished choice alone.",
         ]
     return [*texts, words.clean(proof.note)] if proof.note else texts
 

@@ -8,7 +8,8 @@ from typing import Any
 from allocator.report import blocks, words
 from allocator.report.page.control import against_today
 from allocator.report.page.scale import Scale, widest
-from allocator.results import Money, Plan, ReviewPage, Share, Yields
+from allocator.report.plan_text import capital_that_would_do, too_little_money
+from allocator.results import LeftOut, Money, Plan, ReviewPage, Share, Yields
 
 MOST_NAMED = 6
 
@@ -44,6 +45,8 @@ class Said:
     sources: list[list[str]]
     evidence: str
     left_out: int
+    elsewhere: list[tuple[str, str]]
+    """Questions that this page leaves to a command, and why."""
     cautions: list[tuple[str, str, str]]
     assumed: list[str]
     last_word: str
@@ -82,11 +85,24 @@ def said(review: ReviewPage) -> Said:
         sources=[_stated(s) for s in review.sources.stated],
         evidence=_evidence(review),
         left_out=review.sources.left_out,
+        elsewhere=[_elsewhere(left) for left in review.left_out],
         cautions=[_caution(c) for c in plan.cautions],
         assumed=[words.clean(text) for text in plan.assumed],
         last_word=_last_word(plan),
         index_note=blocks.INDEX_NOTE,
         yields_note=blocks.YIELDS_NOTE.strip("()"),
+    )
+
+
+def _elsewhere(left: LeftOut) -> tuple[str, str]:
+    if left.command == "weigh":
+        return "Buy, or leave?", (
+            f"{left.count:,} things could be bought, changed or improved; a page takes {left.most:,}, so they are left "
+            "out here. `allocator weigh` weighs them all."
+        )
+    return "What is asked of suppliers, and what is it worth?", (
+        f"{left.count:,} bought parts have a target sheet; a page takes {left.most:,}, so all of them are left out "
+        "here. `allocator suppliers` writes them."
     )
 
 
@@ -126,10 +142,16 @@ def _after(review: ReviewPage, currency: str) -> list[str]:
         if plan.best_reachable is not None:
             best = blocks.best_in_words(plan.best_reachable, plan.currency)
             texts.append(f"The best reachable {words.yield_name(plan.best_reachable.of)} is {best}.")
+        needed = plan.least_needed
+        if needed is not None:
+            texts.append((capital_that_would_do if needed.without_targets is None else too_little_money)(plan, needed))
         if plan.yields is None:
             texts.append("No choice at all keeps the floors and the limits.")
         else:
-            texts.append("Everything below shows the best plan that can be reached.")
+            which = (
+                "the plan that comes nearest" if plan.best_reachable is None else "the best plan that can be reached"
+            )
+            texts.append(f"Everything below shows {which}.")
     if plan.rows:
         texts.append(_takes(plan, currency))
     if plan.today.money is None:
