@@ -74,8 +74,17 @@ def _law_words(step: Step, highest: float, words: str | None) -> str | None:
     law = step.improve
     if law is None:
         return None
-    cap = f"; up to sigma level {highest:.3g} ({words})" if words else ""
-    return f"{law.law}{_parameter(law)}{cap}"
+    why = (words or "").split(" (sigma level")[0]  # The level stands before it already.
+    cap = f"; up to sigma level {highest:.3g}: {why}" if why else ""
+    return f"{law.law}{_parameter(law)}{_amount(law)}{cap}"
+
+
+def _amount(law: Law) -> str:
+    """Return what the law states that improving costs; quotes state theirs one by one."""
+    keys = ("price", "per_year", "per_item")
+    stated = [f", {key} {amount:,.12g}" for key in keys if (amount := getattr(law, key)) is not None]
+    at = "" if law.at is None else f" at {given_as(law.at)}"
+    return "".join(stated) + at
 
 
 def _parameter(law: Law) -> str:

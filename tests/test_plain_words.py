@@ -10,7 +10,9 @@ import pytest
 from test_report import a_plan, step_target
 from typer.testing import CliRunner
 
+from allocator.check import check_scenario
 from allocator.cli import app
+from allocator.compare import compare_scenarios
 from allocator.errors import RangeError
 from allocator.nines import price_nines
 from allocator.option_table import review_table
@@ -22,7 +24,7 @@ from allocator.report.rehearsal_text import verdict
 from allocator.report.render import render
 from allocator.report.words import found_by
 from allocator.results import Bought, Rehearsal
-from allocator.scenario.model import Scenario
+from allocator.scenario.model import Floor, Scenario
 from allocator.scenario.read import read_scenario
 from allocator.solve.fixed import AT_AN_END, INTERIOR, PRICE, STILL
 from allocator.solve.road import BRANCHED
@@ -170,3 +172,33 @@ def test_a_plan_out_of_reach_is_proved_for_what_it_reaches() -> None:
     said = " ".join(proof_said(make_plan(shipped("latch"), targets={"final_yield": 1e-9})))
     assert "No plan that comes as near to what was asked can cost less" in said
     assert "No plan that keeps the same promises" in " ".join(proof_said(make_plan(shipped("latch"))))
+
+
+# ---------------------------------------------------------------- check and compare
+
+
+def test_check_says_what_every_law_costs_and_what_ends_it() -> None:
+    improves = {row.step: row.improves for row in check_scenario(shipped("bracket")).rows}
+    assert improves["deburr"] == (
+        "decade, per_year 2,600; up to sigma level 3.06: one tenth of its starting defects (no up_to is given)"
+    )
+    assert improves["bore"] == "power, exponent 0.8, price 160,000 at cpk = 1.33; up to sigma level 6.12: up_to"
+    assert improves["coat"] == "quotes, 3 quotes; up to sigma level 3.12: the best level quoted"
+    assert improves["stress relief"] is None
+
+
+def test_two_plans_a_tenth_of_a_cent_apart_do_not_look_alike() -> None:
+    text = in_one_line(render(compare_scenarios([shipped("latch"), shipped("latch_bought")])))
+    assert "'latch_bought' keeps its promise at the least cost per shipped unit: 0.1276 EUR a shipped unit." in text
+    assert "per shipped unit 0.1293 0.1276" in text
+
+
+def test_check_says_first_that_no_plan_can_keep_a_floor() -> None:
+    scenario = shipped("latch")
+    hopeless = scenario.model_copy(
+        update={"step": (scenario.step[0].model_copy(update={"at_least": Floor(cpk=3.0)}), *scenario.step[1:])}
+    )
+    found = check_scenario(hopeless)
+    assert found.cautions[0].code == "floor_out_of_reach"
+    assert "sound as written, but no plan can keep its floors: 3 steps" in render(found)
+    assert "\nsound: 3 steps" in render(check_scenario(scenario))

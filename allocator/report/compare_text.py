@@ -33,7 +33,7 @@ def _verdict(answer: Comparison) -> str:
         kept = [case.label for case in answer.cases if case.plan.reached]
         return "None of them keeps its promise." if not kept else "No common measure of cost: see each column."
     best = next(case for case in answer.cases if case.label == answer.cheapest)
-    unit = f"{words.number(best.plan.cost_per_unit)} {words.clean(best.plan.currency)} a shipped unit"
+    unit = f"{words.unit_cost(best.plan.cost_per_unit)} {words.clean(best.plan.currency)} a shipped unit"
     missed = [words.quoted(case.label) for case in answer.cases if not case.plan.reached]
     rest = f" {words.listed(missed)} cannot keep the promise." if missed else ""
     return f"{words.quoted(best.label)} keeps its promise at the least cost per shipped unit: {unit}.{rest}"
@@ -115,7 +115,7 @@ def _write_money(paper: Paper, cases: Sequence[Compared], labels: Sequence[str])
     figures: list[Figure] = [
         *(_spent(kind) for kind in (*blocks.MONEY_KINDS, "total")),
         ("total over the first", lambda c: _signed(c.total_over_first)),
-        ("per shipped unit", lambda c: words.number(c.plan.cost_per_unit)),
+        ("per shipped unit", lambda c: words.unit_cost(c.plan.cost_per_unit)),
         ("total today", lambda c: words.money(None if c.plan.today.money is None else c.plan.today.money.total)),
         ("capital, once", lambda c: words.money(c.plan.capital)),
         ("capital over the first", lambda c: _signed(c.capital_over_first)),

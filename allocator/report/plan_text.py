@@ -38,10 +38,10 @@ def _write_answer(paper: Paper, plan: Plan) -> None:
     if not plan.reached:
         _write_out_of_reach(paper, plan)
     if plan.capital is not None:
-        unit = words.money(plan.cost_per_unit)
+        unit = words.unit_cost(plan.cost_per_unit)
         dpu = f"{words.number(plan.dpu)} defects per unit (today {words.number(plan.today.dpu)})"
         currency = words.clean(plan.currency)
-        paper.say(f"Capital {words.money(plan.capital)} {currency}; {unit} {currency} a shipped unit; {dpu}.")
+        paper.say(f"Capital {words.money(plan.capital)} {currency}; in all {unit} {currency} a shipped unit; {dpu}.")
     blocks.write_money_reason(paper, plan.today)
     if plan.restraint is not None:
         paper.heading(_restraint(plan, plan.restraint))
@@ -191,7 +191,7 @@ def choice(step: StepTarget) -> str:
 def _write_steps(paper: Paper, plan: Plan) -> None:
     steps = plan.rows
     paper.heading(f"Steps: what to choose (money in {words.clean(plan.currency)}/year)")
-    heads = columns(["step", "choice"], ["improve-\nment", "scrap", "share of\nbudget", "starts\nper year"])
+    heads = columns(["step", "choice"], ["improve-\nment", "scrap", "share of\ndefect\nbudget", "starts\nper year"])
     rows = (
         [step.step, choice(step), words.money(step.improvement), words.money(step.scrap),
          words.share(step.budget_share), words.number(step.starts_per_year)]

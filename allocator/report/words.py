@@ -92,6 +92,17 @@ def money(value: float | None) -> str:
     return f"{value:,.0f}" if abs(value) >= 999.995 else f"{value:,.2f}"
 
 
+def unit_cost(value: float | None) -> str:
+    """An amount per unit, without its unit: four digits that count, where two decimals would hide what parts two plans.
+
+    >>> unit_cost(0.129304), unit_cost(5.5932), unit_cost(1234.5), unit_cost(0.0)
+    ('0.1293', '5.593', '1,234', '0')
+    """
+    if value is None or not math.isfinite(value) or not 0.0 < abs(value) < 1000.0:
+        return money(value)
+    return f"{value:.{max(2, 3 - math.floor(math.log10(abs(value))))}f}"
+
+
 def per_year(value: float | None, currency: str) -> str:
     return money(value) if value is None or not math.isfinite(value) else f"{money(value)} {clean(currency)}/year"
 

@@ -124,7 +124,7 @@ def stop_texts(review: ReviewPage, stop: Stop, scale: Scale, axis: Scale, texts:
         "total": words.UNKNOWN if money is None else words.money(money.total),
         "against": against_today(stop, currency),
         "capital": words.money(stop.capital),
-        "unit": words.UNKNOWN if stop.cost_per_unit is None else words.money(stop.cost_per_unit),
+        "unit": words.UNKNOWN if stop.cost_per_unit is None else words.unit_cost(stop.cost_per_unit),
         "lost": words.UNKNOWN if money is None else words.money(money.total - money.improvement),
         "spent": words.UNKNOWN if money is None else words.money(money.improvement),
         "price": price_words(stop, currency),

@@ -188,7 +188,7 @@ def _figures(review: ReviewPage, currency: str) -> list[tuple[str, str, str]]:
         (words.yield_name(plan.split), words.percent(getattr(plan.yields, plan.split), loss),
          f"today {words.percent(*was)}"),
         (f"{currency} of capital", words.money(plan.capital), "price less trade-in, paid once"),
-        (f"{currency} a shipped unit", words.money(plan.cost_per_unit), "of it for quality"),
+        (f"{currency} a shipped unit", words.unit_cost(plan.cost_per_unit), "of it for quality"),
     ]  # fmt: skip
 
 
