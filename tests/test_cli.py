@@ -4,9 +4,9 @@ from __future__ import annotations
 
 import json
 import math
+import resource
 import subprocess
 import sys
-import time
 from pathlib import Path
 from types import SimpleNamespace
 from typing import Any
@@ -21,6 +21,7 @@ from allocator.errors import Fault, InputError, RangeError, SolverError
 from allocator.files import refuse_unfit_file, refuse_unfit_folder
 
 HELP_SECONDS = 0.5
+"""Processor time."""
 FAULTS = (
     Fault("line.toml, step 'Weld'", "cpk", "-1", "give a number above 0"),
     Fault("line.toml", "demand", "nothing", "add it"),
@@ -292,13 +293,19 @@ def test_help_answers_at_once_without_the_numerical_libraries() -> None:
     code = f"import allocator.cli, sys; print(*(m for m in {heavy.split()} if m in sys.modules))"
     assert subprocess.run([sys.executable, "-c", code], capture_output=True, text=True).stdout.strip() == ""
     best = math.inf
-    for _ in range(5):  # The best of five: the machine may be busy with other tests.
-        begun = time.perf_counter()
+    for _ in range(3):
+        begun = _seconds_of_children()
         done = subprocess.run([sys.executable, "-m", "allocator", "--help"], capture_output=True, text=True)
-        best = min(best, time.perf_counter() - begun)
+        best = min(best, _seconds_of_children() - begun)
         assert done.returncode == 0
         assert "plan" in done.stdout
     assert best < HELP_SECONDS
+
+
+def _seconds_of_children() -> float:
+    """Of the processor, not of the clock: the machine may be busy with other tests."""
+    used = resource.getrusage(resource.RUSAGE_CHILDREN)
+    return used.ru_utime + used.ru_stime
 
 
 PIPED = """
