@@ -53,6 +53,10 @@ class States:
         """Return the states of some rows (a copy)."""
         return States(self.levels.take(rows), *(getattr(self, f.name)[rows] for f in fields(self)[1:]))
 
+    def columns(self) -> list[NDArray[Any]]:
+        """Return all the arrays, in one order for all tables of states."""
+        return [getattr(part, f.name) for part in (self.levels, self) for f in fields(part) if f.name != "levels"]
+
     @property
     def copied(self) -> NDArray[np.bool_]:
         return np.asarray(self.installed > 1)

@@ -8,7 +8,7 @@ intensity is cut into shorter ones that carry their chord, so that every way is 
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 from typing import Any, SupportsIndex
 
 import numpy as np
@@ -179,12 +179,19 @@ class Ways:
 
     def take(self, rows: Indices) -> Ways:
         """Return the table of some ways."""
+        states = self.states.take(rows)
         return Ways(
-            self.step[rows], self.curves.take(rows), self.z_low[rows], self.z_high[rows], self.delta_low[rows],
+            self.step[rows], self._curves_of(states, rows), self.z_low[rows], self.z_high[rows], self.delta_low[rows],
             self.delta_high[rows], self.fixed_cost[rows], self.capital[rows], self.capital_per_cost[rows],
             Gates(*(getattr(self.gates, name)[rows] for name in GATE_FIELDS)), self.uses[rows],
-            self.lines.take(rows), self.states.take(rows), self.text.take(rows),
+            self.lines.take(rows), states, self.text.take(rows),
         )  # fmt: skip
+
+    def _curves_of(self, states: States, rows: Indices) -> Curves:
+        """Return the curves of some ways; columns that they share with the states are taken only once."""
+        taken = {id(mine): theirs for mine, theirs in zip(self.states.columns(), states.columns(), strict=True)}
+        columns = (getattr(self.curves, f.name) for f in fields(Curves))
+        return Curves(*(taken[id(column)] if id(column) in taken else column[rows] for column in columns))
 
 
 @dataclass(frozen=True)
