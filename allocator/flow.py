@@ -188,7 +188,9 @@ class Flow:
 def run(line: Line, intensity: Array, gates: Gates) -> Flow:
     """Return the exact flow for defect intensities `intensity` [per item], shape (n_steps,), and one gate per step."""
     missed, kept = (1.0 - gates.finds) * intensity, 1.0 - gates.earlier
-    inherited = line.tree.gathered(line.tree.inflow(line.per_unit * missed), line.per_unit * kept)
+    inherited = np.zeros(line.n_steps)
+    if missed.any():
+        inherited = line.tree.gathered(line.tree.inflow(line.per_unit * missed), line.per_unit * kept)
     found = gates.finds * intensity + gates.earlier * inherited
     scrap = (1.0 - gates.reworked) * found + gates.scrap_of_good
     hidden = missed + kept * inherited
@@ -197,12 +199,12 @@ def run(line: Line, intensity: Array, gates: Gates) -> Flow:
 
 def towards_end(line: Line, values: Array) -> Array:
     """Return for every step the sum of `values` over the gates from it to the end, shape (n_steps,)."""
-    return line.tree.spread(values, np.ones(line.n_steps))
+    return line.tree.sums_to_end(values)
 
 
 def from_start(line: Line, values: Array) -> Array:
     """Return for every step the sum of `values` over itself and all the steps that lead to it, shape (n_steps,)."""
-    return line.tree.gathered(values, np.ones(line.n_steps))
+    return line.tree.sums_from_start(values)
 
 
 def gradient(line: Line, gates: Gates, per_found: Array, per_escape: float) -> Array:
@@ -210,11 +212,14 @@ def gradient(line: Line, gates: Gates, per_found: Array, per_escape: float) -> A
 
     Every budget and the linearised money are of this form, so this is the price that each step's defects carry.
     """
+    missed = 1.0 - gates.finds
+    if not missed.any():
+        return gates.finds * per_found
     fed = line.feeds[:-1]
     found_next, missed_next = gates.earlier[fed] * per_found[fed], 1.0 - gates.earlier[fed]
     at_once, passed_on = line.per_unit[:-1] * found_next, line.per_unit[:-1] * missed_next
     per_hidden = line.tree.spread(np.append(at_once, per_escape), np.append(passed_on, 0.0))
-    return gates.finds * per_found + (1.0 - gates.finds) * per_hidden
+    return gates.finds * per_found + missed * per_hidden
 
 
 def loads(line: Line, flow: Flow) -> dict[str, float]:

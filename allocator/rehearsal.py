@@ -271,7 +271,7 @@ def _steps(problem: Problem, hand: AtHand, played: Played) -> tuple[StepRehearse
     year, units = line.shipped, float(played.sizes.sum())
     started, lost, events = played.per_unit("started"), played.per_unit("lost"), played.events("lost")
     starts, scrap = year * line.per_finished * np.exp(flow.exponent), scrap_lost_at(line, flow)
-    later = line.tree.spread(events.astype(float), np.ones(line.n_steps))
+    later = line.tree.sums_to_end(events.astype(float))
     poisson, clustered = clustered_yield(shop.intensity, np.inf), clustered_yield(shop.intensity, shop.clustering)
     drawn = ~np.isnan(hand.behind.sample) & played.uncertain
     rows = []

@@ -9,6 +9,7 @@ some of them are.
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -36,10 +37,27 @@ class Tree:
     feeds: Indices
     _sweeps: list[_Sweep] = field(default_factory=list, repr=False, compare=False)
 
+    @cached_property
+    def serial(self) -> bool:
+        """Whether each step feeds the next."""
+        return np.array_equal(self.feeds[:-1], np.arange(1, len(self.feeds)))
+
+    def sums_to_end(self, own: Array) -> Array:
+        """Return the sum of `own` over each step and all that follow it, shape (n_steps,)."""
+        if self.serial:
+            return np.asarray(np.cumsum(own[::-1])[::-1])
+        return self.spread(own, np.ones(len(own)))
+
+    def sums_from_start(self, own: Array) -> Array:
+        """Return the sum of `own` over each step and all that lead to it, shape (n_steps,)."""
+        return np.cumsum(own) if self.serial else self.gathered(own, np.ones(len(own)))
+
     def gathered(self, own: Array, passed: Array) -> Array:
         """Return x with x_i = own_i + Σ passed_c·x_c over the steps c that feed i, shape (n_steps,)."""
         if len(own) <= SHORT:
             return self._gathered_one_by_one(own, passed)
+        if self.serial:
+            return _forward(own, passed[:-1])
         found = own.astype(float)
         for sweep in self.sweeps:
             steps = sweep.steps
@@ -51,6 +69,8 @@ class Tree:
         """Return x with x_i = own_i + taken_i·x_f for the step f that i feeds, shape (n_steps,)."""
         if len(own) <= SHORT:
             return self._spread_one_by_one(own, taken)
+        if self.serial:
+            return _forward(own[::-1], taken[-2::-1])[::-1]
         found = own.astype(float)
         for sweep in reversed(self.sweeps):
             fed = self.feeds[sweep.ends]
@@ -94,9 +114,9 @@ def _forward(right: Array, factor: Array) -> Array:
     """Return x with x_0 = right_0 and x_j = right_j + factor_(j−1)·x_(j−1)."""
     from scipy.linalg.lapack import dtbtrs  # here, because short lines need no solver library
 
-    band = np.ones((2, len(right)))
-    band[1, :-1] = -factor
-    found, failed = dtbtrs(band, right, uplo="L", diag="U")
+    band = np.zeros((len(right), 2))  # the library reads it by columns: no copy that way
+    np.negative(factor, out=band[:-1, 1])
+    found, failed = dtbtrs(band.T, right, uplo="L", diag="U")
     assert failed == 0, "a unit diagonal cannot be singular"
     return np.asarray(found)
 
@@ -104,9 +124,7 @@ def _forward(right: Array, factor: Array) -> Array:
 def _cut(feeds: Indices) -> list[_Sweep]:
     """Cut the tree into paths: each step goes on with the largest of the subtrees that feed it."""
     steps = np.arange(len(feeds))
-    if np.array_equal(feeds[:-1], steps[1:]):
-        return [_Sweep(steps, np.ones(len(feeds) - 1), steps[-1:])]
-    cuts, end = _paths(feeds.tolist())
+    cuts, end = _paths(feeds)
     order = np.lexsort((steps, end, -cuts))
     first = np.flatnonzero(np.diff(cuts[order], prepend=-1))
     sweeps = []
@@ -116,20 +134,18 @@ def _cut(feeds: Indices) -> list[_Sweep]:
     return sweeps
 
 
-def _paths(feeds: list[int]) -> tuple[Indices, Indices]:
+def _paths(feeds: Indices) -> tuple[Indices, Indices]:
     """Return for every step how many cuts lie between it and the end, and the last step of its path."""
-    n = len(feeds)
-    size, largest = [1] * n, [-1] * n
+    n, fed = len(feeds), feeds.tolist()
+    size = [1] * n
     for i in range(n - 1):
-        fed = feeds[i]
-        size[fed] += size[i]
-        if largest[fed] < 0 or size[i] > size[largest[fed]]:
-            largest[fed] = i
-    cuts, end = [0] * n, list(range(n))
+        size[fed[i]] += size[i]
+    order = np.lexsort((-np.arange(n - 1), np.array(size)[:-1], feeds[:-1]))
+    goes_on = np.zeros(n, dtype=bool)
+    goes_on[order[np.append(np.diff(feeds[order]) != 0, True)]] = True
+    cut, cuts, end = (~goes_on).tolist(), [0] * n, list(range(n))
     for i in range(n - 2, -1, -1):
-        fed = feeds[i]
-        on_path = largest[fed] == i
-        cuts[i] = cuts[fed] + (not on_path)
-        if on_path:
-            end[i] = end[fed]
+        cuts[i] = cuts[fed[i]] + cut[i]
+        if not cut[i]:
+            end[i] = end[fed[i]]
     return np.array(cuts, dtype=np.int64), np.array(end, dtype=np.int64)

@@ -18,13 +18,16 @@ from allocator import laws
 from allocator.curves import Curves
 
 Array = NDArray[np.float64]
+Indices = NDArray[np.int64]
+BLOCK = 8192
+"""Ways that are worked on together: what one pass of the tails needs of them stays in the processor's cache."""
 ROOT_TWO_PI = float(np.sqrt(2.0 * np.pi))
 NEWTON_STEPS = 30
 ONE_STEP_LEFT = 1e-7
 """A step this small [σ] is the last: each one squares what is off."""
 LEAST_STEEP = 1e-12
 """Where a law's range starts just where its cost turns convex, it rises there by nothing but rounding [1/σ]."""
-SETTLED = 1e-11
+SETTLED = 1e-12
 """A level has settled when a step moves it by less than this [σ]; what is left is charged to the bound."""
 
 
@@ -48,31 +51,39 @@ class Market:
     z_low, z_high : shape (n_ways,) [σ]
     pieces : dict, optional
         Straight pieces (δ, cost) that stand for the law, by way; none for most.
+    ends : pair of arrays, shape (n_ways,) [defects per item], optional
+        δ at z_high and at z_low, where they are known.
     """
 
     def __init__(
-        self, curves: Curves, z_low: Array, z_high: Array, pieces: dict[int, tuple[Array, Array]] | None = None
+        self,
+        curves: Curves,
+        z_low: Array,
+        z_high: Array,
+        pieces: dict[int, tuple[Array, Array]] | None = None,
+        ends: tuple[Array, Array] | None = None,
     ) -> None:
         self.size, self.scale = len(z_low), curves.scale
         self.straight = np.zeros(self.size, dtype=bool)
         self.straight[list(pieces or ())] = True
         moves = (z_high > z_low) & ~self.straight
+        self.low, self.high = ends or (cv.intensity(curves, z_high), cv.intensity(curves, z_low))
+        still = np.flatnonzero(~moves & ~self.straight)
+        self.still_cost = np.zeros(self.size)
+        self.still_cost[still] = cv.smooth_cost(curves.take(still), z_low[still])
         self.decade = np.flatnonzero(moves & (curves.kind == cv.DECADE))
-        self.sloped = np.flatnonzero(moves & ((curves.kind == cv.POWER) | (curves.kind == cv.EXPONENTIAL)))
-        self.high = cv.intensity(curves, z_low)
-        self.low, wide = self.high.copy(), np.flatnonzero(z_high != z_low)
-        self.low[wide] = cv.intensity(curves.take(wide), z_high[wide])
-        still = ~moves & ~self.straight
-        self.still_cost = np.where(still, cv.smooth_cost(curves, z_low), 0.0)
+        self.sloped = _alike(curves, moves)
         self.decades = _Decades(curves.take(self.decade), self.low[self.decade], self.high[self.decade])
-        self.slopes = _Sloped(curves.take(self.sloped), z_low[self.sloped], z_high[self.sloped])
+        self.slopes = [_Sloped(curves.take(rows), z_low[rows], z_high[rows]) for rows in self.sloped]
         self.pieces = _Pieces(pieces or {})
-        self.low[self.pieces.rows], self.high[self.pieces.rows] = self.pieces.low, self.pieces.high
+        if len(self.pieces.rows):
+            self.low, self.high = self.low.copy(), self.high.copy()
+            self.low[self.pieces.rows], self.high[self.pieces.rows] = self.pieces.low, self.pieces.high
 
     @property
     def still(self) -> bool:
         """Whether no way has a level that moves smoothly."""
-        return len(self.decade) + len(self.sloped) == 0
+        return len(self.decade) == 0 and not self.sloped
 
     @property
     def smooth(self) -> bool:
@@ -80,22 +91,35 @@ class Market:
         return not self.straight.any()
 
     def answer(self, price: Array, rounds: int = NEWTON_STEPS) -> Answers:
-        """Return every way's answer to its own price π > 0 [currency/year per unit of δ], shape (n_ways,)."""
-        delta, cost = self.high.copy(), self.still_cost.copy()
-        slope, give = -price, np.zeros(self.size)
-        for rows, part in ((self.decade, self.decades), (self.sloped, self.slopes), (self.pieces.rows, self.pieces)):
-            if len(rows):
-                delta[rows], cost[rows], slope[rows], give[rows] = part.answer(price[rows], rounds)
-        return Answers(delta, cost, slope, give)
+        """Return every way's answer to its own price π > 0 [currency/year per unit of δ], shape (n_ways,).
+
+        Fewer rounds leave some levels short of it: `slope` tells the price that they do answer to.
+        """
+        answers = Answers(self.high.copy(), self.still_cost.copy(), -price, np.zeros(self.size))
+        if len(self.decade):
+            self.decades.answer(price, self.decade, answers)
+        for rows, part in zip(self.sloped, self.slopes, strict=True):
+            part.answer(price, rounds, rows, answers)
+        if len(self.pieces.rows):
+            self.pieces.answer(price, answers)
+        return answers
 
     def cost_at(self, delta: Array, curves: Curves) -> Array:
         """Return the law's cost at given intensities inside each way's range (slow: it inverts the tails)."""
         cost = self.still_cost.copy()
-        rows = np.concatenate([self.decade, self.sloped])
+        rows = np.concatenate([self.decade, *self.sloped])
         cost[rows] = cv.smooth_slopes(curves.take(rows), delta[rows])[0]
         if len(self.pieces.rows):
             cost[self.pieces.rows] = self.pieces.cost_at(delta[self.pieces.rows])
         return cost
+
+
+def _alike(curves: Curves, moves: NDArray[np.bool_]) -> list[Indices]:
+    """Return the moving ways whose cost is a function of the sigma level, those of one kind of pass together."""
+    kinds = np.where(moves, 4 * curves.kind + 2 * (curves.sides == 2) + curves.copied, -1)
+    wanted = [4 * kind + more for kind in (cv.POWER, cv.EXPONENTIAL) for more in range(4)]
+    found = (np.flatnonzero(kinds == kind) for kind in wanted)
+    return [rows for rows in found if len(rows)]
 
 
 class _Decades:
@@ -106,97 +130,112 @@ class _Decades:
         self.per_e_fold = curves.scale / laws.LOG_TEN
         self.log_start = cv.log_probability(curves, curves.start) if len(low) else np.zeros(0)
 
-    def answer(self, price: Array, rounds: int) -> tuple[Array, Array, Array, Array]:
-        del rounds
-        with np.errstate(divide="ignore", over="ignore"):
-            odds = self.per_e_fold / (self.n * np.maximum(price, 1e-300))
-        free = self.n * np.log1p(odds)
-        delta = np.clip(free, self.low, self.high)
-        bad, good = -np.expm1(-delta / self.n), np.exp(-delta / self.n)
-        cost = self.per_e_fold * (self.log_start - np.log(bad))
-        slope = -self.per_e_fold * good / (self.n * bad)
-        inside = (free > self.low) & (free < self.high)
-        with np.errstate(divide="ignore", invalid="ignore"):
-            give = np.where(inside, -self.n * bad / np.where(inside, slope, -1.0), 0.0)
-        return delta, cost, slope, np.where(np.isfinite(give), give, 0.0)
+    def answer(self, price: Array, rows: Indices, answers: Answers) -> None:
+        """Put the answers into their rows."""
+        for start in range(0, len(rows), BLOCK):
+            b = slice(start, start + BLOCK)
+            some = rows[b]
+            n, per_e_fold = self.n[b], self.per_e_fold[b]
+            with np.errstate(divide="ignore", over="ignore", invalid="ignore"):
+                free = n * np.log1p(per_e_fold / (n * np.maximum(price[some], 1e-300)))
+            delta = np.clip(free, self.low[b], self.high[b])
+            bad, good = -np.expm1(-delta / n), np.exp(-delta / n)
+            slope = -per_e_fold * good / (n * bad)
+            inside = (free > self.low[b]) & (free < self.high[b])
+            with np.errstate(divide="ignore", invalid="ignore"):
+                give = np.where(inside, -n * bad / np.where(inside, slope, -1.0), 0.0)
+            answers.delta[some], answers.slope[some] = delta, slope
+            answers.cost[some] = per_e_fold * (self.log_start[b] - np.log(bad))
+            answers.give[some] = np.where(np.isfinite(give), give, 0.0)
 
 
 class _Sloped:
-    """Power and exponential laws, whose cost is a function of the sigma level."""
+    """Power or exponential laws, whose cost is a function of the sigma level: of one kind, with as many limits.
+
+    What the last answer knows of every way is kept, so that a price nearby is one pass of the tails away. Ways go
+    through it in blocks that stay in the processor's cache.
+    """
 
     def __init__(self, curves: Curves, z_low: Array, z_high: Array) -> None:
         self.curves, self.z_low, self.z_high = curves, z_low, z_high
+        self.is_power = bool(curves.kind[0] == cv.POWER)
+        self.two, self.copied = bool(curves.sides[0] == 2), bool(curves.copied[0])
         self.z = 0.5 * (z_low + z_high)
-        self.is_power = curves.kind == cv.POWER
-        self.copied = bool(curves.copied.any())
-        self.two = np.flatnonzero(curves.sides == 2)
+        self.delta, self.rise, self.own, self.steep = (np.zeros(len(z_low)) for _ in range(4))
+        """δ, dδ/dz, ln of the price that this level answers, and how that rises in z, all at `z`."""
         a = curves.parameter
         with np.errstate(divide="ignore", invalid="ignore"):
-            self.log_lead = np.where(
-                self.is_power, np.log(a) - a * np.log(np.abs(curves.start)), np.log(a) - a * curves.start
-            )
-            self.log_lead += np.log(curves.scale)
+            lead = np.log(np.abs(curves.start)) if self.is_power else curves.start
+            self.log_lead = np.log(a) - a * lead + np.log(curves.scale)
+        for block in self._blocks():
+            self._look(block, self.z[block])
 
-    def answer(self, price: Array, rounds: int) -> tuple[Array, Array, Array, Array]:
-        z = self.z
-        log_price = np.log(np.maximum(price, 1e-300))
+    def answer(self, price: Array, rounds: int, rows: Indices, answers: Answers) -> None:
+        """Put the answers into their rows."""
+        for block in self._blocks():
+            some = rows[block]
+            self._settle(block, np.log(np.maximum(price[some], 1e-300)), rounds)
+            z, own = self.z[block], np.exp(self.own[block])
+            inside = (z > self.z_low[block]) & (z < self.z_high[block])
+            answers.delta[some], answers.cost[some], answers.slope[some] = self.delta[block], self.cost(block), -own
+            answers.give[some] = np.where(inside, -self.rise[block] / (own * self.steep[block]), 0.0)
+
+    def _blocks(self) -> list[slice]:
+        return [slice(start, start + BLOCK) for start in range(0, len(self.z), BLOCK)]
+
+    def _settle(self, block: slice, log_price: Array, rounds: int) -> None:
+        """Move a block to its answers by at most so many Newton steps."""
+        low, high = self.z_low[block], self.z_high[block]
         for _ in range(rounds):
-            delta, rise, bend = self.intensity(z)
-            log_slope, log_slope_rise = self.log_cost_slope(z)
-            off = log_slope - np.log(-rise) - log_price
-            steep = np.maximum(log_slope_rise - bend / rise, LEAST_STEEP)
-            moved = np.clip(z - off / steep, self.z_low, self.z_high)
-            step = float(np.max(np.abs(moved - z), initial=0.0))
+            z = self.z[block]
+            moved = np.clip(z - (self.own[block] - log_price) / self.steep[block], low, high)
+            step = float(np.max(np.abs(moved - z)))
             if step < SETTLED:
-                break  # What is known at z itself serves: nothing is left to gain that counts.
-            z = moved
+                return
+            self.z[block] = moved
+            self._look(block, moved)
             if step < ONE_STEP_LEFT:
-                delta, rise, bend = self.intensity(z)
-                log_slope, log_slope_rise = self.log_cost_slope(z)
-                break
-        else:
-            delta, rise, bend = self.intensity(z)
-            log_slope, log_slope_rise = self.log_cost_slope(z)
-        self.z = z
-        slope = np.exp(log_slope) / rise
-        inside = (z > self.z_low) & (z < self.z_high)
-        # C'' = −C'·(d ln C'(z)/dz − δ''/δ')/δ' … in z terms: dδ/dπ = −δ'/(π·d(off)/dz).
-        steep = np.maximum(log_slope_rise - bend / rise, LEAST_STEEP)
-        give = np.divide(-rise, np.maximum(price, 1e-300) * steep, out=np.zeros(len(z)), where=inside)
-        return delta, self.cost(z), slope, give
+                return
 
-    def cost(self, z: Array) -> Array:
-        a, start = self.curves.parameter, self.curves.start
-        with np.errstate(all="ignore"):
-            exponent = np.where(self.is_power, a * np.log(np.abs(z / start)), a * (z - start))
-        return self.curves.scale * np.expm1(exponent)
-
-    def log_cost_slope(self, z: Array) -> tuple[Array, Array]:
-        """Return ln of the cost's slope in z, and its own slope."""
-        a = self.curves.parameter
+    def _look(self, block: slice, z: Array) -> None:
+        """Note what is known at levels z: d ln(price)/dz = d ln C'(z)/dz − δ''/δ'."""
+        delta, rise, bend = self._intensity(block, z)
+        a = self.curves.parameter[block]
         with np.errstate(divide="ignore", invalid="ignore"):
-            value = self.log_lead + np.where(self.is_power, (a - 1.0) * np.log(np.abs(z)), a * z)
-            return value, np.where(self.is_power, (a - 1.0) / z, a)
+            log_slope, log_slope_rise = (a - 1.0) * np.log(np.abs(z)) if self.is_power else a * z, a
+            if self.is_power:
+                log_slope_rise = (a - 1.0) / z
+        self.delta[block], self.rise[block] = delta, rise
+        self.own[block] = self.log_lead[block] + log_slope - np.log(-rise)
+        self.steep[block] = np.maximum(log_slope_rise - bend, LEAST_STEEP)
 
-    def intensity(self, z: Array) -> tuple[Array, Array, Array]:
-        """Return δ, dδ/dz, d²δ/dz² by one pass of the tails (without logarithms: ranges end far above 1e-300)."""
-        if self.copied:
-            return cv.intensity_slopes(self.curves, z)
+    def cost(self, block: slice) -> Array:
+        """Return the law's cost of a block at its levels."""
+        z, a, start = self.z[block], self.curves.parameter[block], self.curves.start[block]
+        with np.errstate(all="ignore"):
+            exponent = a * np.log(np.abs(z / start)) if self.is_power else a * (z - start)
+        return self.curves.scale[block] * np.expm1(exponent)
+
+    def _intensity(self, block: slice, z: Array) -> tuple[Array, Array, Array]:
+        """Return δ, dδ/dz and δ''/δ' by one pass of the tails (without logarithms: ranges end far above 1e-300)."""
         c = self.curves
-        near = c.shift - z * (1.0 - c.k)
-        density = np.exp(-0.5 * near * near) / ROOT_TWO_PI
-        p, first = ndtr(near), -(1.0 - c.k) * density
-        second = -((1.0 - c.k) ** 2) * near * density
-        if len(self.two):
-            t = self.two
-            far = -(z[t] * (1.0 + c.k[t]) + c.shift[t])
-            density = np.exp(-0.5 * far * far) / ROOT_TWO_PI
-            p[t] += ndtr(far)
-            first[t] -= (1.0 + c.k[t]) * density
-            second[t] -= (1.0 + c.k[t]) ** 2 * far * density
-        n, good = c.opportunities, 1.0 - p
-        rise = first / good
-        return -n * np.log1p(-p), n * rise, n * (second / good + rise * rise)
+        if self.copied:
+            delta, rise, bend = cv.intensity_slopes(c.take(block), z)
+            return delta, rise, bend / rise
+        k, shift, n = c.k[block], c.shift[block], c.opportunities[block]
+        near = shift - z * (1.0 - k)
+        p, first, second = _tail(near, 1.0 - k)
+        if self.two:
+            far = _tail(-(z * (1.0 + k) + shift), 1.0 + k)
+            p, first, second = p + far[0], first + far[1], second + far[2]
+        rise = first / (1.0 - p)
+        return -n * np.log1p(-p), n * rise, second / first + rise
+
+
+def _tail(x: Array, factor: Array) -> tuple[Array, Array, Array]:
+    """Return Φ(x) for x falling by `factor` per σ, and its first and second derivative in the sigma level."""
+    first = np.exp(-0.5 * x * x) * factor / -ROOT_TWO_PI
+    return ndtr(x), first, first * x * factor
 
 
 class _Pieces:
@@ -212,13 +251,11 @@ class _Pieces:
         for i, (delta, cost) in enumerate(self.knots):
             self.delta[i, : len(delta)], self.cost[i, : len(cost)] = delta, cost
 
-    def answer(self, price: Array, rounds: int) -> tuple[Array, Array, Array, Array]:
-        del rounds
-        best = np.nanargmin(self.cost + price[:, None] * self.delta, axis=1)
+    def answer(self, price: Array, answers: Answers) -> None:
+        """Put the answers into their rows; a corner is exact: nothing is left to gain, as if its slope met the price."""
+        best = np.nanargmin(self.cost + price[self.rows, None] * self.delta, axis=1)
         at = np.arange(len(best)), best
-        still = np.zeros(len(best))
-        # A corner is the exact answer: nothing is left to gain, as if its slope met the price.
-        return self.delta[at], self.cost[at], -price, still
+        answers.delta[self.rows], answers.cost[self.rows] = self.delta[at], self.cost[at]
 
     def cost_at(self, delta: Array) -> Array:
         return np.array([np.interp(d, *line) for d, line in zip(delta, self.knots, strict=True)])

@@ -251,7 +251,7 @@ def _free(budget: float, fixed: float) -> float:
 def _first_price(market: Market, duty: Duty, t: int) -> float:
     """Return the price at which a typical step would spend a typical share of the budget."""
     _, fixed, budget = duty.loads[t]
-    typical = float(np.sum(market.decades.per_e_fold)) + float(np.sum(market.slopes.curves.scale))
+    typical = float(np.sum(market.scale))
     return max(typical, 1e-9) / _free(budget, fixed)
 
 
