@@ -194,6 +194,13 @@ def test_two_thousand_steps_of_six_ways_close_the_gap() -> None:
         assert solved.gap <= MIXED_GAP
 
 
+@pytest.mark.parametrize("seed", [1, 4])
+def test_low_yields_with_six_ways_close_the_gap_branch_by_branch(seed: int) -> None:
+    """Scrap is far from straight between their choices: one tangent of it for all branches left up to 1.5e-4."""
+    solved = solve(problem_of(draw(Shape(200, "mixed", "low"), seed)))
+    assert solved.gap <= MIXED_GAP
+
+
 def test_the_proof_names_the_method_that_answered() -> None:
     machine = {"name": "machine", "per_year": 900.0, "capability": {"defect_rate": 1e-4}}
     law = {"law": "decade", "per_year": 500.0}

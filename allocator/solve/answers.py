@@ -252,7 +252,7 @@ class _Pieces:
             self.delta[i, : len(delta)], self.cost[i, : len(cost)] = delta, cost
 
     def answer(self, price: Array, answers: Answers) -> None:
-        """Put the answers into their rows; a corner is exact: nothing is left to gain, as if its slope met the price."""
+        """Put the answers into their rows; a corner is exact, as if its slope met the price."""
         best = np.nanargmin(self.cost + price[self.rows, None] * self.delta, axis=1)
         at = np.arange(len(best)), best
         answers.delta[self.rows], answers.cost[self.rows] = self.delta[at], self.cost[at]

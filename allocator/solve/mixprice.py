@@ -20,6 +20,7 @@ from allocator.solve.fixed import FixedAnswer, solve_fixed
 from allocator.solve.price import Near, build_duty
 from allocator.solve.reduce import gates_given, gates_of_first
 
+Array = NDArray[np.float64]
 PASSES = 12
 NEARLY = 1e-3
 """Share of the money by which the tangent of scrap may miss it at the first ways that are offered."""
@@ -198,7 +199,7 @@ class _Search:
     def branch(self, gap: float, seconds: float) -> None:
         """Branch over the ways left, without the steps that have one way only, which does not move."""
         self.shrink()
-        tangent, menu = tangent_at(self.duty, self.here), self.menu
+        menu = self.menu
         weight, used, budget = self.duty.loads[0]
         moves = self.problem.options.ways.moves[self.rows]
         settled = (np.bincount(menu.step, minlength=len(menu.first)) == 1) & ~moves[menu.first]
@@ -206,7 +207,13 @@ class _Search:
             return
         open_steps, rows, alone = np.flatnonzero(~settled), np.flatnonzero(~settled[menu.step]), menu.first[settled]
         delta = menu.market.high[alone]
-        cost = menu.fixed[alone] + menu.market.still_cost[alone] + tangent.slope[settled] * delta
+        paid = float(np.sum(menu.fixed[alone] + menu.market.still_cost[alone]))
+
+        def touch(here: Array) -> Tangent:
+            every = np.empty(len(settled))
+            every[settled], every[open_steps] = delta, here
+            whole = tangent_at(self.duty, every)
+            return Tangent(whole.slope[open_steps], whole.rest + paid + float(whole.slope[settled] @ delta))
 
         def offer(chosen: Index) -> float:
             every = menu.first.copy()
@@ -215,7 +222,7 @@ class _Search:
 
         bound = branch(
             _menu(self.problem, self.rows[rows]), weight[open_steps], budget - used - float(weight[settled] @ delta),
-            Tangent(tangent.slope[open_steps], tangent.rest + float(np.sum(cost))), self.price, offer, gap, seconds,
+            touch, self.here[open_steps], self.price, offer, gap, seconds,
         )  # fmt: skip
         self.bound = max(self.bound, min(bound, self.value))
 
