@@ -13,8 +13,8 @@ from allocator import curves as cv
 from allocator.choice import evaluate
 from allocator.flow import GATE_FIELDS, Gates
 from allocator.problem import CAPITAL, Problem
+from allocator.solve.duty import build_duty
 from allocator.solve.fixed import solve_fixed
-from allocator.solve.price import build_duty
 from allocator.solve.road import Solved, solve
 from allocator.variants import LAW, PURCHASE, Thing
 from allocator.ways import Ways

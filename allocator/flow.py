@@ -76,7 +76,7 @@ class Gates:
     rework_cost: Array
     per_item: Array
 
-    @property
+    @cached_property
     def scrap_of_good(self) -> Array:
         """−ln(1 − r·lost), the scrap intensity of false rejects."""
         return -np.log1p(-self.rejects * self.lost)
@@ -215,10 +215,12 @@ def gradient(line: Line, gates: Gates, per_found: Array, per_escape: float) -> A
     missed = 1.0 - gates.finds
     if not missed.any():
         return gates.finds * per_found
-    fed = line.feeds[:-1]
-    found_next, missed_next = gates.earlier[fed] * per_found[fed], 1.0 - gates.earlier[fed]
-    at_once, passed_on = line.per_unit[:-1] * found_next, line.per_unit[:-1] * missed_next
-    per_hidden = line.tree.spread(np.append(at_once, per_escape), np.append(passed_on, 0.0))
+    kept = 1.0 - gates.earlier
+    at_gate = gates.earlier * per_found  # what a defect that came in is worth there, at once; at the end it escapes
+    at_gate[-1] += kept[-1] * per_escape
+    per_inherited = line.tree.spread(at_gate, line.per_unit * kept)
+    per_hidden = line.per_unit * per_inherited[line.feeds]
+    per_hidden[-1] = per_escape
     return gates.finds * per_found + missed * per_hidden
 
 

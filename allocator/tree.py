@@ -26,8 +26,10 @@ class _Sweep:
 
     steps: Indices
     joined: Array
-    ends: Indices
-    """The steps that feed another path, or are the last of the line."""
+    feeding: Indices
+    """The steps that end a path here and feed another one,"""
+    fed: Indices
+    """and the steps that these feed."""
 
 
 @dataclass(frozen=True)
@@ -62,7 +64,7 @@ class Tree:
         for sweep in self.sweeps:
             steps = sweep.steps
             found[steps] = _forward(found[steps], sweep.joined * passed[steps[:-1]])
-            self.add_to_fed(found, sweep.ends, passed[sweep.ends] * found[sweep.ends])
+            np.add.at(found, sweep.fed, passed[sweep.feeding] * found[sweep.feeding])
         return found
 
     def spread(self, own: Array, taken: Array) -> Array:
@@ -73,22 +75,14 @@ class Tree:
             return _forward(own[::-1], taken[-2::-1])[::-1]
         found = own.astype(float)
         for sweep in reversed(self.sweeps):
-            fed = self.feeds[sweep.ends]
-            later = np.flatnonzero(fed >= 0)
-            found[sweep.ends[later]] += taken[sweep.ends[later]] * found[fed[later]]
+            found[sweep.feeding] += taken[sweep.feeding] * found[sweep.fed]
             steps = sweep.steps
-            found[steps] = _forward(found[steps[::-1]], (sweep.joined * taken[steps[:-1]])[::-1])[::-1]
+            found[steps[::-1]] = _forward(found[steps[::-1]], (sweep.joined * taken[steps[:-1]])[::-1])
         return found
 
     def inflow(self, passed: Array) -> Array:
         """Return the sum of `passed` over the steps that feed each step, shape (n_steps,)."""
         return np.asarray(np.bincount(self.feeds[:-1], passed[:-1], minlength=len(passed)))
-
-    def add_to_fed(self, values: Array, steps: Indices, amounts: Array) -> None:
-        """Add amounts of some steps to the values of the steps that they feed."""
-        fed = self.feeds[steps]
-        later = np.flatnonzero(fed >= 0)
-        np.add.at(values, fed[later], amounts[later])
 
     @property
     def sweeps(self) -> list[_Sweep]:
@@ -114,8 +108,9 @@ def _forward(right: Array, factor: Array) -> Array:
     """Return x with x_0 = right_0 and x_j = right_j + factor_(j−1)·x_(j−1)."""
     from scipy.linalg.lapack import dtbtrs  # here, because short lines need no solver library
 
-    band = np.zeros((len(right), 2))  # the library reads it by columns: no copy that way
+    band = np.empty((len(right), 2))  # the library reads it by columns: no copy that way
     np.negative(factor, out=band[:-1, 1])
+    band[-1, 1] = 0.0
     found, failed = dtbtrs(band.T, right, uplo="L", diag="U")
     assert failed == 0, "a unit diagonal cannot be singular"
     return np.asarray(found)
@@ -130,7 +125,9 @@ def _cut(feeds: Indices) -> list[_Sweep]:
     sweeps = []
     for members in np.split(order, first[1:]):
         goes_on = end[members[1:]] == end[members[:-1]]
-        sweeps.append(_Sweep(members, goes_on.astype(float), members[np.append(~goes_on, True)]))
+        ends = members[np.append(~goes_on, True)]
+        feeding = ends[feeds[ends] >= 0]
+        sweeps.append(_Sweep(members, goes_on.astype(float), feeding, feeds[feeding]))
     return sweeps
 
 

@@ -30,6 +30,9 @@ LEAST_STEEP = 1e-12
 SETTLED = 1e-12
 """A level has settled when a step moves it by less than this [σ]; what is left is charged to the bound."""
 
+NEXT_TO = 1e-8
+"""Share of δ by which it may lie beside an answer for a straight line to tell its level to the last digits."""
+
 
 @dataclass
 class Answers:
@@ -63,7 +66,7 @@ class Market:
         pieces: dict[int, tuple[Array, Array]] | None = None,
         ends: tuple[Array, Array] | None = None,
     ) -> None:
-        self.size, self.scale = len(z_low), curves.scale
+        self.size, self.scale, self._made_of = len(z_low), curves.scale, (curves, z_low, z_high)
         self.straight = np.zeros(self.size, dtype=bool)
         self.straight[list(pieces or ())] = True
         moves = (z_high > z_low) & ~self.straight
@@ -79,6 +82,11 @@ class Market:
         if len(self.pieces.rows):
             self.low, self.high = self.low.copy(), self.high.copy()
             self.low[self.pieces.rows], self.high[self.pieces.rows] = self.pieces.low, self.pieces.high
+
+    def take(self, rows: slice) -> Market:
+        """Return some of the ways, all of them smooth, as a market of their own."""
+        curves, z_low, z_high = self._made_of
+        return Market(curves.take(rows), z_low[rows], z_high[rows], None, (self.low[rows], self.high[rows]))
 
     @property
     def still(self) -> bool:
@@ -103,6 +111,13 @@ class Market:
         if len(self.pieces.rows):
             self.pieces.answer(price, answers)
         return answers
+
+    def levels(self, delta: Array) -> Array:
+        """Return the sigma levels at intensities next to the last answers [σ], NaN where they are not known at once."""
+        z = np.full(self.size, np.nan)
+        for rows, part in zip(self.sloped, self.slopes, strict=True):
+            z[rows] = part.levels(delta[rows])
+        return z
 
     def cost_at(self, delta: Array, curves: Curves) -> Array:
         """Return the law's cost at given intensities inside each way's range (slow: it inverts the tails)."""
@@ -179,6 +194,11 @@ class _Sloped:
             inside = (z > self.z_low[block]) & (z < self.z_high[block])
             answers.delta[some], answers.cost[some], answers.slope[some] = self.delta[block], self.cost(block), -own
             answers.give[some] = np.where(inside, -self.rise[block] / (own * self.steep[block]), 0.0)
+
+    def levels(self, delta: Array) -> Array:
+        """Return the levels at δ by their slope at the last answers, NaN where that is too far away."""
+        move = delta - self.delta
+        return np.where(np.abs(move) <= NEXT_TO * self.delta, self.z + move / self.rise, np.nan)
 
     def _blocks(self) -> list[slice]:
         return [slice(start, start + BLOCK) for start in range(0, len(self.z), BLOCK)]

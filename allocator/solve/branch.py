@@ -16,7 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from allocator.solve.choose import Index, Menu, Priced, balance_menu
-from allocator.solve.price import Duty
+from allocator.solve.duty import Duty
 
 Array = NDArray[np.float64]
 Offer = Callable[[Index], float]

@@ -14,8 +14,9 @@ from allocator.flow import GATE_FIELDS, Gates, inspection_cost, loads, run
 from allocator.problem import CAPITAL, COST, Problem, within
 from allocator.scenario.model import YIELD_NAMES
 from allocator.solve.answers import Market
+from allocator.solve.duty import build_duty
 from allocator.solve.interior import GAP, Point, minimise
-from allocator.solve.price import Near, build_duty, clear
+from allocator.solve.price import Near, clear
 from allocator.solve.program import Program, build_program
 
 Array = NDArray[np.float64]
@@ -127,8 +128,11 @@ def _by_price(
         outcome = evaluate(line, problem.options, Choice(rows, ways.z_low[rows]))
         return FixedAnswer(outcome, outcome.money.total, None, STILL) if keeps_limits(problem, outcome) else None
     gates = Gates(*(getattr(ways.gates, name)[rows] for name in GATE_FIELDS))
-    curves = ways.curves.take(rows)
-    market = Market(curves, ways.z_low[rows], ways.z_high[rows], ways.lines.take(rows).pieces)
+    only = len(rows) == len(ways)  # one way at every step: the table as it is
+    curves = ways.curves if only else ways.curves.take(rows)
+    z_low, z_high = ways.z_low[rows], ways.z_high[rows]
+    ends = ways.delta_low[rows], ways.delta_high[rows]
+    market = Market(curves, z_low, z_high, ways.lines.take(rows).pieces, ends)
     aside = _money_aside(problem, rows, gates)
     duty = build_duty(line, gates, problem.budgets)
     cleared = clear(market, duty, curves, GAP, near, np.inf if hopeless is None else hopeless - aside)
@@ -138,10 +142,10 @@ def _by_price(
     given_up = hopeless is not None and cleared.bound + aside > hopeless
     if cleared.gap > 10.0 * GAP and not many and not given_up:
         return None
-    z = ways.z_low[rows].copy()
-    z[moving] = np.clip(
-        cv.sigma(curves.take(moving), cleared.delta[moving]), ways.z_low[rows[moving]], ways.z_high[rows[moving]]
-    )
+    known = market.levels(cleared.delta)
+    z = np.where(np.isnan(known), z_low, np.clip(known, z_low, z_high))
+    far = moving[np.isnan(known[moving])]
+    z[far] = np.clip(cv.sigma(curves.take(far), cleared.delta[far]), z_low[far], z_high[far])
     outcome = evaluate(line, problem.options, Choice(rows, z))
     if not keeps_limits(problem, outcome):
         return None

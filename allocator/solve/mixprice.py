@@ -16,8 +16,9 @@ from allocator.scenario.model import YIELD_NAMES
 from allocator.solve.answers import Market
 from allocator.solve.branch import Tangent, branch, tangent_at
 from allocator.solve.choose import Index, Menu, Priced, balance_menu, fill_budget, first_price, price_menu
+from allocator.solve.duty import build_duty
 from allocator.solve.fixed import FixedAnswer, solve_fixed
-from allocator.solve.price import Near, build_duty
+from allocator.solve.price import Near
 from allocator.solve.reduce import gates_given, gates_of_first
 
 Array = NDArray[np.float64]
@@ -249,7 +250,8 @@ def _menu(problem: Problem, rows: Index) -> Menu:
     curves, lines = (
         (ways.curves, ways.lines) if len(rows) == len(ways) else (ways.curves.take(rows), ways.lines.take(rows))
     )
-    market = Market(curves, ways.z_low[rows], ways.z_high[rows], lines.pieces)
+    ends = ways.delta_low[rows], ways.delta_high[rows]
+    market = Market(curves, ways.z_low[rows], ways.z_high[rows], lines.pieces, ends)
     new = np.diff(step, prepend=-1) > 0
     return Menu(market, np.flatnonzero(new), np.cumsum(new) - 1, ways.fixed_cost[rows] + per_item)
 

@@ -7,15 +7,15 @@ itself; the answers give a lower bound (separable Lagrangian), the exact cost of
 from __future__ import annotations
 
 import itertools
-from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from allocator.curves import Curves
-from allocator.flow import OVERFLOW, Gates, Line, from_start, gradient, run
 from allocator.solve.answers import Answers, Market
+from allocator.solve.approach import approach
+from allocator.solve.duty import Duty
 
 Array = NDArray[np.float64]
 PASSES = 80
@@ -24,40 +24,10 @@ STALLED = 3
 """Passes without any gain after which the road gives up (another method takes over)."""
 BUDGET_MET = 1e-13
 """A budget is balanced when the load is within this share of it."""
-
-
-@dataclass(frozen=True)
-class Duty:
-    """What couples the steps, all linear in δ but the scrap; arrays of shape (n_steps,).
-
-    Parameters
-    ----------
-    line, gates
-    loads : list of (weight, fixed, budget)
-        Σ weight·δ + fixed ≤ budget, for every yield with a target.
-    names : tuple
-        Of the loads.
-    """
-
-    line: Line
-    gates: Gates
-    loads: list[tuple[Array, float, float]]
-    names: tuple[str, ...] = ()
-
-    def money(self, delta: Array) -> tuple[float, Array]:
-        """Return scrap, rework and escapes [currency/year] at δ, and their slope in δ, shape (n_steps,)."""
-        line, gates = self.line, self.gates
-        flow = run(line, delta, gates)
-        weight = line.shipped * line.per_finished * line.net_cost
-        rework = line.shipped * line.per_finished * gates.rework_cost * gates.reworked
-        with np.errstate(over="ignore"):
-            thrown = weight * np.exp(np.minimum(flow.exponent, OVERFLOW))
-        value = (
-            float(np.sum(thrown) - np.sum(weight) + rework @ flow.found)
-            + line.shipped * line.escape_cost * flow.escapes
-        )
-        per_found = (1.0 - gates.reworked) * from_start(line, thrown) + rework
-        return value, gradient(line, gates, per_found, line.shipped * line.escape_cost)
+NEARLY_MET = 1e-10
+"""The same where answers change smoothly with the price: what is left is filled by their slopes."""
+SAMPLE = 1_000
+"""Steps of a long line whose prices tell where to start."""
 
 
 @dataclass
@@ -83,17 +53,6 @@ class Near:
     prices: dict[str, float]
 
 
-def build_duty(line: Line, gates: Gates, budgets: dict[str, float]) -> Duty:
-    """Return the couplings of a line whose gates are fixed."""
-    q, n = line.per_finished, line.n_steps
-    weights: dict[str, Callable[[], tuple[Array, float]]] = {
-        "rolled_yield": lambda: (q, 0.0),
-        "final_yield": lambda: (gradient(line, gates, q * (1.0 - gates.reworked), 1.0), float(q @ gates.scrap_of_good)),
-        "shipped_yield": lambda: (gradient(line, gates, np.zeros(n), 1.0), 0.0),
-    }
-    return Duty(line, gates, [(*weights[name](), budget) for name, budget in budgets.items()], tuple(budgets))
-
-
 def clear(
     market: Market, duty: Duty, curves: Curves, gap: float, near: Near | None = None, hopeless: float = np.inf
 ) -> Cleared | None:
@@ -115,18 +74,14 @@ def clear(
     """
     if any(float(w @ market.low) + fixed > budget * (1.0 + 1e-12) + 4e-16 for w, fixed, budget in duty.loads):
         return None
-    price, start = np.full(len(duty.loads), np.nan), market.high
-    if near is not None:
-        price, start = np.array([near.prices.get(name, np.nan) for name in duty.names]), near.intensity
     stalled = 0
-    here = _inside(market.low, np.clip(start, market.low, market.high), duty)
-    money, slope = duty.money(here)
+    here, money, slope, price = _start(market, duty, near)
     best, best_total, best_bound = here, np.inf, -np.inf
     history: list[tuple[float, float]] = []
     for passes in range(1, PASSES + 1):  # noqa: B007
         answers, price, met = balance(market, duty, slope, price)
         best_bound = max(best_bound, _bound(market, duty, answers, money, slope, here, price))
-        there = _inside(market.low, met.delta, duty)
+        there = _inside(market.low, _filled(market, duty, met, price), duty)
         cost = met.cost if there is met.delta else _moved_cost(met, there, market, curves)
         there_money, there_slope = duty.money(there)
         total = there_money + float(np.sum(cost))
@@ -143,6 +98,36 @@ def clear(
         if best_total - best_bound <= gap * max(abs(best_total), 1.0) or best_bound > hopeless:
             break
     return Cleared(best, best_total, best_bound, price, passes)
+
+
+def _start(market: Market, duty: Duty, near: Near | None) -> tuple[Array, float, Array, Array]:
+    """Return intensities, scrap's tangent there and prices to start from; as near the optimum as few passes lead."""
+    price, start = np.full(len(duty.loads), np.nan), market.high
+    if near is not None:
+        price, start = np.array([near.prices.get(name, np.nan) for name in duty.names]), near.intensity
+    here = _inside(market.low, np.clip(start, market.low, market.high), duty)
+    money, slope = duty.money(here)
+    if market.smooth and not market.still and np.isfinite(money):
+        guess = price if np.isfinite(price).all() else _prices_of_some(market, duty, slope)
+        here, price = approach(market, duty, slope, here, guess)
+        here = _inside(market.low, here, duty)
+        money, slope = duty.money(here)
+    return here, money, slope, price
+
+
+def _prices_of_some(market: Market, duty: Duty, slope: Array) -> Array:
+    """Return the prices that balance the budgets of a sample of the steps, the tangent of scrap held."""
+    every = slice(None, None, max(market.size // SAMPLE, 1))
+    some = market if every.step == 1 else market.take(every)
+    loads = [
+        (
+            weight[every],
+            0.0,
+            (budget - fixed) * float(weight[every] @ some.high) / max(float(weight @ market.high), 1e-300),
+        )
+        for weight, fixed, budget in duty.loads
+    ]
+    return balance(some, replace(duty, loads=loads), slope[every], np.full(len(loads), np.nan))[1]
 
 
 def balance(market: Market, duty: Duty, slope: Array, start: Array) -> tuple[Answers, Array, Answers]:
@@ -189,7 +174,7 @@ def _balance_one(
     sides: dict[bool, Answers] = {}
     for _ in range(PRICE_STEPS if market.smooth else 2 * PRICE_STEPS):
         over = float(_excess(duty, answers)[t])
-        if abs(over) <= BUDGET_MET:
+        if abs(over) <= (NEARLY_MET if market.smooth else BUDGET_MET):
             return answers, prices, answers
         sides[over > 0.0] = answers
         low, high = (prices[t], high) if over > 0.0 else (low, prices[t])
@@ -283,11 +268,24 @@ def _inside(low: Array, delta: Array, duty: Duty) -> Array:
     return delta if share == 0.0 else delta - share * (delta - low)
 
 
+def _filled(market: Market, duty: Duty, answers: Answers, prices: Array) -> Array:
+    """Return the answers' δ, what little is left of the priced budgets used up or given back along their slopes."""
+    priced = [load for load, price in zip(duty.loads, prices.tolist(), strict=True) if price > 0.0]
+    if not priced or not market.smooth:
+        return answers.delta
+    weights = np.array([weight for weight, _, _ in priced])
+    left = np.array([budget - fixed for _, fixed, budget in priced]) - weights @ answers.delta
+    replies = weights * answers.give
+    share: Array = np.linalg.lstsq(replies @ weights.T, left)[0]
+    return np.clip(answers.delta + share @ replies, market.low, market.high)
+
+
 def _moved_cost(answers: Answers, delta: Array, market: Market, curves: Curves) -> Array:
     """Return the law cost at δ near the answers: to second order where it moved by rounding, exactly otherwise."""
     move = delta - answers.delta
-    if market.smooth and np.max(np.abs(move) / np.maximum(delta, 1e-300), initial=0.0) < 1e-9:
-        return answers.cost + answers.slope * move
+    if market.smooth and np.max(np.abs(move) / np.maximum(delta, 1e-300), initial=0.0) < 1e-7:
+        bend = np.divide(move, answers.give, out=np.zeros(len(move)), where=answers.give > 0.0)
+        return answers.cost + (answers.slope + 0.5 * bend) * move
     return market.cost_at(delta, curves)
 
 

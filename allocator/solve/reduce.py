@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 from allocator import curves as cv
 from allocator.flow import GATE_FIELDS, Gates
 from allocator.problem import Problem
-from allocator.solve.price import build_duty
+from allocator.solve.duty import build_duty
 from allocator.ways import Ways
 
 SLACK = 1e-9

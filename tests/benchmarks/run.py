@@ -19,7 +19,7 @@ from allocator import curves as cv
 from allocator.choice import Choice, evaluate, keeps_limits
 from allocator.flow import GATE_FIELDS, Gates
 from allocator.problem import Problem
-from allocator.solve.price import build_duty
+from allocator.solve.duty import build_duty
 from allocator.solve.reduce import first_ways
 from allocator.solve.road import Solved, solve
 from tests.benchmarks import peers
