@@ -26,6 +26,8 @@ BUDGET_MET = 1e-13
 """A budget is balanced when the load is within this share of it."""
 NEARLY_MET = 1e-10
 """The same where answers change smoothly with the price: what is left is filled by their slopes."""
+ROUGHLY_MET = 1e-2
+"""The same where the prices are only a start."""
 SAMPLE = 1_000
 """Steps of a long line whose prices tell where to start."""
 
@@ -119,36 +121,44 @@ def _prices_of_some(market: Market, duty: Duty, slope: Array) -> Array:
     """Return the prices that balance the budgets of a sample of the steps, the tangent of scrap held."""
     every = slice(None, None, max(market.size // SAMPLE, 1))
     some = market if every.step == 1 else market.take(every)
-    loads = [
-        (
-            weight[every],
-            0.0,
-            (budget - fixed) * float(weight[every] @ some.high) / max(float(weight @ market.high), 1e-300),
-        )
-        for weight, fixed, budget in duty.loads
-    ]
-    return balance(some, replace(duty, loads=loads), slope[every], np.full(len(loads), np.nan))[1]
+    loads = []
+    for weight, fixed, budget in duty.loads:
+        share = float(weight[every] @ some.high) / max(float(weight @ market.high), 1e-300)
+        loads.append((weight[every], 0.0, share * (budget - fixed)))
+    return balance(some, replace(duty, loads=loads), slope[every], np.full(len(loads), np.nan), ROUGHLY_MET)[1]
 
 
-def balance(market: Market, duty: Duty, slope: Array, start: Array) -> tuple[Answers, Array, Answers]:
+def balance(
+    market: Market, duty: Duty, slope: Array, start: Array, met: float = NEARLY_MET
+) -> tuple[Answers, Array, Answers]:
     """Return the answers at the prices that balance the budgets (0 where slack), the prices, and a point meeting all.
 
     Scrap's slope is held fixed. One price is tried first, each budget in turn; where that breaks another budget, two
-    prices together. `start` holds the prices of a neighbouring question, NaN where there is none.
+    prices together. `start` holds the prices of a neighbouring question, NaN where there is none; a budget counts as
+    met within a share `met` of it.
     """
     count = len(duty.loads)
+    priced = np.flatnonzero(start > 0.0).tolist()
+    if len(priced) == 1:
+        likely = _balance_one(market, duty, slope, priced[0], np.zeros(count), start[priced[0]], met)
+        if _others_kept(duty, likely[2], tuple(priced)):
+            return likely
+    if len(priced) == 2:
+        pair = _balance_two(market, duty, slope, priced[0], priced[1], start, met)
+        if pair is not None and _others_kept(duty, pair[2], tuple(priced)):
+            return pair
     answers = market.answer(_total_price(duty, slope, np.zeros(count)))
     broken = np.flatnonzero(_excess(duty, answers) > 0.0).tolist()
     if not broken:
         return answers, np.zeros(count), answers
     found: tuple[Answers, Array, Answers] = answers, np.zeros(count), answers
     for t in broken:
-        found = _balance_one(market, duty, slope, t, np.zeros(count), start[t])
+        found = _balance_one(market, duty, slope, t, np.zeros(count), start[t], met)
         if _others_kept(duty, found[2], (t,)):
             return found
     for t, u in itertools.combinations(range(count), 2):
         if t in broken or u in broken:
-            both = _balance_two(market, duty, slope, t, u, start)
+            both = _balance_two(market, duty, slope, t, u, start, met)
             if both is not None and _others_kept(duty, both[2], (t, u)):
                 return both
     return found
@@ -160,7 +170,7 @@ def _others_kept(duty: Duty, answers: Answers, settled: tuple[int, ...]) -> bool
 
 
 def _balance_one(
-    market: Market, duty: Duty, slope: Array, t: int, prices: Array, start: float
+    market: Market, duty: Duty, slope: Array, t: int, prices: Array, start: float, met: float
 ) -> tuple[Answers, Array, Answers]:
     """Balance one budget by its price, the other prices held.
 
@@ -174,7 +184,7 @@ def _balance_one(
     sides: dict[bool, Answers] = {}
     for _ in range(PRICE_STEPS if market.smooth else 2 * PRICE_STEPS):
         over = float(_excess(duty, answers)[t])
-        if abs(over) <= (NEARLY_MET if market.smooth else BUDGET_MET):
+        if abs(over) <= (met if market.smooth else BUDGET_MET):
             return answers, prices, answers
         sides[over > 0.0] = answers
         low, high = (prices[t], high) if over > 0.0 else (low, prices[t])
@@ -189,7 +199,7 @@ def _balance_one(
 
 
 def _balance_two(
-    market: Market, duty: Duty, slope: Array, t: int, u: int, start: Array
+    market: Market, duty: Duty, slope: Array, t: int, u: int, start: Array, met: float
 ) -> tuple[Answers, Array, Answers] | None:
     """Balance two budgets: the second's price is bracketed while the first follows it; None when they never meet."""
     prices = np.zeros(len(duty.loads))
@@ -197,11 +207,11 @@ def _balance_two(
     first, low, high = float(start[t]), 0.0, np.inf
     for _ in range(PRICE_STEPS):
         prices[u] = second
-        answers, settled, met = _balance_one(market, duty, slope, t, prices, first)
+        answers, settled, point = _balance_one(market, duty, slope, t, prices, first, met)
         first = float(settled[t])
-        over = float(_excess(duty, met)[u])
-        if abs(over) <= 1e-12 or (high - low) <= 1e-14 * high:
-            return answers, settled, met
+        over = float(_excess(duty, point)[u])
+        if abs(over) <= (met if market.smooth else 1e-12) or (high - low) <= 1e-14 * high:
+            return answers, settled, point
         low, high = (second, high) if over > 0.0 else (low, second)
         second = _next_price(duty, answers, u, second, over, low, high)
         if second < 1e-12:
