@@ -22,7 +22,7 @@ FIRST_ROUNDS = 3
 """Newton steps of the first turn, whose levels start half way up their ranges."""
 REMEMBERED = 3
 """Turns before the last one that are followed."""
-CLOSE = 1e-13
+CLOSE = 1e-11
 """Share of the money at stake that the turns may leave open."""
 
 
@@ -51,17 +51,16 @@ def approach(market: Market, duty: Duty, slope: Array, here: Array, prices: Arra
     budgets = np.array([budget - fixed for _, fixed, budget in duty.loads])
     turns: list[_Turn] = []
     for number in range(TURNS):
-        asked = slope + prices @ weights
-        answers = market.answer(asked, 1 if number else FIRST_ROUNDS)
+        answers = market.answer(slope + prices @ weights, 1 if number else FIRST_ROUNDS)
         money, truer = duty.money(answers.delta)
         balanced = _balancing(answers, truer, weights, budgets)
         if balanced is None or not np.isfinite(money):
             break
-        here, wanted = answers.delta, truer + balanced @ weights
-        if answers.give @ (wanted + answers.slope) ** 2 <= CLOSE * (abs(money) + float(balanced @ budgets)):
+        here, miss = answers.delta, truer + balanced @ weights + answers.slope
+        if answers.give @ miss**2 <= CLOSE * (abs(money) + float(balanced @ budgets)):
             return here, balanced
-        turns = [_Turn(truer, balanced, wanted - asked), *turns[:REMEMBERED]]
-        slope, prices = _followed(turns if number > 1 else turns[:1], answers.give)
+        turns = [_Turn(truer, balanced, miss), *turns[:REMEMBERED]]
+        slope, prices = _followed(turns, answers.give)
     return here, prices
 
 
