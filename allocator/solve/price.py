@@ -110,14 +110,13 @@ def _start(market: Market, duty: Duty, near: Near | None) -> tuple[Array, float,
     here = _inside(market.low, np.clip(start, market.low, market.high), duty)
     money, slope = duty.money(here)
     if market.smooth and not market.still and np.isfinite(money):
-        guess = price if np.isfinite(price).all() else _prices_of_some(market, duty, slope)
-        here, price = approach(market, duty, slope, here, guess)
+        here, price = approach(market, duty, slope, here, _prices_of_some(market, duty, slope, price))
         here = _inside(market.low, here, duty)
         money, slope = duty.money(here)
     return here, money, slope, price
 
 
-def _prices_of_some(market: Market, duty: Duty, slope: Array) -> Array:
+def _prices_of_some(market: Market, duty: Duty, slope: Array, start: Array) -> Array:
     """Return the prices that balance the budgets of a sample of the steps, the tangent of scrap held."""
     every = slice(None, None, max(market.size // SAMPLE, 1))
     some = market if every.step == 1 else market.take(every)
@@ -125,7 +124,7 @@ def _prices_of_some(market: Market, duty: Duty, slope: Array) -> Array:
     for weight, fixed, budget in duty.loads:
         share = float(weight[every] @ some.high) / max(float(weight @ market.high), 1e-300)
         loads.append((weight[every], 0.0, share * (budget - fixed)))
-    return balance(some, replace(duty, loads=loads), slope[every], np.full(len(loads), np.nan), ROUGHLY_MET)[1]
+    return balance(some, replace(duty, loads=loads), slope[every], start, ROUGHLY_MET)[1]
 
 
 def balance(
