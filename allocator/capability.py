@@ -55,7 +55,10 @@ def log_defects(z: ArrayLike, k: ArrayLike = 0.0, shift: ArrayLike = 0.0, sides:
     """
     near, far, _, two = _arguments(z, k, shift, sides)
     one_tail = log_ndtr(near)
-    return np.where(two, np.logaddexp(one_tail, log_ndtr(far)), one_tail)[()]
+    if one_tail.ndim == 0 or one_tail.shape != two.shape:
+        return np.where(two, np.logaddexp(one_tail, log_ndtr(far)), one_tail)[()]
+    one_tail[two] = np.logaddexp(one_tail[two], log_ndtr(far[two]))
+    return one_tail
 
 
 def defects(z: ArrayLike, k: ArrayLike = 0.0, shift: ArrayLike = 0.0, sides: ArrayLike = 2) -> Any:
@@ -145,6 +148,8 @@ def log_good(log_p: ArrayLike) -> Any:
     True
     """
     log_p = np.minimum(np.asarray(log_p, dtype=float), 0.0)
+    if (log_p < -np.log(2.0)).all():
+        return np.log1p(-np.exp(log_p))[()]
     with np.errstate(divide="ignore"):
         return np.where(log_p < -np.log(2.0), np.log1p(-np.exp(log_p)), np.log(-np.expm1(log_p)))[()]
 
