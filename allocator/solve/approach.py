@@ -28,7 +28,7 @@ CLOSE = 1e-11
 
 @dataclass(frozen=True)
 class _Turn:
-    """What a turn found: the tangent's slope, the prices that balance it, and by how much both miss what was asked."""
+    """What a turn found: scrap's slope, the prices beside it, and what both are above the slopes of the answers."""
 
     slope: Array
     prices: Array
