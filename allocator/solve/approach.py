@@ -20,7 +20,7 @@ Array = NDArray[np.float64]
 TURNS = 25
 FIRST_ROUNDS = 3
 """Newton steps of the first turn, whose levels start half way up their ranges."""
-REMEMBERED = 3
+REMEMBERED = 2
 """Turns before the last one that are followed."""
 CLOSE = 1e-11
 """Share of the money at stake that the turns may leave open."""
