@@ -28,6 +28,8 @@ NEARLY_MET = 1e-10
 """The same where answers change smoothly with the price: what is left is filled by their slopes."""
 ROUGHLY_MET = 1e-2
 """The same where the prices are only a start."""
+WORTH_IT = 8
+"""Steps from which prices and tangent are moved together first: on shorter lines that takes longer than it saves."""
 SAMPLE = 1_000
 """Steps of a long line whose prices tell where to start."""
 
@@ -109,7 +111,7 @@ def _start(market: Market, duty: Duty, near: Near | None) -> tuple[Array, float,
         price, start = np.array([near.prices.get(name, np.nan) for name in duty.names]), near.intensity
     here = _inside(market.low, np.clip(start, market.low, market.high), duty)
     money, slope = duty.money(here)
-    if market.smooth and not market.still and np.isfinite(money):
+    if market.size >= WORTH_IT and market.smooth and not market.still and np.isfinite(money):
         here, price = approach(market, duty, slope, here, _prices_of_some(market, duty, slope, price))
         here = _inside(market.low, here, duty)
         money, slope = duty.money(here)
