@@ -17,6 +17,7 @@ from allocator.problem import CAPITAL, COST, Problem, within
 from allocator.solve.fixed import AT_AN_END, PRICE, FixedAnswer, solve_fixed
 from allocator.solve.mixed import solve_mixed
 from allocator.solve.mixprice import ByPrice, best_of_a_yield, fewest_defects, serves, solve_by_price
+from allocator.solve.money_limits import serves_with_limits, solve_limited
 from allocator.solve.price import Near
 from allocator.solve.reduce import first_choices, ways_by_step, without_dominated, without_excessive
 
@@ -35,9 +36,15 @@ SECONDS_LEFT = 20.0
 LONGEST_MASTER = 4000
 """Steps beyond which the price road's answer stands with its printed gap: the master would take minutes."""
 TOO_LONG = (
-    "a line of {:,} steps with a limit on money, a shared purchase or a choice of gates is more than can be searched "
+    "a line of {:,} steps with a shared purchase, a choice of gates or two limits at once is more than can be searched "
     "(at most {:,} steps); ask without these, or for a part of the line"
 )
+NOT_BY_PRICE = (
+    "no plan was found for several yields under a limit on money on a line of {:,} steps; ask for one yield, "
+    "or without the limit"
+)
+MANY_LEVELS = 100
+"""Levels that move above which a limit on money is priced rather than worked out with all levels together."""
 BRANCHED = "branch and bound"
 
 
@@ -90,10 +97,16 @@ def _by_size(
     problem: Problem, starts: list[NDArray[np.int64]], enough: float | None = None, near: Near | None = None
 ) -> Solved | None:
     """Solve choice by choice, by price, or by branch and bound; None when no choice that keeps the limits is known."""
-    if len(problem.options.ways) > LARGE and (problem.capital is not None or problem.spend is not None):
-        free = _by_size(replace(problem, capital=None, spend=None), starts, near=near)
-        if free is not None and free.outcome is not None and keeps_limits(problem, free.outcome):
+    if _long_under_a_limit(problem):
+        asks_capital = problem.objective == CAPITAL
+        objective = COST if asks_capital else problem.objective
+        free = _by_size(replace(problem, objective=objective, capital=None, spend=None), starts, near=near)
+        if free is None or free.outcome is None:
+            return None
+        if not asks_capital and keeps_limits(problem, free.outcome):
             return replace(free, problem=problem)  # A limit that does not bind costs nothing.
+        if serves_with_limits(problem):
+            return _by_price_of_the_limit(problem, starts, enough)
     few = SMALL_MOVING if problem.options.ways.moves.any() else SMALL_STILL
     choices = _count_choices(problem, few)
     if choices <= few:
@@ -109,6 +122,47 @@ def _by_size(
             small = len(problem.budgets) > 1 and problem.line.n_steps <= LONGEST_MASTER
             return _settle_remainder(problem, priced, solved) if small and solved.gap > GAP_PRICED else solved
     return _branch_and_bound(problem, starts, gap, enough)
+
+
+def _long_under_a_limit(problem: Problem) -> bool:
+    """Return whether a limit on money couples so many steps that its price is the better way."""
+    if problem.capital is None and problem.spend is None and problem.objective != CAPITAL:
+        return False
+    ways = problem.options.ways
+    return len(ways) > LARGE or len(np.unique(ways.step[ways.moves])) > MANY_LEVELS
+
+
+def _by_price_of_the_limit(problem: Problem, starts: list[NDArray[np.int64]], enough: float | None) -> Solved | None:
+    """Solve by a price of the limit; where that leaves a gap, and the line is not too long, branch from there."""
+    short = problem.line.n_steps <= LONGEST_MASTER and len(problem.options.ways) > problem.line.n_steps
+    try:
+        limited = solve_limited(problem, _ask_free)
+    except SolverError:
+        if not short:
+            raise
+        limited = None
+    if limited is None:
+        return _branch_and_bound(problem, starts, GAP_LARGE, enough) if short else None
+    solved = _solved(problem, limited, limited.bound, limited.method)
+    if solved.gap <= GAP_LARGE or not short:
+        return solved
+    search = solve_mixed(problem, [limited.outcome.choice.rows, *starts], GAP_LARGE, SECONDS_LEFT, enough)
+    best = limited
+    if search.best is not None and search.value_of_best < limited.outcome.value(problem.objective):
+        best = search.best
+    return _solved(problem, best, max(search.bound, limited.bound), f"{limited.method}, then {BRANCHED}")
+
+
+def _ask_free(problem: Problem, near: Near | None) -> FixedAnswer:
+    """Answer a question without limits on money by price alone; what that leaves open stays in the bound."""
+    if len(problem.options.ways) == problem.line.n_steps:
+        answer = solve_fixed(problem, np.arange(problem.line.n_steps), near=near)
+    else:
+        priced = solve_by_price(problem, GAP_PRICED, near)
+        answer = None if priced is None else replace(priced.best, bound=priced.bound)
+    if answer is None:
+        raise SolverError(NOT_BY_PRICE.format(problem.line.n_steps))
+    return answer
 
 
 def _branch_and_bound(
