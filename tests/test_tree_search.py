@@ -22,6 +22,7 @@ from allocator.solve.fixed import solve_fixed
 from allocator.solve.reduce import ways_by_step
 from allocator.solve.relaxed import Relaxed
 from allocator.solve.road import Solved, solve
+from tests.reference.generate import random_scenario
 from tests.strategies import alternatives, laws, lines, quick
 
 ROOT = Path(__file__).parent.parent
@@ -131,3 +132,9 @@ def test_any_prices_prove_a_bound(price: float) -> None:
     rows = knapsack()
     bound = bound_by_prices(rows, np.array([price]), np.zeros(0), rows.low, rows.high)
     assert bound <= -(3.0 + 4.0 + 5.0 * 0.5 / 4.0) + 1e-9
+
+
+def test_a_plan_found_while_limits_were_taken_on_one_by_one_serves_as_a_start() -> None:
+    """No first choice keeps both budgets here, and the budgets leave fewer ways than the plan was found among."""
+    problem = pose(scenario_from_dict(random_scenario(6009)))
+    same(by_the_tree(problem), solve(problem))

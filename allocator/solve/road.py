@@ -89,7 +89,10 @@ def solve(problem: Problem, starts: list[NDArray[np.int64]] | None = None, near:
     solved = _by_size(reduced, translated, near=near) or _first_feasible(without_dominated(problem))
     if solved.outcome is not None and solved.problem.objective != problem.objective:
         # What was found keeps every limit; now it can serve as the start that the search was missing.
-        solved = _by_size(reduced, [solved.outcome.choice.rows]) or solved
+        found = _by_size(reduced, _in_reduced(solved.problem, reduced, [solved.outcome.choice.rows]))
+        if found is None:
+            raise SolverError("a plan that keeps every limit is known but could not be improved; report the scenario")
+        solved = found
     return replace(solved, seconds=time.monotonic() - began)
 
 
