@@ -1,4 +1,4 @@
-"""Limits on money on lines too long for the master: a price of capital, or the budget at which the money just does.
+"""Further limits on lines too long for the master: a price of each, or the budget at which the money just does.
 
 At a price μ ≥ 0 of capital the question is an ordinary one without that limit, and its bound less μ·limit is a bound of
 the limited one. The best yield for the money lies between a budget that provably no plan keeps within the money and
@@ -24,22 +24,30 @@ from allocator.solve.price import Near
 from allocator.ways import Lines, Ways
 
 Array = NDArray[np.float64]
+SHIPPED = "shipped_yield"
 Ask = Callable[[Problem, Near | None], FixedAnswer]
 """Answers a question that the price road serves, from a neighbouring one."""
-FIRST_PRICE = 0.1
-"""Yearly cost of one unit of capital that is tried first: that of a loan over some years."""
-STEP = 4.0
-CHEAPEST, DEAREST = 1e-12, 1e9
+FIRST_SHARE = 0.01
+"""Share of the yearly total that the whole of a limit costs at the price tried first."""
+STEP, STEPS = 4.0, 40
+CHEAPEST, DEAREST = 1e-12, 1e12
+TINY = 1e-300
 SAME, SAME_WHOLE = 1e-10, 1e-5
 """Prices or budgets are the same when their logarithms differ by less: levels alone, and with ways to choose."""
 SHORT = (1e-9, 1e-8, 1e-7, 1e-6, 1e-5)
 """Shares by which a yield's load is undercut to prove that no plan within the money goes so far."""
 SETTLED = 1e-10
 """Gap at which the search ends."""
-BY_CAPITAL_PRICE, BY_BUDGETS = (
-    "one price for all steps and one for capital",
-    "one price for all steps, budget by budget",
-)
+BY_PRICES = {
+    CAPITAL: "one price for all steps and one for capital",
+    SHIPPED: "one price for all steps and one for what escapes",
+}
+BY_BUDGETS = "one price for all steps, budget by budget"
+
+
+def serves_with_a_second_yield(problem: Problem) -> bool:
+    """Return whether two yields are asked for of which one is the shipped one: what escapes gets a price then."""
+    return serves(problem) and len(problem.budgets) == 2 and SHIPPED in problem.budgets
 
 
 def serves_with_limits(problem: Problem) -> bool:
@@ -52,18 +60,36 @@ def serves_with_limits(problem: Problem) -> bool:
 def solve_limited(problem: Problem, ask: Ask) -> FixedAnswer | None:
     """Return the best answer of a question that `serves_with_limits`; None where none was found within the limits."""
     if problem.objective == COST:
-        return _within_capital(problem, ask)
+        return _within(problem, ask, SHIPPED if problem.capital is None else CAPITAL)
     if problem.objective == CAPITAL:
         return _least_capital(problem, ask)
     return _best_yield(problem, ask)
 
 
+@dataclass(frozen=True)
+class _Priced:
+    """A limit that gets a price: the question at a price, how much of the limit an answer uses, and its end."""
+
+    name: str
+    limit: float
+    at: Callable[[float], Problem]
+    used: Callable[[Outcome], float]
+
+
+def _priced(problem: Problem, name: str) -> _Priced:
+    if name == CAPITAL:
+        assert problem.capital is not None
+        return _Priced(name, problem.capital, lambda p: _at_capital_price(problem, p), lambda o: o.capital)
+    return _Priced(name, problem.budgets[name], lambda p: _at_escape_price(problem, p), lambda o: o.loads[name])
+
+
 @dataclass
 class _Trail:
-    """What was asked so far at prices of capital: the best answer within the limit, the last beyond it, the bound."""
+    """What was asked so far at prices of a limit: the best answer within it, the last beyond it, the bound."""
 
     problem: Problem
     ask: Ask
+    priced: _Priced
     best: Outcome | None = None
     beyond: Outcome | None = None
     bound: float = -math.inf
@@ -71,40 +97,41 @@ class _Trail:
     near: Near | None = None
 
     def over(self, log_price: float) -> float:
-        """Return by which share the limit is exceeded at a price of capital; 0 once the best is proven to be it."""
-        price, limit = math.exp(log_price), self.problem.capital
-        assert limit is not None
-        free = self.ask(_at_capital_price(self.problem, price), self.near)
+        """Return by which share the limit is exceeded at a price; 0 once the best is proven to be it."""
+        price, limit = math.exp(log_price), self.priced.limit
+        free = self.ask(self.priced.at(price), self.near)
         self.near = Near(free.outcome.flow.intensity, free.price or {})
         outcome = evaluate(self.problem.line, self.problem.options, free.outcome.choice)
+        used = self.priced.used(outcome)
         self.bound = max(self.bound, free.bound - price * limit)
-        if not within(outcome.capital, limit):
+        if not within(used, limit):
             self.beyond = outcome
         elif self.best is None or outcome.money.total < self.best.money.total:
-            self.best, self.prices = outcome, {**(free.price or {}), CAPITAL: price}
+            self.best, self.prices = outcome, {**(free.price or {}), self.priced.name: price}
         if self.best is not None and self.best.money.total - self.bound <= SETTLED * abs(self.best.money.total):
             return 0.0
-        return (outcome.capital - limit) / max(
-            limit, 1.0
-        ) or -SETTLED  # At the limit itself cheaper may still be found.
+        # What just keeps the limit is not settled yet, so it counts as below.
+        return (used - limit) / max(limit, TINY) or -SETTLED
 
 
-def _within_capital(problem: Problem, ask: Ask) -> FixedAnswer | None:
-    """Search the price of capital at which the limit is just kept."""
-    trail = _Trail(problem, ask)
-    here = math.log(FIRST_PRICE)
+def _within(problem: Problem, ask: Ask, name: str) -> FixedAnswer | None:
+    """Search the price at which a limit is just kept."""
+    trail = _Trail(problem, ask, _priced(problem, name))
+    free = ask(trail.priced.at(0.0), None)
+    here = math.log(FIRST_SHARE * max(abs(free.outcome.money.total), 1.0) / max(trail.priced.limit, TINY))
+    here = min(max(here, math.log(CHEAPEST)), math.log(DEAREST))
     step = math.log(STEP) * (1.0 if trail.over(here) > 0.0 else -1.0)
-    ends = [here]
-    while math.log(CHEAPEST) < here < math.log(DEAREST):
-        here += step
-        ends.append(here)
+    for _ in range(STEPS):
+        before, here = here, here + step
         if trail.over(here) * step <= 0.0:
-            root_between(trail.over, min(ends[-2:]), max(ends[-2:]), absolute=_same(problem))
+            root_between(trail.over, min(before, here), max(before, here), absolute=_same(problem))
             break
     if trail.best is None:
         return None
-    best = trail.best if trail.beyond is None else _blended(problem, trail.best, trail.beyond)
-    return FixedAnswer(best, min(trail.bound, best.money.total), trail.prices, BY_CAPITAL_PRICE)
+    best = trail.best
+    if name == CAPITAL and trail.beyond is not None:
+        best = _blended(problem, best, trail.beyond)
+    return FixedAnswer(best, min(trail.bound, best.money.total), trail.prices, BY_PRICES[name])
 
 
 def _same(problem: Problem) -> float:
@@ -202,6 +229,13 @@ def _all_scaled(ways: Ways, share: Array, fixed_cost: Array) -> Ways:
     return replace(
         ways, curves=replace(ways.curves, scale=ways.curves.scale * share), lines=lines, fixed_cost=fixed_cost
     )
+
+
+def _at_escape_price(problem: Problem, price: float) -> Problem:
+    """Return the question without the shipped yield, an escaping defect costing more: `price` per unit of its load."""
+    line = replace(problem.line, escape_cost=problem.line.escape_cost + price / problem.line.shipped)
+    (other,) = [name for name in problem.budgets if name != SHIPPED]
+    return replace(problem.with_budget(SHIPPED, None), line=line, split=other)
 
 
 def _at_capital_price(problem: Problem, price: float) -> Problem:

@@ -17,7 +17,7 @@ from allocator.problem import CAPITAL, COST, Problem, within
 from allocator.solve.fixed import AT_AN_END, PRICE, FixedAnswer, solve_fixed
 from allocator.solve.mixed import solve_mixed
 from allocator.solve.mixprice import ByPrice, best_of_a_yield, fewest_defects, serves, solve_by_price
-from allocator.solve.money_limits import serves_with_limits, solve_limited
+from allocator.solve.money_limits import serves_with_a_second_yield, serves_with_limits, solve_limited
 from allocator.solve.price import Near
 from allocator.solve.reduce import first_choices, ways_by_step, without_dominated, without_excessive
 
@@ -120,10 +120,14 @@ def _by_size(
         return None if answer is None else _solved(problem, answer, answer.bound, AT_AN_END)
     if serves(problem):
         priced = solve_by_price(problem, GAP_PRICED, near, SECONDS_LEFT)
-        if priced is not None:
-            solved = _solved(problem, priced.best, priced.bound, PRICE)
-            small = len(problem.budgets) > 1 and problem.line.n_steps <= LONGEST_MASTER
-            return _settle_remainder(problem, priced, solved) if small and solved.gap > GAP_PRICED else solved
+        solved = None if priced is None else _solved(problem, priced.best, priced.bound, PRICE)
+        if len(problem.budgets) > 1 and (solved is None or solved.gap > GAP_PRICED):
+            if problem.line.n_steps > LONGEST_MASTER:
+                solved = _with_a_second_price(problem, solved)
+            elif priced is not None and solved is not None:
+                solved = _settle_remainder(problem, priced, solved)
+        if solved is not None:
+            return solved
     return _branch_and_bound(problem, starts, gap, enough)
 
 
@@ -154,6 +158,23 @@ def _by_price_of_the_limit(problem: Problem, starts: list[NDArray[np.int64]], en
     if search.best is not None and search.value_of_best < limited.outcome.value(problem.objective):
         best = search.best
     return _solved(problem, best, max(search.bound, limited.bound), f"{limited.method}, then {BRANCHED}")
+
+
+def _with_a_second_price(problem: Problem, solved: Solved | None) -> Solved | None:
+    """Return the better of an answer to two yields and one in which the shipped yield has a price of its own."""
+    if not serves_with_a_second_yield(problem):
+        return solved
+    second = solve_limited(problem, _ask_free)
+    if second is None:
+        return solved
+    other = _solved(problem, second, second.bound, second.method)
+    if solved is None:
+        return other
+    bound = max(solved.bound, other.bound)
+    best = min((solved, other), key=lambda one: math.inf if one.outcome is None else one.outcome.money.total)
+    assert best.outcome is not None
+    gap = (best.outcome.money.total - bound) / max(abs(best.outcome.money.total), 1.0)
+    return replace(best, bound=bound, gap=gap)
 
 
 def _ask_free(problem: Problem, near: Near | None) -> FixedAnswer:
