@@ -32,6 +32,8 @@ FIRST_SHARE = 0.01
 STEP, STEPS = 4.0, 40
 CHEAPEST, DEAREST = 1e-12, 1e12
 TINY = 1e-300
+LEAST_SHARE = 1e-15
+"""Share of a load below which no budget is looked at: where some way makes no defects at all."""
 SAME, SAME_WHOLE = 1e-10, 1e-5
 """Prices or budgets are the same when their logarithms differ by less: levels alone, and with ways to choose."""
 SHORT = (1e-9, 1e-8, 1e-7, 1e-6, 1e-5)
@@ -206,13 +208,15 @@ def _best_yield(problem: Problem, ask: Ask) -> FixedAnswer | None:
     cheapest = ask(found.free, None)
     if not within(cheapest.outcome.money.total, limit):
         return None
+    found.best = evaluate(problem.line, problem.options, cheapest.outcome.choice)
     ways, rows = problem.options.ways, fewest_defects(problem)
     least = evaluate(problem.line, problem.options, Choice(rows, ways.z_high[rows])).loads[name]
-    most = evaluate(problem.line, problem.options, cheapest.outcome.choice).loads[name]
-    if found.over(math.log(least)) > 0.0 and found.over(math.log(most)) <= 0.0:
-        root_between(found.over, math.log(least), math.log(most), absolute=_same(problem))
-    if found.best is None:
-        return None
+    most = found.best.loads[name]
+    if most <= least:
+        return FixedAnswer(found.best, most, None, BY_BUDGETS)
+    low, high = math.log(max(least, LEAST_SHARE * most)), math.log(most)
+    if found.over(low) > 0.0 and found.over(high) < 0.0:
+        root_between(found.over, low, high, absolute=_same(problem))
     for share in SHORT:
         if found.proven >= found.best.loads[name] * (1.0 - share) or least >= found.best.loads[name]:
             break
