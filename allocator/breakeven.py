@@ -11,7 +11,7 @@ import numpy as np
 from allocator.asker import Track, ask, law_slope_at_start, takes, total_at, total_of, value_of_defects
 from allocator.capability import log_defects, sigma_from_log_defects
 from allocator.changed import at_law_price, at_level, at_price, at_volume, level_of
-from allocator.problem import Problem, within
+from allocator.problem import CAPITAL, Problem, within
 from allocator.roots import root_between
 from allocator.scenario.level import Level
 from allocator.solve.fixed import solve_fixed
@@ -166,20 +166,37 @@ def break_even_law(problem: Problem, plan: Solved, banned: Solved, thing: Thing)
     pull, without = _pull(banned, problem, thing), total_of(banned)
     factor = CHEAPEST if pull is None else 1.0 + pull
     if takes(plan, thing) and without - total_of(plan) > SAME * abs(without):
-        factor = max(factor, _last_that_pays(
-            lambda f: _kept_total(at_law_price(problem, thing.step, f), plan), 1.0, _far(problem, plan, thing, without),
-            without * (1.0 - math.copysign(SAME, without)),
-        ))  # fmt: skip
+        factor = max(factor, _last_factor(problem, plan, thing, without * (1.0 - math.copysign(SAME, without))))
     if factor > 0.0 and BRANCHED not in plan.method:
         factor = _confirmed(problem, plan, banned, thing, factor)
     return factor if factor > CHEAPEST else None
 
 
-def _far(problem: Problem, plan: Solved, thing: Thing, without: float) -> float:
-    """Return a factor at which even the plan's own choice no longer gains from its law."""
-    factor = 2.0
-    while factor < DEAREST and _kept_total(at_law_price(problem, thing.step, factor), plan) < without:
-        factor *= 4.0
+def _last_factor(problem: Problem, plan: Solved, thing: Thing, without: float) -> float:
+    """Return the highest factor of a law's scale at which a plan's own choice still pays for using it.
+
+    The least total of a choice is concave in the factor, so its tangent meets the total without the law too early,
+    never late: Newton's method comes nearer from below. A limit on capital can bend it; what then goes too far is
+    narrowed between both sides.
+    """
+    assert plan.outcome is not None
+    factor, known, price = 1.0, plan.outcome, plan.price
+    rows = problem.options.ways.find(plan.problem.options.ways, known.choice.rows)
+    row = rows[thing.step]
+    ways = problem.options.ways
+    for _ in range(TURNS):
+        own_cost = float(known.improvement[thing.step] - ways.fixed_cost[row])
+        bound_up = (price or {}).get(CAPITAL, 0.0) * float(ways.capital_per_cost[row])
+        rise = own_cost * (1.0 + bound_up) / factor
+        ahead = factor + (without - known.money.total) / rise if rise > 0.0 else DEAREST
+        if ahead - factor <= ROOT * factor or ahead >= DEAREST:
+            return min(ahead, DEAREST)
+        answer = solve_fixed(at_law_price(problem, thing.step, ahead), rows, near=plan.near)
+        if answer is None or answer.outcome.money.total > without:
+            return _last_that_pays(
+                lambda f: _kept_total(at_law_price(problem, thing.step, f), plan), factor, ahead, without
+            )
+        factor, known, price = ahead, answer.outcome, answer.price
     return factor
 
 

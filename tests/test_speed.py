@@ -129,3 +129,10 @@ def test_two_hundred_steps_of_six_ways(share: float) -> None:
         if took <= MIXED_SECONDS:
             break
     assert took <= MIXED_SECONDS
+
+
+@pytest.mark.long
+def test_weighing_the_largest_scenario_takes_half_a_minute_on_two_cores() -> None:
+    """49 things on 30 steps with a binding limit on capital; in processor time, 45 s measured."""
+    enough = 2 * 30.0
+    assert best_seconds("weigh", "scenarios/pump.toml", "--json", enough=enough) <= enough
