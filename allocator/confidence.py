@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from allocator.choice import Outcome
 from allocator.cost_range import improvement_drawn, totals_drawn
-from allocator.doubt import EXACT, Doubts, budget_used, draw_nature, find_doubts, sample_of, seen_in
+from allocator.doubt import EXACT, Doubts, budget_used, draw_nature, find_doubts, seen_in
 from allocator.errors import RangeError
 from allocator.intervals import share_interval
 from allocator.problem import Problem
@@ -98,8 +98,8 @@ def confident_plan(problem: Problem, confidence: float) -> tuple[Solved, Confide
         cost_high=high,
         improvement_low=improvement[0],
         improvement_high=improvement[1],
-        in_doubt=tuple(_names(problem, doubts, best.outcome)),
-        exact=tuple(step.name for step in problem.scenario.step if sample_of(step.capability) is None),
+        in_doubt=tuple(_names(problem, doubts.of_way[best.outcome.choice.rows] != EXACT)),
+        exact=tuple(_names(problem, doubts.of_way[best.outcome.choice.rows] == EXACT)),
         ranges=ranges,
         asked=len(search.asked),
         studies=studies,
@@ -120,8 +120,8 @@ def _in_full(problem: Problem, solved: Solved) -> Outcome:
     return replace(solved.outcome, choice=replace(solved.outcome.choice, rows=rows))
 
 
-def _names(problem: Problem, doubts: Doubts, outcome: Outcome) -> Iterator[str]:
-    for i in np.flatnonzero(doubts.of_way[outcome.choice.rows] != EXACT).tolist():
+def _names(problem: Problem, those: NDArray[np.bool_]) -> Iterator[str]:
+    for i in np.flatnonzero(those).tolist():
         yield problem.scenario.step[i].name
 
 

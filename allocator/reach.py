@@ -186,8 +186,8 @@ def _beyond_the_cap(
     return [
         (
             i,
-            f"'{steps[owner[i]].name}': {caps.words(i)} does not lie above the level at hand ({start[i]:.4g}): "
-            "no improvement there",
+            f"'{steps[owner[i]].name}': {caps.words(i)} does not lie above sigma level {start[i]:.4g}, where the step "
+            "then stands already: the law adds nothing",
         )
         for i in rows.tolist()
     ]

@@ -166,7 +166,10 @@ def _cap(step: Step, state: State, law: LawInUse, notes: list[str]) -> tuple[flo
             "one tenth of its starting defects (no up_to is given)",
         )
     if high <= start:
-        notes.append(f"'{step.name}': {words} does not lie above the level at hand ({start:.4g}): no improvement there")
+        notes.append(
+            f"'{step.name}': {words} does not lie above sigma level {start:.4g}, "
+            "where the step then stands already: the law adds nothing"
+        )
         return start, words
     return high, words
 

@@ -135,6 +135,7 @@ def test_nines_and_ppm_set_the_yield_that_is_split(
         (["--shipped-yield", "good"], "--shipped-yield: found good"),
         (["--nines", "0"], "--nines: found 0"),
         (["--nines", "nan"], "--nines: found nan"),
+        (["--nines", "99.2"], "--nines: found 99.2; give a number above 0 and at most 15"),
         (["--ppm", "1000000"], "--ppm: found 1e+06"),
         (["--ppm", "3", "--nines", "2"], "both set the same yield"),
         (["--final-yield", "0.9", "--nines", "2"], "both set the same yield"),

@@ -252,6 +252,14 @@ def test_an_alternative_without_a_sample_is_exact() -> None:
     assert seen_in(draw_nature(doubts, 10, 1), doubts, problem, chosen).delta.shape == (10, 0)
 
 
+def test_a_plan_that_takes_an_alternative_without_a_sample_takes_it_as_exact() -> None:
+    """The present machine's sample says nothing of the one that replaces it."""
+    other = {"name": "new", "capability": {"cp": 1.6}, "price": 1.0}
+    steps = step("cut", {"cp": 0.9, "sample": 30}, alternative=[other]), step("turn", {"cp": 1.5, "sample": 100})
+    sure = sure_of(plan(line(*steps, demand=DEMAND, target={"final_yield": 0.99}), confidence=0.9))
+    assert (sure.exact, sure.in_doubt) == (("cut",), ("turn",))
+
+
 def test_what_to_measure_names_the_smallest_sample_first(planned: Plan) -> None:
     """The law of errors says so here: `turn` rests on 30 parts, and much of the budget is spent on that."""
     studies = sure_of(planned).studies

@@ -238,6 +238,12 @@ CAUSES: list[tuple[str, Drawn, Drawn]] = [
     ("alternative_changes_nothing", offering(price=0.0), offering(price=0.0, capability={"dpmo": 90})),
     ("alternative_changes_nothing", offering(capability={"defect_rate": 0.001}), offering(per_item=-0.01)),
     ("alternative_changes_nothing", offering(k=0.0), offering(inspection={"finds": 0.9})),
+    ("alternative_worse_than_today", offering(capability={"dpmo": 1200}),
+        offering(capability={"dpmo": 1200}, per_item=-0.01)),
+    ("alternative_worse_than_today", offering(capability={"dpmo": 1200}, price=0.0),
+        offering(capability={"dpmo": 900})),
+    ("mostly_bad", step_with(capability={"mean": 10.0, "std": 34.0, "lsl": 9.9, "usl": 10.1}),
+        step_with(capability={"mean": 10.0, "std": 0.034, "lsl": 9.9, "usl": 10.1})),
     ("floor_out_of_reach", offering(capability={"dpmo": 90}) | {"step": [
         *step_with()["step"][:1], offering(capability={"dpmo": 90})["step"][1] | {"at_least": {"dpmo": 80}}]},
         step_with(at_least={"dpmo": 200}, improve=LAW)),

@@ -148,7 +148,7 @@ def test_a_cap_below_the_level_at_hand_means_no_improvement_and_is_said() -> Non
     options = options_of(with_alternatives({"sigma_level": 3.0}, offered, improve=law))
     w = way(options.ways, "press")
     assert options.ways.z_low[w] == options.ways.z_high[w] == 5.0
-    assert any("up_to" in note and "no improvement" in note for note in options.notes)
+    assert any("up_to" in note and "the law adds nothing" in note for note in options.notes)
 
 
 # ---------------------------------------------------------------- alternatives

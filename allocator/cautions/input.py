@@ -30,6 +30,8 @@ from allocator.states import sigmas_meant
 Flags = NDArray[np.bool_]
 SMALL_SAMPLE = 50
 FEW_BAD = 5
+MOSTLY = 0.5
+"""Share of bad items above which a capability is more likely a slip of units than a process."""
 LARGE_SHARE = 0.25
 """False rejects that use this share of the budget are worth saying."""
 Z_95 = 1.6448536269514722
@@ -353,8 +355,18 @@ def _loose_ends(problem: Problem) -> Iterator[Caution]:
         )  # fmt: skip
 
 
+def _mostly_bad(problem: Problem) -> Iterator[Caution]:
+    today = problem.options.today
+    worst = np.flatnonzero(today.intensity() > -math.log(1.0 - MOSTLY))
+    names = [problem.scenario.step[i].name for i in worst.tolist()]
+    yield from _about(
+        "mostly_bad", names, "more than half of the items are bad as the capability is stated",
+        "check that the spread, the limits and the mean are in the same unit, and that a rate is a share and not in per cent",
+    )  # fmt: skip
+
+
 LOOKS: tuple[Callable[[Problem], Iterator[Caution]], ...] = (
-    cautions_of_floors, _safety, _inspection, _long_term, _shifts, _small_sample, _beyond_the_data, _counts, _near_tail, _one_opportunity,
+    cautions_of_floors, _safety, _inspection, _long_term, _shifts, _small_sample, _beyond_the_data, _counts, _mostly_bad, _near_tail, _one_opportunity,
     _three_sigma, _copies, _laws, _judged, _widening, _rework, _false_rejects,
     _clustering, _loose_ends, cautions_of_quotes, cautions_of_alternatives, cautions_of_purchases,
 )  # fmt: skip

@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Collection, Iterator
 from dataclasses import fields
 
 import numpy as np
 from numpy.typing import NDArray
 
+from allocator.flow import GATE_FIELDS
 from allocator.problem import Problem
 from allocator.results import Caution
 from allocator.scenario.model import Alternative, Quote
@@ -108,7 +109,17 @@ def cautions_of_alternatives(problem: Problem) -> Iterator[Caution]:
             "alternative_changes_nothing", tuple(steps), f"{_first_of(names)} leaves the step exactly as it stands today, so choosing it changes nothing",
             "state what it changes (capability, k, shift, widen, opportunities, copies, inspection or rework), or leave it out",
         )  # fmt: skip
-    free = _free(problem, set(idle))
+    worse = _worse_for_nothing(problem, idle)
+    if worse:
+        picks = ways.text.picks
+        names = [f"'{picks.alternatives[a].name}'" for a in worse]
+        steps = dict.fromkeys(problem.scenario.step[int(picks.owner[a])].name for a in worse)
+        yield Caution(
+            "alternative_worse_than_today", tuple(steps),
+            f"{_first_of(names)} makes no fewer defects than the step does today and saves nothing, so by itself it is never worth taking",
+            "check that its level and the capability are stated in the same terms, or state what it saves (a negative per_item)",
+        )  # fmt: skip
+    free = _free(problem, {*idle, *worse})
     if free:
         yield Caution(
             "free_alternative", tuple(free), "an alternative is entered as costing nothing: it will be taken wherever it helps",
@@ -135,6 +146,29 @@ def _changing_nothing(problem: Problem) -> dict[int, int]:
     alone = np.flatnonzero(((picks.members >= 0).sum(axis=1) == 1)[ways.text.pick])
     same = alone[_as_today(ways.states.take(alone), problem.options.today.take(ways.step[alone]))]
     return dict(zip(picks.members[ways.text.pick[same]].max(axis=1, initial=-1).tolist(), same.tolist(), strict=True))
+
+
+def _worse_for_nothing(problem: Problem, idle: Collection[int]) -> list[int]:
+    """Return the alternatives that cost something, make no fewer defects than today, and leave gate and rework alone."""
+    ways = problem.options.ways
+    picks = ways.text.picks
+    alone = np.flatnonzero(((picks.members >= 0).sum(axis=1) == 1)[ways.text.pick] & (ways.fixed_cost >= 0.0))
+    mine, now = ways.states.take(alone), problem.options.today.take(ways.step[alone])
+    more = (mine.intensity() >= now.intensity() * (1.0 - SAME)) & ~_reaches_further(problem, alone)
+    gates = (mine.gates(), now.gates())
+    for name in GATE_FIELDS:
+        more &= getattr(gates[0], name) == getattr(gates[1], name)
+    found = picks.members[ways.text.pick[alone[more]]].max(axis=1, initial=-1).tolist()
+    return [a for a in dict.fromkeys(found) if a not in idle]
+
+
+def _reaches_further(problem: Problem, rows: Indices) -> Flags:
+    """Return where a law takes a way beyond all that the step reaches without it."""
+    ways = problem.options.ways
+    unchanged = np.full(problem.line.n_steps, np.inf)
+    still = np.flatnonzero(ways.text.unchanged)
+    np.minimum.at(unchanged, ways.step[still], ways.delta_low[still])
+    return np.asarray(ways.delta_low[rows] < unchanged[ways.step[rows]] * (1.0 - SAME))
 
 
 def _as_today(states: States, today: States) -> Flags:

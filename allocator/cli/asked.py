@@ -27,6 +27,8 @@ class Which(StrEnum):
         return f"{self.value}_yield"
 
 
+MOST_NINES = 15
+"""A loss below that is none that anyone could count: more is a yield in per cent, mistaken for nines."""
 Of = Annotated[Which | None, typer.Option("--of", help="The yield whose budget is split and whose nines are priced.")]
 
 Hold = Annotated[
@@ -60,8 +62,11 @@ def losses_asked(yields: dict[Which, str], nines: float | None, ppm: float | Non
             faults.append(Fault(COMMAND_LINE, f"--{which}-yield", text, allowed))
         else:
             losses[which] = loss
-    if nines is not None and not 0.0 < nines <= 300.0:
-        faults.append(Fault(COMMAND_LINE, "--nines", f"{nines:g}", "give a number above 0, as 3 for a yield of 0.999"))
+    if nines is not None and not 0.0 < nines <= MOST_NINES:
+        wanted = (
+            f"give a number above 0 and at most {MOST_NINES}, as 3 for a yield of 0.999; --final-yield takes a yield"
+        )
+        faults.append(Fault(COMMAND_LINE, "--nines", f"{nines:g}", wanted))
     if ppm is not None and not 0.0 < ppm < 1e6:
         faults.append(Fault(COMMAND_LINE, "--ppm", f"{ppm:g}", "give defective units per million, above 0, below 1e6"))
     if nines is not None and ppm is not None:

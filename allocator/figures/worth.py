@@ -63,7 +63,7 @@ def worth(weighed: Weighed, ax: Axes | None = None) -> Axes:
 
 
 def _telling(weighed: Weighed) -> list[Weighing]:
-    known = [thing for thing in weighed.rows if thing.worth_per_year]
+    known = [thing for thing in weighed.rows if thing.worth_per_year is not None]
     telling = sorted(known, key=lambda thing: -abs(thing.worth_per_year or 0.0))[:MOST_THINGS]
     return sorted(telling, key=lambda thing: -(thing.worth_per_year or 0.0))
 

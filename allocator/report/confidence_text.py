@@ -56,7 +56,8 @@ def _write_exact(paper: Paper, sure: Confidence) -> None:
     if sure.exact:
         named = words.listed([words.quoted(step) for step in sure.exact], more="more steps")
         paper.say(
-            f"Without a sample, and so taken as exact: {named}. What is not known there, the plan does not allow for."
+            f"Without a sample as the plan runs them, and so taken as exact: {named}. What is not known there, "
+            "the plan does not allow for."
         )
 
 

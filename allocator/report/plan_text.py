@@ -53,7 +53,7 @@ def _restraint(plan: Plan, kept: Restraint) -> str:
     if kept.total_unrestrained is None:
         return f"{told} Without that the target cannot be met either."
     free = words.per_year(kept.total_unrestrained, plan.currency)
-    if plan.question == "best yield":
+    if plan.question == "best yield" or not plan.targets:
         best = words.yield_in_full(1.0 - (kept.loss_unrestrained or 0.0), kept.loss_unrestrained)
         return f"{told} Free of it the best is {best}, at {free}."
     if plan.cost_of_restraint is None:
@@ -95,7 +95,8 @@ def too_little_money(plan: Plan, needed: LeastNeeded) -> str:
     least, limit = words.money(needed.without_targets), words.money(needed.limit)
     if needed.of == "total":
         return f"No plan costs as little as {limit} {currency}/year: the least is {least} {currency}/year."
-    said = f"No plan keeps the floors with {limit} {currency} of capital: the least is {least} {currency}"
+    kept = "the floors" if plan.restraint is None else "the floors and what it is told to keep"
+    said = f"No plan keeps {kept} with {limit} {currency} of capital: the least is {least} {currency}"
     if needed.with_targets is not None:
         return f"{said}, and {words.money(needed.with_targets)} {currency} to meet the target as well."
     return f"{said}." if not plan.targets else f"{said}; the target is out of reach with any capital."
@@ -161,7 +162,7 @@ def _write_what_holds(paper: Paper, plan: Plan) -> None:
     if plan.least_needed is not None:
         paper.say(capital_that_would_do(plan, plan.least_needed))
     if plan.binding:
-        paper.heading("What holds it out of reach")
+        paper.heading("What holds it out of reach (the fewest steps whose defects alone do so)")
         blocks.write_binding(paper, plan.binding)
 
 
@@ -254,7 +255,11 @@ def _write_rules(paper: Paper, plan: Plan) -> None:
     name = words.yield_name(plan.split)
     heads = columns(["rule"], ["total", name, f"ppm lost of\n{name}", "target", "the plan\nsaves"])
     paper.table(heads, [_rule_row(rule, plan.target_losses.get(plan.split)) for rule in plan.rules], len(plan.rules))
-    broken = [f"{rule.rule} breaks: {words.listed(rule.broken, joint='; ')}" for rule in plan.rules if rule.broken]
+    broken = [
+        f"{rule.rule} is not kept everywhere: {words.listed(rule.broken, joint='; ')}"
+        for rule in plan.rules
+        if rule.broken
+    ]
     if broken:
         paper.bullets(broken)
 

@@ -128,9 +128,11 @@ def _lever(lever: Lever, scale: Scale, money: str) -> LeverBar:
 
 def _asset(asset: Asset) -> list[str]:
     where = "shared" if asset.step is None else words.clean(asset.step)
+    life = words.count(asset.life_years) if asset.price > 0.0 else "-"
+    running = asset.per_year + asset.per_item + asset.price_allowance
     return [
-        words.clean(asset.name), where, words.money(asset.price), words.money(asset.trade_in),
-        words.count(asset.life_years), words.money(asset.equivalent_annual_cost), words.money(asset.per_year),
+        words.clean(asset.name), where, words.money(asset.price), words.money(asset.trade_in), life,
+        words.money(asset.equivalent_annual_cost), words.money(running),
     ]  # fmt: skip
 
 

@@ -51,7 +51,7 @@ def sure_said(sure: Confidence | None, plan: Plan) -> SureSaid | None:
         studies=[_study(study, sure) for study in sure.studies[:MOST_STUDIES]],
         notes=[
             f"Tried on {sure.draws:,} fresh draws of what the true figures may be. {words.clean(sure.law)}.",
-            *([f"Without a sample, and so taken as exact: {exact}."] if exact else []),
+            *([f"Without a sample as that plan runs them, and so taken as exact: {exact}."] if exact else []),
         ],
     )
 
