@@ -9,6 +9,7 @@ from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from io import StringIO
 from itertools import islice
+from json.encoder import encode_basestring_ascii
 from operator import attrgetter
 from types import NoneType
 from typing import Any
@@ -67,6 +68,12 @@ def _records(records: Told | Sequence[dict[str, Any]], indent: str) -> str:
 
 def _column(values: tuple[Any, ...]) -> list[str]:
     kinds = set(map(type, values))
+    if kinds == {NoneType}:
+        return ["null"] * len(values)
+    if kinds == {str}:
+        return list(map(encode_basestring_ascii, values))
+    if kinds == {float} and math.isfinite(sum(map(abs, values))):
+        return list(map(repr, values))
     if kinds <= {float, NoneType}:
         return ["null" if v is None or not math.isfinite(v) else repr(v) for v in values]
     return ["true" if v else "false" for v in values] if kinds == {bool} else [_one_line(v) for v in values]
