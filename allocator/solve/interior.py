@@ -11,7 +11,6 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.linalg import cho_factor, cho_solve
 
 from allocator.solve.program import Program
 
@@ -294,6 +293,11 @@ def _newton(
 
 def _solve_positive(matrix: Array, right: Array) -> Array:
     """Solve with a positive definite matrix, scaled to unit diagonal because intensities differ by many decades."""
+    from scipy.linalg import (  # here, because its import takes time that the price road needs not pay
+        cho_factor,
+        cho_solve,
+    )
+
     scale = 1.0 / np.sqrt(np.diag(matrix))
     scaled = matrix * scale[:, None] * scale[None, :]
     scaled[np.diag_indices(len(scale))] += 1e-15

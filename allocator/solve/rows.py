@@ -8,16 +8,19 @@ from __future__ import annotations
 
 from collections.abc import Iterable
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.sparse import csr_array
 
 from allocator import curves as cv
 from allocator.flow import GATE_FIELDS
 from allocator.problem import CAPITAL, COST, Problem
 from allocator.solve.backend import Rows
 from allocator.solve.hidden import HiddenEnds, hidden_ends
+
+if TYPE_CHECKING:
+    from scipy.sparse import csr_array
 
 Array = NDArray[np.float64]
 Terms = dict[int, float]
@@ -44,6 +47,8 @@ class Sheet:
 
     def matrix(self, width: int, since: int = 0) -> csr_array:
         """Return the coefficients of the rows from one on, shape (n_rows − since, width)."""
+        from scipy.sparse import csr_array  # here, because its import takes time that few questions need
+
         begin = self.starts[since]
         starts = np.array(self.starts[since:], dtype=np.int32) - begin
         variables = np.array(self.variables[begin:], dtype=np.int32)
